@@ -1,0 +1,32 @@
+"""Damping of a control loop from a recorded step test, with its interval."""
+
+from __future__ import annotations
+
+from importlib import import_module
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from loopfit.analysis.analyze import analyze
+    from loopfit.analysis.result import Analysis
+    from loopfit.core.errors import LoopfitError, RecordError, UsageError
+    from loopfit.core.finding import Finding
+    from loopfit.core.quantity import Quantity
+
+__version__ = "0.1.0"
+__all__ = ["Analysis", "Finding", "LoopfitError", "Quantity", "RecordError", "UsageError", "analyze"]
+
+_HOMES = {
+    "Analysis": "loopfit.analysis.result",
+    "Finding": "loopfit.core.finding",
+    "LoopfitError": "loopfit.core.errors",
+    "Quantity": "loopfit.core.quantity",
+    "RecordError": "loopfit.core.errors",
+    "UsageError": "loopfit.core.errors",
+    "analyze": "loopfit.analysis.analyze",
+}
+
+
+def __getattr__(name: str) -> Any:
+    if name not in _HOMES:
+        raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
+    return getattr(import_module(_HOMES[name]), name)

@@ -1,0 +1,1 @@
+"""The whole chain from a record to a result."""

@@ -1,0 +1,1 @@
+"""Words that every part uses: quantities, findings, errors, plain data."""

@@ -1,0 +1,31 @@
+"""Digits that a person should see."""
+
+from __future__ import annotations
+
+import math
+
+from loopfit.core.quantity import Quantity
+
+
+def decimals_for(spread: float, value: float, digits: int = 2) -> int:
+    """Return the number of decimals that shows `digits` figures of the spread (or three of the value)."""
+    if spread > 0 and math.isfinite(spread):
+        return digits - 1 - math.floor(math.log10(spread))
+    if value != 0 and math.isfinite(value):
+        return 3 - math.floor(math.log10(abs(value)))
+    return 2
+
+
+def number(value: float, decimals: int) -> str:
+    """Return the number with that many decimals; negative decimals round to tens, hundreds."""
+    if not math.isfinite(value):
+        return "no bound"
+    rounded = round(value, decimals)
+    return f"{rounded + 0.0:.{max(decimals, 0)}f}"
+
+
+def decimals_of(quantity: Quantity) -> int:
+    """Return the decimals at which the quantity's interval shows two figures."""
+    ends = [bound for bound in (quantity.low, quantity.high) if math.isfinite(bound)]
+    spread = max((abs(quantity.value - bound) for bound in ends), default=0.0)
+    return min(decimals_for(spread, quantity.value), 9)

@@ -1,0 +1,1 @@
+"""Figures of a response: overshoot, rise, settling and the rest."""

@@ -1,0 +1,1 @@
+"""The estimator and its intervals."""

@@ -1,0 +1,1 @@
+"""The second-order model with dead time, and its response."""

@@ -1,0 +1,1 @@
+"""From a file to a record: time, measurement, setpoint and output."""

@@ -1,0 +1,1 @@
+"""Results as a page of text and as a picture."""

@@ -1,0 +1,1 @@
+"""Finding the step, its size and its instant, and the noise around it."""
