@@ -1,0 +1,5 @@
+"""`python -m loopfit`."""
+
+from loopfit.cli.main import main
+
+main()

@@ -1,0 +1,147 @@
+"""What else happened in the record: its ends, its rows, other inputs, a standing offset."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+
+from loopfit.analysis.result import ObservedFigures, StepUsed
+from loopfit.core.finding import Finding
+from loopfit.core.quantity import Quantity
+from loopfit.fit.choose import change_of, moves_before_step
+from loopfit.fit.estimate import Fit, Trace
+from loopfit.record.record import Record
+from loopfit.step.detect import find_steps
+from loopfit.step.noise import resolution
+
+_ENOUGH = 0.8  # of the change must be in the record
+_OFFSET = 0.02  # of the step
+_OFFSET_LARGE = 0.05
+_INPUT_CHANGES = 12  # a column with more is no other input that was stepped
+
+
+def around_the_step(trace: Trace, fit: Fit, figures: dict[str, Quantity | None], noise: float) -> list[Finding]:
+    """Return what the rows before the step and the end of the record do to the numbers."""
+    findings = []
+    end = float(trace.time[-1])
+    if trace.input is not None and moves_before_step(trace, noise):
+        allowed = fit.structure.moving_start or fit.structure.drift
+        findings.append(
+            Finding(
+                code="moving_before_step",
+                severity="warning",
+                at_s=(float(trace.time[0]), trace.begins),
+                text="The measurement was moving before the step; "
+                + (
+                    "the model takes that for the tail of an earlier movement, and every figure rests on that."
+                    if allowed
+                    else "the model does not allow for it, and every figure carries some of that movement."
+                ),
+            )
+        )
+    settling = figures.get("settling_time_s")
+    if trace.input is None or settling is None or settling.value <= end - trace.begins:
+        return findings
+    if not math.isfinite(settling.value):
+        return findings
+    longer = f"record at least {settling.value - (end - trace.begins):.3g} s longer"
+    reached = _reached(fit, trace)
+    if reached is not None and reached < _ENOUGH:
+        text = (
+            f"Not settled: the record ends when {100 * reached:.0f} % of the change is done, so that gain, damping and "
+            f"settling time rest on the model alone; {longer}."
+        )
+        findings.append(Finding(code="record_too_short", severity="warning", at_s=(end, end), text=text))
+    else:
+        text = f"The measurement has not settled when the record ends; {longer} to see it settle."
+        findings.append(Finding(code="not_settled", severity="warning", at_s=(end, end), text=text))
+    return findings
+
+
+def _reached(fit: Fit, trace: Trace) -> float | None:
+    """Return the share of the change that is done at the end of the record, by the model."""
+    if fit.structure.rungs != (1,) or trace.input is None:
+        return None
+    columns, _ = fit.columns.evaluate(fit.theta[None], derivatives=False)
+    total = float(np.sum(trace.input.sizes))
+    last = columns[0, 0, -1] / fit.columns.samples.root_count[-1]
+    return float(last / total) if total else None
+
+
+def about_rows(trace: Trace, fit: Fit, noise: float) -> list[Finding]:
+    """Return what resolution and sampling do to the numbers."""
+    findings = []
+    change = abs(change_of(fit, trace))
+    grid = resolution(trace.values)
+    if grid > 3.0 * noise and grid > 0.01 * change:
+        findings.append(
+            Finding(
+                code="coarse_resolution",
+                severity="note",
+                text=f"The measurement comes in steps of {grid:g}, {100 * grid / change:.0f} % of the change: "
+                "the noise is taken as at least what that leaves unseen.",
+            )
+        )
+    T, r = (float(value[0]) for value in fit.columns.chart.lags(fit.theta[None]))
+    quickest = T * (math.sqrt(r) if r > 0.05 else 1.0)
+    interval = float(np.median(np.diff(trace.time)))
+    if interval > 0.5 * quickest:
+        findings.append(
+            Finding(
+                code="slow_sampling",
+                severity="warning",
+                text=f"A row every {interval:g} s is slow for a movement that takes about {quickest:.3g} s: "
+                f"log at least every {quickest / 5:.2g} s.",
+            )
+        )
+    return findings
+
+
+def other_inputs(record: Record, trace: Trace, step: StepUsed) -> list[Finding]:
+    """Name columns that step by themselves while the response runs."""
+    findings = []
+    begin, end = trace.begins, float(trace.time[-1])
+    columns = [*record.others]
+    if step.signal == "output" and record.setpoint is not None:
+        columns.append(record.setpoint)
+    for signal in columns:
+        found = find_steps(record.time, signal.values, "output")
+        if found.always_moving or found.rows.size > _INPUT_CHANGES:
+            continue
+        later = [s.time_s for s in found.steps if begin + 1e-9 < s.time_s <= end]
+        together = any(abs(s.time_s - begin) < 1e-9 for s in found.steps)
+        if later and not together:
+            findings.append(
+                Finding(
+                    code="other_input_moved",
+                    severity="warning",
+                    at_s=(later[0], later[0]),
+                    text=f"Another input moved in the window: {signal.name!r}, at {later[0]:g} s, while the response "
+                    f"ran; what it did is counted as the step's. Cut the record before it with --to {later[0]:g}.",
+                )
+            )
+    return findings
+
+
+def standing_offset(observed: ObservedFigures, model_gain: Quantity | None, step: StepUsed) -> list[Finding]:
+    """Say where the measurement comes to rest away from the setpoint."""
+    if step.signal != "setpoint":
+        return []
+    deviation = observed.steady_state_deviation
+    if deviation is None and model_gain is not None:
+        deviation = model_gain.scaled(-1.0).shifted(1.0).scaled(step.size)
+    if deviation is None or deviation.low <= 0.0 <= deviation.high:
+        return []
+    share = abs(deviation.value / step.size)
+    if share < _OFFSET:
+        return []
+    side = "below" if deviation.value > 0 else "above"
+    return [
+        Finding(
+            code="standing_offset",
+            severity="warning" if share > _OFFSET_LARGE else "note",
+            text=f"A standing error or drift remains: the measurement comes to rest {abs(deviation.value):.3g} {side} "
+            f"the setpoint ({100 * share:.0f} % of the step); overshoot is counted from where it comes to rest.",
+        )
+    ]

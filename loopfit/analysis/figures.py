@@ -1,0 +1,103 @@
+"""The fitted model and its response in the words of the result."""
+
+from __future__ import annotations
+
+import math
+
+from loopfit.analysis.judge import Figures, Verdict
+from loopfit.analysis.result import Kind, Model, ResponseFigures
+from loopfit.core.quantity import Quantity
+from loopfit.fit.estimate import Fit
+from loopfit.fit.figures_of import rest_crossings
+from loopfit.fit.surface import Surface
+
+_MOST_DAMPED = 11.0  # a damping ratio beyond this is a first-order lag (r = 0.002)
+_NEAR_CRITICAL = (0.95, 1.05)
+
+
+def model_of(fit: Fit, figures: Figures, verdict: Verdict) -> Model:
+    """Return the model with its intervals, regime and adequacy."""
+    kind = _kind(fit, figures)
+    damping = None if kind in ("integrating", "dead_time") else figures["damping_ratio"]
+    damping = None if damping is None else _capped(damping)
+    target = fit.columns.target
+    mean = float(target @ fit.columns.samples.root_count) / float(fit.columns.samples.rows)
+    about_mean = target - mean * fit.columns.samples.root_count
+    power = float(about_mean @ about_mean)
+    return Model(
+        kind=kind,
+        gain=figures["gain"],
+        damping_ratio=damping,
+        natural_frequency_rad_s=_frequency(figures["natural_frequency_rad_s"], damping),
+        damped_frequency_rad_s=figures["damped_frequency_rad_s"],
+        damped_period_s=figures["damped_period_s"],
+        dead_time_s=figures["dead_time_s"],
+        time_constants_s=_lags(kind, figures["slow_time_constant_s"], figures["fast_time_constant_s"]),
+        lag_plus_dead_time_s=figures["lag_plus_dead_time_s"],
+        zero_s=figures["zero_s"],
+        regime=None if damping is None else regime(damping),
+        residual_rms=math.sqrt(fit.sse / fit.columns.samples.rows),
+        r_squared=max(0.0, 1.0 - fit.sse / power) if power > 0 else 0.0,
+        adequate=verdict.adequate,
+        reasons=verdict.reasons,
+    )
+
+
+def _kind(fit: Fit, figures: Figures) -> Kind:
+    if fit.structure.rungs == (2,):
+        return "integrating"
+    if fit.structure.rungs == (1, 0):
+        return "second_order_zero"
+    damping = figures["damping_ratio"]
+    if damping is not None and damping.value > _MOST_DAMPED and damping.high == math.inf:
+        return "first_order"
+    return "second_order"
+
+
+def _frequency(frequency: Quantity | None, damping: Quantity | None) -> Quantity | None:
+    """Return omega_n at the capped damping ratio: T = 2 zeta / omega_n is what the record determines."""
+    if frequency is None or damping is None:
+        return None
+    if damping.value == _MOST_DAMPED and damping.high == math.inf:
+        return Quantity.spanning(
+            min(frequency.value, frequency.low * _MOST_DAMPED / damping.low), frequency.low, math.inf
+        )
+    return frequency
+
+
+def _lags(kind: Kind, slow: Quantity | None, fast: Quantity | None) -> tuple[Quantity, ...] | None:
+    if slow is None or fast is None:
+        return None
+    return (slow,) if kind in ("first_order", "integrating") else (slow, fast)
+
+
+def _capped(damping: Quantity) -> Quantity:
+    value = min(damping.value, _MOST_DAMPED)
+    return Quantity.spanning(value, min(damping.low, value), damping.high)
+
+
+def regime(damping: Quantity) -> str:
+    """Return the regime in words, as the whole interval allows."""
+    low, high = _NEAR_CRITICAL
+    if damping.low >= low and damping.high <= high:
+        return "critically damped"
+    if damping.high < 1.0:
+        return "underdamped"
+    if damping.low > 1.0:
+        return "overdamped"
+    return "cannot tell"
+
+
+def response_of(fit: Fit, figures: Figures, surface: Surface, band: float, model: Model) -> ResponseFigures | None:
+    """Return the figures of the model's response; None where it has no final value."""
+    if model.kind in ("integrating", "dead_time"):
+        return None
+    return ResponseFigures(
+        overshoot_percent=figures["overshoot_percent"],
+        peak_time_s=figures["peak_time_s"],
+        rise_time_s=figures["rise_time_s"],
+        settling_time_s=figures["settling_time_s"],
+        delay_time_s=figures["delay_time_s"],
+        decay_ratio=figures["decay_ratio"],
+        rest_crossings=None if fit.columns.input is not None else rest_crossings(fit.columns, surface.points, band),
+    )

@@ -1,0 +1,240 @@
+"""From a record to the part that is fitted: which step, which rows, which input."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from loopfit.analysis.result import StepUsed
+from loopfit.core.arrays import Array
+from loopfit.core.errors import RecordError, UsageError
+from loopfit.core.finding import Finding
+from loopfit.fit.columns import Input
+from loopfit.fit.estimate import Trace
+from loopfit.record.record import Record
+from loopfit.step.detect import Step, Stepped, StepsFound, find_steps
+from loopfit.step.noise import noise_rms
+from loopfit.step.release import release_row
+
+_CHANGES_AT_MOST = 200
+_AFTER_AT_LEAST = 5
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class StatedStep:
+    """A step that the user states: instant, s on the file's clock, and levels."""
+
+    at_s: float
+    from_: float
+    to: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Prepared:
+    """What the estimator gets, and what is known about the step.
+
+    `held_before`: a record without a step begins with the measurement at rest.
+    """
+
+    trace: Trace
+    step: StepUsed | None
+    steps: tuple[StepUsed, ...]
+    findings: tuple[Finding, ...]
+    held_before: bool = False
+
+
+def prepare(record: Record, *, number: int | None, stated: StatedStep | None) -> Prepared:
+    """Return the trace of one step of a record.
+
+    Parameters
+    ----------
+    record : Record
+        As read.
+    number : int, optional
+        Which step, counted from 1; the first by default.
+    stated : StatedStep, optional
+        Overrides the column.
+
+    Raises
+    ------
+    RecordError
+        If there is no such step, or too little of the record after it.
+    """
+    if stated is not None:
+        return _stated(record, stated)
+    found, other = _stepped(record)
+    if found is None or not found.steps:
+        if number is not None:
+            raise RecordError(record.source, "no step was found, so there is no step to choose; drop --step")
+        if found is not None and found.always_moving:
+            raise RecordError(
+                record.source,
+                "the output moves all the time and no setpoint was recorded, so no step can be told; "
+                "name the setpoint column with --setpoint, or state the step with --step-at, --step-from and --step-to",
+            )
+        return _release(record, other)
+    return _one_of(record, found, number or 1)
+
+
+def _stepped(record: Record) -> tuple[StepsFound | None, bool]:
+    """Return the steps of the setpoint, else of the output; and whether such a column stood still."""
+    still = False
+    moving: StepsFound | None = None
+    roles: tuple[Stepped, ...] = ("setpoint", "output")
+    for role in roles:
+        signal = record.setpoint if role == "setpoint" else record.output
+        if signal is None:
+            continue
+        found = find_steps(record.time, signal.values, role)
+        if found.steps:
+            return found, False
+        if found.always_moving:
+            moving = found
+        still = still or not found.always_moving
+    return moving, still
+
+
+def _one_of(record: Record, found: StepsFound, number: int) -> Prepared:
+    count = len(found.steps)
+    if not 1 <= number <= count:
+        raise RecordError(
+            record.source,
+            f"there is no step {number}: the record holds {count}; "
+            f"choose with --step 1{'' if count == 1 else f' to {count}'}",
+        )
+    step = found.steps[number - 1]
+    n = record.time.size
+    first = found.steps[number - 2].row if number > 1 else 0
+    beyond = found.steps[number].row if number < count else n
+    if beyond - step.row < _AFTER_AT_LEAST:
+        raise RecordError(
+            record.source,
+            f"only {beyond - step.row} rows follow the step at {step.time_s:g} s; "
+            "record longer after the step" + (", or choose another with --step" if count > 1 else ""),
+        )
+    inside = (found.rows > first) & (found.rows < beyond)
+    if number == 1:
+        inside |= found.rows < beyond
+    rows, sizes = found.rows[inside], found.sizes[inside]
+    if rows.size > _CHANGES_AT_MOST:
+        rows, sizes = _thinned(rows, sizes)
+    trace = Trace(
+        time=record.time[first:beyond],
+        values=record.measurement.values[first:beyond],
+        input=Input(times=record.time[rows], sizes=sizes),
+        begins=step.time_s,
+        step_row=step.row - first,
+    )
+    findings = _about_steps(record, found, step, number, beyond)
+    steps = tuple(_used(s, used=i == number - 1) for i, s in enumerate(found.steps))
+    return Prepared(trace=trace, step=_used(step, used=True), steps=steps, findings=findings)
+
+
+def _used(step: Step, *, used: bool) -> StepUsed:
+    return StepUsed(signal=step.signal, time_s=step.time_s, from_=step.from_, to=step.to, used=used)
+
+
+def _thinned(rows: np.ndarray, sizes: Array) -> tuple[np.ndarray, Array]:
+    """Join the changes of a long ramp, so that no more are kept than the answer needs."""
+    starts = np.linspace(0, rows.size, _CHANGES_AT_MOST, endpoint=False).astype(np.intp)
+    ends = np.append(starts[1:], rows.size)
+    middles = rows[(starts + ends - 1) // 2]
+    return middles, np.add.reduceat(sizes, starts)
+
+
+def _about_steps(record: Record, found: StepsFound, step: Step, number: int, beyond: int) -> tuple[Finding, ...]:
+    findings = []
+    count = len(found.steps)
+    if count > 1:
+        findings.append(
+            Finding(
+                code="several_steps",
+                severity="warning",
+                text=f"The record holds {count} steps; the figures are of step {number}, at {step.time_s:g} s, up to "
+                f"{'the next one' if beyond < record.time.size else 'the end'}; choose another with --step.",
+            )
+        )
+        last = found.steps[-1]
+        if record.time.size - last.row < _AFTER_AT_LEAST and number < count:
+            findings.append(
+                Finding(
+                    code="step_at_end",
+                    severity="note",
+                    at_s=(last.time_s, last.time_s),
+                    text=f"The second step, at {last.time_s:g} s, is at the very end of the record and tells nothing."
+                    if count == 2
+                    else f"The step at {last.time_s:g} s is at the very end and tells nothing.",
+                )
+            )
+    if step.last_row > step.row:
+        findings.append(
+            Finding(
+                code="gradual_change",
+                severity="note",
+                at_s=(step.time_s, float(record.time[step.last_row])),
+                text=f"The {step.signal} changes over {step.last_row - step.row + 1} rows; it is used as the input it "
+                "is, and the figures are those of an ideal step.",
+            )
+        )
+    return tuple(findings)
+
+
+def _stated(record: Record, stated: StatedStep) -> Prepared:
+    if stated.from_ == stated.to:
+        raise UsageError("--step-from and --step-to are the same: that is no step")
+    row = int(np.searchsorted(record.time, stated.at_s - 1e-9 * max(1.0, abs(stated.at_s))))
+    if record.time.size - row < _AFTER_AT_LEAST:
+        raise RecordError(
+            record.source,
+            f"fewer than {_AFTER_AT_LEAST} rows follow the stated step at {stated.at_s:g} s; "
+            f"the record runs from {record.time[0]:g} to {record.time[-1]:g} s",
+        )
+    y = record.measurement.values
+    tail = max(3, y.size // 20)
+    noise = noise_rms(y)
+    reaches = abs(float(np.mean(y[-tail:])) - stated.to) <= 0.02 * abs(stated.to - stated.from_) + 2.0 * noise
+    signal: Stepped = "setpoint" if reaches and record.output is None else "output"
+    step = StepUsed(signal=signal, time_s=stated.at_s, from_=stated.from_, to=stated.to)
+    trace = Trace(
+        time=record.time,
+        values=y,
+        begins=stated.at_s,
+        step_row=row,
+        input=Input(times=np.array([stated.at_s]), sizes=np.array([step.size])),
+    )
+    note = Finding(
+        code="stated_step",
+        severity="note",
+        text=f"The step was stated by the user and is taken as one of the {signal}; columns were not used for it.",
+    )
+    return Prepared(trace=trace, step=step, steps=(step,), findings=(note,))
+
+
+def _release(record: Record, column_stood_still: bool) -> Prepared:
+    y = record.measurement.values
+    row = release_row(y, noise_rms(y))
+    if y.size - row < 2 * _AFTER_AT_LEAST:
+        raise RecordError(
+            record.source,
+            "nothing moves in this record: no step in the setpoint or the output, "
+            "and the measurement stays where it is",
+        )
+    if column_stood_still:
+        raise RecordError(
+            record.source,
+            "no step in the "
+            + (
+                "setpoint or the output"
+                if record.setpoint and record.output
+                else "setpoint"
+                if record.setpoint
+                else "output"
+            )
+            + "; state where it began with --step-at, --step-from and --step-to",
+        )
+    trace = Trace(time=record.time[row:], values=y[row:], input=None, begins=float(record.time[row]), step_row=0)
+    text = "No setpoint or output column: taken as a release that returns to rest"
+    text += f" from {record.time[row]:g} s on." if row else " from the first row on."
+    note = Finding(code="taken_as_release", severity="note", text=text)
+    return Prepared(trace=trace, step=None, steps=(), findings=(note,), held_before=row > 0)

@@ -1,0 +1,50 @@
+"""The command line: parse, call, print."""
+
+from __future__ import annotations
+
+import sys
+from typing import Annotated
+
+import typer
+
+from loopfit import __version__
+from loopfit.cli.analyze import analyze_command
+
+app = typer.Typer(
+    name="loopfit",
+    rich_markup_mode=None,
+    add_completion=False,
+    no_args_is_help=True,
+    pretty_exceptions_enable=False,
+    context_settings={"help_option_names": ["--help", "-h"]},
+)
+
+
+def _version(asked: bool) -> None:
+    if asked:
+        typer.echo(f"loopfit {__version__}")
+        raise typer.Exit
+
+
+@app.callback()
+def root(
+    version: Annotated[
+        bool, typer.Option("--version", callback=_version, is_eager=True, help="Print the version and stop.")
+    ] = False,
+) -> None:
+    """Damping of a control loop from a recorded step test, with its interval."""
+
+
+app.command("analyze")(analyze_command)
+
+
+def main() -> None:
+    """Run the command line."""
+    for stream in (sys.stdout, sys.stderr):
+        if hasattr(stream, "reconfigure"):
+            stream.reconfigure(errors="replace")  # a terminal that cannot show a degree sign
+    app()
+
+
+if __name__ == "__main__":
+    main()

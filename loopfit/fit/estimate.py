@@ -1,0 +1,257 @@
+"""From rows to a model with intervals: bins, starts, least squares, the likelihood-ratio surface."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from loopfit.core.arrays import Array
+from loopfit.core.quantity import Quantity
+from loopfit.fit.columns import Columns, Input
+from loopfit.fit.figures_of import figures_of, quantile_of_f
+from loopfit.fit.samples import gather, is_even, rows_as_samples
+from loopfit.fit.separable import Minimum, minimise, solve_linear
+from loopfit.fit.start import scan
+from loopfit.fit.surface import Surface, walk
+from loopfit.model.chart import LAGS, SWING, Chart
+
+_COARSE_BINS = 60
+_BIN_SHARE = 0.15  # of 1 / omega_n
+_LIGHT_DAMPING = 0.1
+_FIRST_ORDER_R = 0.01  # below this the bins follow T, not omega_n
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Structure:
+    """What a model is made of: the rungs of its input response, and what else may move.
+
+    `first_order` holds r at 0; `moving_start` adds the free response; `drift` a slow straight line.
+    """
+
+    rungs: tuple[int, ...] = (1,)
+    first_order: bool = False
+    moving_start: bool = False
+    drift: bool = False
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Trace:
+    """The part of a record that is fitted: rows, the input in it, and where the step is.
+
+    `input` is None for a release. `begins` is the instant of the step (of the first row, for a release), s;
+    `step_row` the first row at or after it.
+    """
+
+    time: Array
+    values: Array
+    input: Input | None
+    begins: float
+    step_row: int
+
+    @property
+    def span(self) -> float:
+        """Time from the step to the last row, s."""
+        return float(self.time[-1] - self.begins)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Fit:
+    """A fitted model: its columns, coordinates, linear parameters, and the noise left over.
+
+    `variance` is the noise power of one row; `colour` the correlation of neighbouring residuals;
+    `inflation` the factor by which colour widens the variance of slow shapes.
+    """
+
+    structure: Structure
+    columns: Columns
+    theta: Array
+    linear: Array
+    sse: float
+    variance: float
+    degrees: int
+    colour: float
+    inflation: float
+    settled: bool
+
+
+def fit_trace(trace: Trace, structure: Structure, *, noise_floor: float = 0.0) -> Fit:
+    """Return the best model of one structure.
+
+    Parameters
+    ----------
+    trace : Trace
+    structure : Structure
+    noise_floor : float
+        Least noise of a row that the record's resolution allows, measurement units.
+    """
+    even = is_even(trace.time)
+    free = np.array([True, not structure.first_order, trace.input is not None])
+    coarse = _columns(trace, structure, LAGS, 0.0, even, _COARSE_BINS)
+    starts = scan(coarse, trace.span, release=trace.input is None)
+    if structure.first_order:
+        starts[:, 1] = LAGS.lowest[1]
+    found = _search(coarse, starts, free, thin=True, tolerance=1e-3, rounds=30)
+    order = np.argsort(found.sse)
+    theta = found.theta[order[: 2 if found.sse.size > 1 else 1]]
+    chart = LAGS
+    columns = coarse
+    for _ in range(3):
+        width = _bin_width(chart, theta[:1])
+        columns = _columns(trace, structure, chart, width, even)
+        found = _search(columns, theta, free, tolerance=1e-7, rounds=60)
+        best = int(np.argmin(found.sse))
+        theta = found.theta[best : best + 1]
+        if chart is LAGS and not structure.first_order and chart.damping(theta)[0] < _LIGHT_DAMPING:
+            theta = _to_swing(theta, trace)
+            chart = SWING
+            continue
+        if not columns.samples.binned or _bin_width(chart, theta) >= 0.6 * width:
+            break
+    return _finish(columns, theta[0], structure, free, noise_floor, settled=bool(found.settled[best]))
+
+
+def _finish(
+    columns: Columns, theta: Array, structure: Structure, free: np.ndarray, noise_floor: float, *, settled: bool
+) -> Fit:
+    solved = solve_linear(columns.evaluate(theta[None], derivatives=False)[0], columns.target)
+    n = columns.target.size
+    degrees = max(n - int(free.sum()) - solved.linear.shape[1], 1)
+    sse = float(solved.sse[0])
+    scale = float(np.max(np.abs(columns.target))) if n else 0.0
+    variance = max(sse / degrees, noise_floor**2, (1e-13 * scale) ** 2, 1e-300)
+    colour = _neighbour_correlation(solved.residual[0])
+    inflation = 1.0
+    if colour * np.sqrt(n) > 3.0:
+        bounded = min(colour + (1.0 + 3.0 * colour) / n, 0.98)  # Kendall 1954: bias of the lag-one correlation
+        inflation = (1.0 + bounded) / (1.0 - bounded)
+    return Fit(
+        structure=structure,
+        columns=columns,
+        theta=theta,
+        linear=solved.linear[0],
+        sse=sse,
+        variance=variance,
+        degrees=degrees,
+        colour=colour,
+        inflation=inflation,
+        settled=settled,
+    )
+
+
+def surface_of(fit: Fit, *, confidence: float, band: float) -> Surface:
+    """Return the likelihood-ratio surface of a fit at a confidence (a fraction)."""
+    free = np.array([True, not fit.structure.first_order, fit.columns.input is not None])
+    degrees = max(int(fit.degrees / fit.inflation), 4)
+    return walk(
+        fit.columns,
+        fit.theta,
+        free=free,
+        threshold=quantile_of_f(confidence, degrees),
+        variance=fit.variance * fit.inflation,
+        band=band,
+    )
+
+
+def refine(fit: Fit, better: Array) -> Fit:
+    """Return the fit restarted from a better point that a walker met, with its noise estimate kept."""
+    free = np.array([True, not fit.structure.first_order, fit.columns.input is not None])
+    found = _search(fit.columns, better[None], free, tolerance=1e-7, rounds=60)
+    if found.sse[0] >= fit.sse:
+        return fit
+    solved = solve_linear(fit.columns.evaluate(found.theta, derivatives=False)[0], fit.columns.target)
+    return replace(
+        fit,
+        theta=found.theta[0],
+        linear=solved.linear[0],
+        sse=float(found.sse[0]),
+        variance=min(fit.variance, max(float(found.sse[0]) / fit.degrees, 1e-300)),
+    )
+
+
+def quantities(fit: Fit, surface: Surface, band: float) -> dict[str, Quantity | None]:
+    """Return every figure with its interval; None where the figure does not exist at the optimum."""
+    table = figures_of(fit.columns, surface.points, band)
+    out: dict[str, Quantity | None] = {}
+    for name, values in table.items():
+        value = float(values[0])
+        if np.isnan(value):
+            out[name] = None
+            continue
+        there = values[~np.isnan(values)]
+        low, high = float(there.min()), float(there.max())
+        if there.size < values.size:  # the figure ceases to exist inside the surface
+            if name in ("peak_time_s", "damped_period_s"):
+                high = np.inf
+            elif name in ("damped_frequency_rad_s", "decay_ratio"):
+                low = 0.0
+        if name == "damping_ratio" and surface.open_damping:
+            high = np.inf
+        if name == "natural_frequency_rad_s" and surface.open_damping:
+            high = np.inf
+        out[name] = Quantity.spanning(value, low, high)
+    return out
+
+
+def _columns(
+    trace: Trace, structure: Structure, chart: Chart, width: float, even: bool, fewest: int | None = None
+) -> Columns:
+    if fewest is not None:
+        samples = gather(trace.time, trace.values, width, trace.step_row, even=even, fewest=fewest)
+    elif width > 0:
+        samples = gather(trace.time, trace.values, width, trace.step_row, even=even)
+    else:
+        samples = rows_as_samples(trace.time, trace.values)
+    free_from = float(trace.time[0]) if structure.moving_start or trace.input is None else None
+    return Columns(
+        samples=samples,
+        chart=chart,
+        input=trace.input,
+        rungs=structure.rungs if trace.input else (),
+        free_from=free_from,
+        drift=structure.drift,
+    )
+
+
+def _bin_width(chart: Chart, theta: Array) -> float:
+    T, r = chart.lags(theta)
+    slow = chart.scale(theta)[0] if not chart.by_lags else T[0] * np.sqrt(max(r[0], _FIRST_ORDER_R))
+    return float(_BIN_SHARE * slow)
+
+
+def _to_swing(theta: Array, trace: Trace) -> Array:
+    """Return two starts in the swing chart: where the search ended, and without damping at all."""
+    zeta, frequency = LAGS.damping(theta), LAGS.frequency(theta)
+    start = SWING.locate(zeta, np.minimum(frequency, 1e3 / max(trace.span, 1e-30)), theta[:, 2])
+    flat = start.copy()
+    flat[:, 1] = 0.0
+    return np.concatenate([start, flat])
+
+
+def _search(
+    columns: Columns, starts: Array, free: np.ndarray, *, thin: bool = False, tolerance: float, rounds: int
+) -> Minimum:
+    chart = columns.chart
+
+    def caps(theta: Array) -> Array:
+        limit = np.empty_like(theta)
+        limit[:, 0], limit[:, 1] = (0.8, 1.2) if chart.by_lags else (0.3, 0.3)
+        limit[:, 2] = 2.0 / chart.frequency(theta) + 0.5 * chart.lags(theta)[0]
+        return limit
+
+    return minimise(
+        columns.evaluate,
+        columns.target,
+        starts,
+        lowest=chart.lowest,
+        free=free,
+        caps=caps,
+        tolerance=tolerance,
+        rounds=rounds,
+        thin=thin,
+    )
+
+
+def _neighbour_correlation(residual: Array) -> float:
+    power = float(residual @ residual)
+    return float(residual[1:] @ residual[:-1]) / power if power > 0 else 0.0

@@ -1,0 +1,289 @@
+"""From stamps to seconds: ISO 8601, dates in both orders, times of day, epochs, days of a spreadsheet."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Sequence
+from dataclasses import dataclass
+from datetime import date, datetime, timezone
+
+import numpy as np
+
+from loopfit.core.arrays import Array
+from loopfit.core.finding import Finding
+from loopfit.record.units import seconds_per
+
+_MONTHS = {
+    "jan": 1, "ene": 1, "feb": 2, "fev": 2, "fév": 2, "mar": 3, "mär": 3, "mrz": 3, "apr": 4, "avr": 4, "abr": 4, "may": 5,
+    "mai": 5, "jun": 6, "jui": 6, "jul": 7, "aug": 8, "aou": 8, "aoû": 8, "ago": 8, "sep": 9, "oct": 10, "okt": 10, "nov": 11,
+    "dec": 12, "dez": 12, "déc": 12, "dic": 12,
+}  # fmt: skip
+_STAMP = re.compile(
+    r"\s*(?:(\d{1,4})([-/. ])([^\W\d_]{3,10}\.?|\d{1,2})[-/. ]+(\d{1,4}))?[T ,_]*"
+    r"(?:([+-]?\d{1,4}):(\d{2})(?::(\d{2}))?(?:[.,:](\d{1,9}))?\s*([aApP]\.?[mM]\.?)?)?\s*(Z|UTC|GMT|[+-]\d{2}:?\d{2})?\s*",
+    re.ASCII | re.IGNORECASE,
+)
+_STAMP_WORDS = re.compile(_STAMP.pattern, re.IGNORECASE)
+# size of a time since 1970 (or 1601, 0001 for ticks of 100 ns), and its units in a second
+_EPOCHS = (
+    (9e8, 1e10, 1),
+    (9e11, 1e13, 10**3),
+    (9e14, 1e16, 10**6),
+    (1.1e17, 1.7e17, 10**7),
+    (6e17, 7e17, 10**7),
+    (9e17, 1e19, 10**9),
+)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Clock:
+    """Seconds (n,), NaN where a stamp is bad; `kind` is "seconds", "date" or "time of day".
+
+    `of_day_s` (n,) is the time of day for dates without a zone, by which a change to summer time is known.
+    """
+
+    seconds: Array
+    kind: str
+    of_day_s: Array | None
+    weekday: Array | None
+    findings: tuple[Finding, ...]
+
+
+class UndecidedStampsError(ValueError):
+    """Two readings of the stamps give different elapsed times; the text says which."""
+
+
+def numeric_clock(values: Array, name: str, unit: str | None, cells: Sequence[str] | None = None) -> Clock:
+    """Return seconds from numbers, by the unit in the header or the words of the name, else by their size."""
+    known = values[np.isfinite(values)]
+    factor = seconds_per(unit)
+    if factor is None and unit is None:
+        words = re.split(r"[\W_]+", name.lower())
+        factor = next(
+            (seconds_per(word) for word in reversed(words) if len(word) > 1 and seconds_per(word) is not None), None
+        )
+    middle = float(np.median(known)) if len(known) else 0.0
+    per_second = next((count for low, high, count in _EPOCHS if low <= middle < high), None)
+    if per_second is not None and (factor is None or abs(factor * per_second - 1) < 1e-9):
+        return _epoch(values, name, per_second, cells)
+    if factor is not None and not (factor == 86400.0 and middle > 20000):
+        seconds = values if factor == 1 else values * factor if factor > 1 else values / round(1 / factor)
+        return Clock(seconds=seconds, kind="seconds", of_day_s=None, weekday=None, findings=())
+    if _are_days(known, name, factor):
+        text = f"{name!r} is read as days of a spreadsheet's calendar: one day is 86400 s"
+        finding = Finding(code="time_in_days", severity="note", text=text)
+        first = float(known[0])
+        # days with nine decimals tell 0.1 ms: rounding to 1 µs takes out the error of multiplying
+        seconds = np.round((values - np.floor(first)) * 86400.0, 6)
+        seconds = np.round(seconds - np.round((first - np.floor(first)) * 86400.0, 6), 6)
+        return Clock(seconds=seconds, kind="date", of_day_s=None, weekday=None, findings=(finding,))
+    text = f"no unit of time is stated for {name!r}: it is read as seconds"
+    finding = Finding(code="time_unit_assumed", severity="note", text=text)
+    return Clock(seconds=values, kind="seconds", of_day_s=None, weekday=None, findings=(finding,))
+
+
+def _epoch(values: Array, name: str, per_second: int, cells: Sequence[str] | None) -> Clock:
+    first = float(values[np.isfinite(values)][0])
+    seconds = (values - first) / per_second
+    if abs(first) > 2**53 and cells is not None:  # whole numbers beyond what a float holds
+        whole = [int(cell) if re.fullmatch(r"\d+", cell) else None for cell in cells]
+        start = next((value for value in whole if value is not None), 0)
+        seconds = np.array([np.nan if value is None else (value - start) / per_second for value in whole])
+    names = {1: "seconds", 10**3: "milliseconds", 10**6: "microseconds", 10**7: "ticks of 100 ns", 10**9: "nanoseconds"}
+    text = f"{name!r} is read, by its size, as {names[per_second]} of a calendar clock; time 0 is the first row"
+    return Clock(
+        seconds=seconds,
+        kind="date",
+        of_day_s=None,
+        weekday=None,
+        findings=(Finding(code="time_epoch", severity="note", text=text),),
+    )
+
+
+def _are_days(known: Array, name: str, factor: float | None) -> bool:
+    """Return whether numbers are days since 1900 or since year 0: in the range of 2000 to 2100, in steps of whole milliseconds."""
+    if len(known) < 3:
+        return False
+    first, last = float(known[0]), float(known[-1])
+    if not ((36526 <= first <= last <= 73415) or (730486 <= first <= last <= 767376)):
+        return False
+    step = float(np.median(np.diff(known))) * 86400.0
+    named = factor == 86400.0 or re.search(r"date|datum|fecha|day|tag|serial", name, re.IGNORECASE) is not None
+    return 0 < step < 43200 and (
+        named or (last - first < 40 and step > 0.005 and bool(np.any(known != np.round(known, 3))))
+    )
+
+
+def stamp_clock(cells: Sequence[str], name: str) -> Clock | None:
+    """Return seconds from stamps, NaN where a cell is no stamp; None when fewer than nine in ten are.
+
+    Raises
+    ------
+    UndecidedStampsError
+        If two readings fit every row and give different elapsed times.
+    """
+    quick = _iso(cells)
+    if quick is not None:
+        return quick
+    pattern = _STAMP if "".join(cells[:50]).isascii() else _STAMP_WORDS
+    parts = [_STAMP_WORDS.fullmatch(cell) if not cell.isascii() else pattern.fullmatch(cell) for cell in cells]
+    groups = [found.groups() if found is not None and (found.group(1) or found.group(5)) else None for found in parts]
+    good = [group for group in groups if group is not None]
+    if len(good) < 0.9 * max(1, sum(bool(cell) for cell in cells)) or not good:
+        return None
+    if good[0][0] is None:
+        return _time_of_day(groups, name)
+    return _dates(groups, name)
+
+
+def _iso(cells: Sequence[str]) -> Clock | None:
+    """Return the clock of stamps that are all ISO 8601 with at most microseconds, None when any is not."""
+    if not cells or len(cells[0]) < 10 or not cells[0][:4].isdigit() or "-" not in cells[0][:8]:
+        return None
+    if any(len(cell) > 26 and re.search(r"[.,]\d{7}", cell) for cell in (cells[0], cells[-1])):
+        return None
+    try:
+        stamps = [datetime.fromisoformat(cell) for cell in cells]
+    except ValueError:
+        return None
+    zoned = [stamp.tzinfo is not None for stamp in (stamps[0], stamps[-1])]
+    if any(zoned):
+        if not all(stamp.tzinfo is not None for stamp in stamps):
+            return None
+        stamps = [stamp.astimezone(timezone.utc).replace(tzinfo=None) for stamp in stamps]
+    try:
+        ticks = np.array(stamps, dtype="datetime64[us]").astype(np.int64)
+    except (ValueError, TypeError):
+        return None
+    seconds = (ticks - ticks[0]) / 1e6
+    of_day = None if any(zoned) else (ticks % 86_400_000_000) / 1e6
+    weekday = (
+        None if any(zoned) else ((ticks // 86_400_000_000 + 3) % 7).astype(np.float64)
+    )  # 1 January 1970 was a Thursday
+    return Clock(seconds=seconds, kind="date", of_day_s=of_day, weekday=weekday, findings=())
+
+
+_Groups = Sequence["tuple[str | None, ...] | None"]
+
+
+def _of_day_ns(group: tuple[str | None, ...], two_parts_are_minutes: bool = False) -> int | None:
+    hour, minute, second, fraction, half = group[4:9]
+    if hour is None or minute is None:
+        return 0
+    hours, minutes, seconds = int(hour), int(minute), int(second or 0)
+    if two_parts_are_minutes and second is None:
+        hours, minutes, seconds = 0, int(hour), int(minute)
+    elif minutes > 59 or seconds > 60:
+        return None
+    if half:
+        if not 1 <= hours <= 12:
+            return None
+        hours = hours % 12 + (12 if half[0] in "pP" else 0)
+    nanos = int((fraction or "0").ljust(9, "0"))
+    return ((hours * 60 + minutes) * 60 + seconds) * 10**9 + nanos
+
+
+def _time_of_day(groups: _Groups, name: str) -> Clock | None:
+    two = [group for group in groups if group is not None and group[6] is None]
+    minutes = False
+    if two:
+        hint = name.lower().replace(" ", "")
+        if any(group[7] for group in two) or "mm:ss" in hint or "min:s" in hint:
+            minutes = True
+        elif not ("hh:mm" in hint or any(group[8] for group in two)):
+            sixty = "whether they are hours and minutes or minutes and seconds is not told; write hh:mm:ss"
+            raise UndecidedStampsError(f"times such as {two[0][4]}:{two[0][5]} can be read in two ways, {sixty}")
+    ticks = [None if group is None else _of_day_ns(group, minutes) for group in groups]
+    seconds = np.array([np.nan if tick is None else tick / 1e9 for tick in ticks])
+    start = next(tick for tick in ticks if tick is not None) if any(t is not None for t in ticks) else 0
+    relative = np.array([np.nan if tick is None else (tick - start) / 1e9 for tick in ticks])
+    return Clock(seconds=relative, kind="time of day", of_day_s=seconds, weekday=None, findings=())
+
+
+_ORDERS = {"year first": (0, 1, 2), "day first": (2, 1, 0), "month first": (2, 0, 1)}
+
+
+def _dates(groups: _Groups, name: str) -> Clock | None:
+    sample = next(group for group in groups if group is not None)
+    orders = ["year first"] if len(str(sample[0])) == 4 else ["day first", "month first"]
+    if len(str(sample[0])) <= 2 and len(str(sample[3])) <= 2:
+        orders.append("year first")
+    if sample[1] == "." and len(str(sample[0])) < 4:
+        orders = ["day first"]  # no country writes 03.01.2026 month first
+    readings: dict[str, list[int | None]] = {}
+    for order in orders:
+        ticks = _ticks(groups, _ORDERS[order])
+        if ticks is not None:
+            readings[order] = ticks
+    if not readings:
+        return None
+    order, ticks = next(iter(readings.items()))
+    start = next(tick for tick in ticks if tick is not None)
+    findings: list[Finding] = []
+    elapsed = {key: [None if t is None else t - _first(value) for t in value] for key, value in readings.items()}
+    if len({tuple(value) for value in elapsed.values()}) > 1:
+        rising = {key: value for key, value in elapsed.items() if _rises(value)}
+        if len({tuple(value) for value in rising.values()}) == 1:
+            order = next(iter(rising))
+            ticks = readings[order]
+            start = _first(ticks)
+            text = f"the dates of {name!r} are read {order}: the other order would make the clock run back"
+            findings.append(Finding(code="date_order", severity="note", text=text))
+        else:
+            both = " or ".join(elapsed)
+            raise UndecidedStampsError(
+                f"dates such as {''.join(str(part) for part in sample[:3])}{sample[1]}{sample[3]} can be read {both}, with different elapsed times; write them as 2026-03-01"
+            )
+    elif len(readings) > 1:
+        text = f"whether the dates of {name!r} are {' or '.join(readings)} cannot be told; the times between rows do not depend on it"
+        findings.append(Finding(code="date_order", severity="note", text=text))
+    seconds = np.array([np.nan if tick is None else (tick - start) / 1e9 for tick in ticks])
+    zoned = any(group is not None and group[9] is not None for group in groups)
+    of_day = None if zoned else np.array([np.nan if tick is None else (tick % (86400 * 10**9)) / 1e9 for tick in ticks])
+    weekday = None
+    if not zoned:
+        weekday = np.array(
+            [np.nan if tick is None else (tick // (86400 * 10**9) + 6) % 7 for tick in ticks]
+        )  # day 1 was a Monday
+    return Clock(seconds=seconds, kind="date", of_day_s=of_day, weekday=weekday, findings=tuple(findings))
+
+
+def _first(ticks: Sequence[int | None]) -> int:
+    return next(tick for tick in ticks if tick is not None)
+
+
+def _rises(ticks: Sequence[int | None]) -> bool:
+    known = [tick for tick in ticks if tick is not None]
+    pairs = list(zip(known, known[1:], strict=False))
+    return all(b >= a for a, b in pairs) or all(b <= a for a, b in pairs)
+
+
+def _ticks(groups: _Groups, order: tuple[int, int, int]) -> list[int | None] | None:
+    """Return nanoseconds of the calendar, None when a date does not exist in this order."""
+    days: dict[tuple[str | None, ...], int] = {}
+    ticks: list[int | None] = []
+    for group in groups:
+        if group is None or group[0] is None:
+            ticks.append(None)
+            continue
+        key = (group[0], group[2], group[3])
+        if key not in days:
+            year, month, day = (key[place] or "" for place in order)
+            number = int(month) if month.isdigit() else _MONTHS.get(month[:3].lower(), 0)
+            if not (year.isdigit() and day.isdigit()):
+                return None
+            full = int(year) + (0 if len(year) > 2 else 2000 if int(year) < 70 else 1900)
+            try:
+                days[key] = date(full, number, int(day)).toordinal()
+            except ValueError:
+                return None
+        of_day = _of_day_ns(group)
+        if of_day is None:
+            ticks.append(None)
+            continue
+        zone = group[9] or ""
+        shift = 0
+        if zone[:1] in ("+", "-") and zone:
+            shift = (int(zone[1:3]) * 60 + int(zone[-2:])) * 60 * 10**9 * (-1 if zone[0] == "-" else 1)
+        ticks.append(days[key] * 86400 * 10**9 + of_day - shift)
+    return ticks
