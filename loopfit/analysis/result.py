@@ -3,13 +3,16 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, fields
-from typing import Any, Literal
+from typing import TYPE_CHECKING, Any, Literal
 
 from loopfit.core.finding import Finding
 from loopfit.core.plain import plain, to_json
 from loopfit.core.quantity import Quantity
 from loopfit.fit.curve import FittedCurve
 from loopfit.record.record import Record
+
+if TYPE_CHECKING:
+    from control import TransferFunction
 
 Kind = Literal["second_order", "first_order", "second_order_zero", "integrating", "dead_time"]
 
@@ -154,6 +157,12 @@ class Analysis:
         }
         out: dict[str, Any] = plain(document)
         return out
+
+    def to_control(self, *, pade_order: int | None = None) -> TransferFunction:
+        """Return the model as a python-control transfer function; see `loopfit.analysis.interchange`."""
+        from loopfit.analysis.interchange import to_control
+
+        return to_control(self, pade_order=pade_order)
 
     def to_json(self) -> str:
         """Return the JSON document."""

@@ -7,10 +7,14 @@ import math
 from loopfit.core.quantity import Quantity
 
 
-def decimals_for(spread: float, value: float, digits: int = 2) -> int:
-    """Return the number of decimals that shows `digits` figures of the spread (or three of the value)."""
+def decimals_for(spread: float, value: float) -> int:
+    """Return the decimals that show the spread to one figure, or to two when it begins with 1.
+
+    Without a spread, four figures of the value.
+    """
     if spread > 0 and math.isfinite(spread):
-        return digits - 1 - math.floor(math.log10(spread))
+        places = -math.floor(math.log10(spread))
+        return places + 1 if spread * 10.0**places < 2.0 else places
     if value != 0 and math.isfinite(value):
         return 3 - math.floor(math.log10(abs(value)))
     return 2
@@ -25,7 +29,7 @@ def number(value: float, decimals: int) -> str:
 
 
 def decimals_of(quantity: Quantity) -> int:
-    """Return the decimals at which the quantity's interval shows two figures."""
+    """Return the decimals that suit a quantity's interval."""
     ends = [bound for bound in (quantity.low, quantity.high) if math.isfinite(bound)]
     spread = max((abs(quantity.value - bound) for bound in ends), default=0.0)
     return min(decimals_for(spread, quantity.value), 9)

@@ -16,6 +16,8 @@ from loopfit.figures.rest import resting_value
 from loopfit.figures.smoothing import Curve, blocks, smooth
 
 _FEWEST_ROWS = 16
+_LAST_SWING = 0.02  # of the change
+_UNSEEN = 0.1  # of the time between readings: what the curve may do between them moves a crossing by less
 _FEWEST_ROWS_APART = 40  # for a part of the record to be smoothed by itself
 
 
@@ -48,6 +50,7 @@ class _Course:
     time: Array
     height: Array
     error: Array
+    interval: float
     freedom: float
     start: float
     end: float
@@ -117,6 +120,7 @@ def observe(
     final = resting_value(values, initial.value, whole.long_variance / rows, quantile)
     if final is None:
         return _nothing(initial)
+    final = _followed_briefly(whole, initial.value, final, quantile)
     change = final.value - initial.value
     deviation = None if setpoint_after is None else final.scaled(-1.0).shifted(setpoint_after)
     start, end = (_half_width(level) / abs(change) if change != 0 else math.inf for level in (initial, final))
@@ -129,6 +133,7 @@ def observe(
             time=curve.time,
             height=(curve.value - initial.value) / change,
             error=curve.error / abs(change),
+            interval=curve.interval,
             freedom=curve.freedom,
             start=start,
             end=end,
@@ -181,6 +186,20 @@ def _initial(before: Array, curve: Curve, quantile: float) -> Quantity:
     return Quantity(value, value - quantile * error, value + quantile * error)
 
 
+def _followed_briefly(curve: Curve, start: float, final: Quantity, quantile: float) -> Quantity:
+    """Return the final value with room for a last small swing, on top of which a short record may end.
+
+    A swing within the band of 2 % shows little at its top and lasts about as long as the motion before it. A
+    record at rest for 1.5 times as long as it moved needs no room; one just within the band needs 2 %.
+    """
+    change = abs(final.value - start)
+    moving = np.abs(curve.value - final.value) > _LAST_SWING * change + quantile * curve.error
+    last = float(curve.time[moving][-1]) if moving.any() else 0.0
+    short = max(1 - (float(curve.time[-1]) - last) / (1.5 * last), 0.0) if last > 0 else 0.0
+    room = _LAST_SWING * change * short
+    return Quantity(final.value, final.low - room, final.high + room)
+
+
 def _split(since: Array, course: Callable[[slice], _Course]) -> tuple[_Course, _Course | None]:
     """Return the course while it moves and, where there are rows for it, the course at rest after that."""
     near, rows = course(slice(None)), since.size
@@ -215,7 +234,9 @@ def _crossing(course: _Course, level: float) -> Quantity | None:
     width = course.width(level)
     width = course.width(level, np.abs(course.height - level) < width)
     low = _first_at(course.time, course.height + width, level)
-    return Quantity.spanning(value, low, _first_at(course.time, course.height - width, level))
+    high = _first_at(course.time, course.height - width, level)
+    unseen = _UNSEEN * course.interval
+    return Quantity.spanning(value, max(low - unseen, 0.0), high + unseen)
 
 
 def _rise(course: _Course) -> Quantity | None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -10,7 +11,7 @@ from loopfit.core.arrays import Array
 from loopfit.core.quantity import Quantity
 from loopfit.fit.columns import Columns, Input
 from loopfit.fit.figures_of import figures_of, quantile_of_f
-from loopfit.fit.samples import gather, is_even, rows_as_samples
+from loopfit.fit.samples import BINS_AT_LEAST, gather, is_even
 from loopfit.fit.separable import Minimum, minimise, solve_linear
 from loopfit.fit.start import scan
 from loopfit.fit.surface import Surface, walk
@@ -87,7 +88,7 @@ def fit_trace(trace: Trace, structure: Structure, *, noise_floor: float = 0.0) -
     """
     even = is_even(trace.time)
     free = np.array([True, not structure.first_order, trace.input is not None])
-    coarse = _columns(trace, structure, LAGS, 0.0, even, _COARSE_BINS)
+    coarse = _columns(trace, structure, LAGS, math.inf, even, _COARSE_BINS)
     starts = scan(coarse, trace.span, release=trace.input is None)
     if structure.first_order:
         starts[:, 1] = LAGS.lowest[1]
@@ -194,14 +195,9 @@ def quantities(fit: Fit, surface: Surface, band: float) -> dict[str, Quantity | 
 
 
 def _columns(
-    trace: Trace, structure: Structure, chart: Chart, width: float, even: bool, fewest: int | None = None
+    trace: Trace, structure: Structure, chart: Chart, width: float, even: bool, fewest: int = BINS_AT_LEAST
 ) -> Columns:
-    if fewest is not None:
-        samples = gather(trace.time, trace.values, width, trace.step_row, even=even, fewest=fewest)
-    elif width > 0:
-        samples = gather(trace.time, trace.values, width, trace.step_row, even=even)
-    else:
-        samples = rows_as_samples(trace.time, trace.values)
+    samples = gather(trace.time, trace.values, width, trace.step_row, even=even, fewest=fewest)
     free_from = float(trace.time[0]) if structure.moving_start or trace.input is None else None
     return Columns(
         samples=samples,

@@ -10,7 +10,7 @@ from loopfit.core.arrays import Array
 
 _POINTS_AT_MOST = 260
 _UNEVEN_POINTS_AT_MOST = 4000
-_BINS_AT_LEAST = 150
+BINS_AT_LEAST = 150
 _BINS_AT_MOST = 8000
 _EVEN_WITHIN = 0.02
 
@@ -68,7 +68,7 @@ def rows_as_samples(time: Array, values: Array) -> Samples:
 
 
 def gather(
-    time: Array, values: Array, width: float, step_row: int, *, even: bool, fewest: int = _BINS_AT_LEAST
+    time: Array, values: Array, width: float, step_row: int, *, even: bool, fewest: int = BINS_AT_LEAST
 ) -> Samples:
     """Return the record in bins no wider than `width`, with an edge at the step.
 
@@ -81,7 +81,7 @@ def gather(
     time, values : (n,) arrays
         Rows in rising order of time, s.
     width : float
-        Widest bin, s.
+        Widest bin, s; infinite for the fewest bins.
     step_row : int
         Row at which an edge is put (0 for none).
     even : bool
@@ -91,9 +91,9 @@ def gather(
     """
     n = time.size
     span = float(time[-1] - time[0])
-    bins = min(max(span / width if width > 0 else np.inf, fewest), _BINS_AT_MOST)
+    bins = min(max(span / width, fewest), _BINS_AT_MOST)
     per_bin = int(n / bins)
-    few = n <= (_POINTS_AT_MOST if even else _UNEVEN_POINTS_AT_MOST) and fewest >= _BINS_AT_LEAST
+    few = n <= (_POINTS_AT_MOST if even else _UNEVEN_POINTS_AT_MOST) and fewest >= BINS_AT_LEAST
     if few or per_bin < 2:
         return rows_as_samples(time, values)
     if even:

@@ -8,7 +8,7 @@ import zlib
 
 from loopfit.core.errors import RecordError
 
-LARGEST = 512 * 1024 * 1024  # bytes after unpacking; a million rows of ten columns take about 100 MB
+LARGEST = 256 * 1024 * 1024  # bytes after unpacking; a million rows of ten columns take about 100 MB
 _BLOCK = 1 << 20
 
 
@@ -49,18 +49,16 @@ def _too_large(source: str) -> RecordError:
 
 
 def _gunzip(source: str, data: bytes) -> bytes:
-    parts: list[bytes] = []
-    size = 0
+    whole = bytearray()
     rest = data
     try:
         while rest[:2] == b"\x1f\x8b":
             engine = zlib.decompressobj(wbits=31)
             piece = engine.decompress(rest, _BLOCK)
             while True:
-                size += len(piece)
-                if size > LARGEST:
+                whole += piece
+                if len(whole) > LARGEST:
                     raise _too_large(source)
-                parts.append(piece)
                 if engine.eof:
                     break
                 if not piece and not engine.unconsumed_tail:
@@ -69,7 +67,7 @@ def _gunzip(source: str, data: bytes) -> bytes:
             rest = engine.unused_data
     except zlib.error:
         raise RecordError(source, "the gzip data are damaged; fetch the file again") from None
-    return b"".join(parts)
+    return bytes(whole)
 
 
 def _unzip(source: str, data: bytes) -> bytes:

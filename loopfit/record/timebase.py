@@ -113,8 +113,11 @@ def _even(table: Table, wanted: Column | None, interval_s: float, free: Sequence
         used = frozenset()
     clock = Clock(seconds=seconds, kind="seconds", of_day_s=None, weekday=None, findings=())
     name = None if wanted is None else wanted.name
+    aside = _other_times(free)
+    if all(column.number in aside or column.number in used or column.values is None for column in free):
+        aside = frozenset()  # a single column that happens to count is still the measurement
     finding = Finding(code="interval_given", severity="note", text=text)
-    return TimeBase(clock=clock, name=name, used=used, set_aside=_other_times(free), findings=(finding,))
+    return TimeBase(clock=clock, name=name, used=used, set_aside=aside, findings=(finding,))
 
 
 def _numeric(column: Column, free: Sequence[Column], findings: tuple[Finding, ...]) -> TimeBase:

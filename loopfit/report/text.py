@@ -55,13 +55,21 @@ def _answer(analysis: Analysis) -> str:
     second = []
     if response is not None:
         if response.overshoot_percent is not None and math.isfinite(response.overshoot_percent.value):
-            second.append(f"overshoot {in_words(response.overshoot_percent, '%')}")
+            second.append(_overshoot_words(response.overshoot_percent))
         if response.settling_time_s is not None and math.isfinite(response.settling_time_s.value):
             second.append(
                 f"settled within ±{analysis.band_percent:g} % after {in_words(response.settling_time_s, 's')}"
             )
     text = "; ".join(second)
     return first + ("\n" + text[0].upper() + text[1:] + "." if text else "")
+
+
+def _overshoot_words(overshoot: Quantity) -> str:
+    if overshoot.high < 0.05:
+        return "no overshoot"
+    if overshoot.value < 0.05:
+        return f"no overshoot, at most {number(overshoot.high, decimals_for(overshoot.high, 0.0))} %"
+    return f"overshoot {in_words(overshoot, '%')}"
 
 
 def _regime_words(model: Model) -> str:
@@ -103,7 +111,7 @@ def _stepped_signal(analysis: Analysis) -> Signal | None:
 
 def _step_words(step: StepUsed, signal: Signal | None) -> str:
     unit = f" {signal.unit}" if signal is not None and signal.unit else ""
-    places = max(0, decimals_for(abs(step.size), step.size, 4))
+    places = max(0, decimals_for(0.0, step.size))
     levels = [
         f"{value:.{min(places, 6)}f}".rstrip("0").rstrip(".") if places else f"{value:.0f}"
         for value in (step.from_, step.to)
