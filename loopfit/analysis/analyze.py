@@ -18,7 +18,6 @@ from loopfit.core.finding import Finding
 from loopfit.core.quantity import Quantity
 from loopfit.figures.observed import observe
 from loopfit.fit.choose import change_of, choose, structured
-from loopfit.fit.curve import curve_of
 from loopfit.fit.estimate import Trace, quantities, refine, surface_of
 from loopfit.fit.set_aside import false_first_rows, without_rows
 from loopfit.record.read import read_record, record_from_arrays
@@ -168,7 +167,8 @@ def analyze_record(
         observed=observed,
         model=model,
         response=None if model is None else response_of(fit, figures, surface, band, model),
-        curve=None if model is None else curve_of(fit, surface.points, trace.time),
+        fit=fit,
+        points=surface.points,
         band_percent=float(band_percent),
         confidence_percent=float(confidence_percent),
     )

@@ -8,7 +8,9 @@ from typing import TYPE_CHECKING, Any, Literal
 from loopfit.core.finding import Finding
 from loopfit.core.plain import plain, to_json
 from loopfit.core.quantity import Quantity
-from loopfit.fit.curve import FittedCurve
+from loopfit.fit.curve import FittedCurve, curve_of
+from loopfit.fit.estimate import Fit
+from loopfit.fit.figures_of import Points
 from loopfit.record.record import Record
 
 if TYPE_CHECKING:
@@ -90,7 +92,10 @@ class ResponseFigures:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Analysis:
-    """The result for one record. `model` is None when it was refused; `record.findings` say why."""
+    """The result for one record. `model` is None when it was refused; the findings say why.
+
+    `fit` and `points` are the fitted model and all models that the record allows, as the estimator has them.
+    """
 
     record: Record
     findings: tuple[Finding, ...]
@@ -101,7 +106,8 @@ class Analysis:
     observed: ObservedFigures
     model: Model | None
     response: ResponseFigures | None
-    curve: FittedCurve | None
+    fit: Fit
+    points: Points
     band_percent: float
     confidence_percent: float
 
@@ -112,6 +118,11 @@ class Analysis:
             return None
         texts = [finding.text for finding in self.findings if finding.severity == "error"]
         return texts[0] if texts else "no model could be given"
+
+    @property
+    def curve(self) -> FittedCurve | None:
+        """The fitted response over the rows used, with the band of all models that the record allows."""
+        return None if self.model is None else curve_of(self.fit, self.points, self.window_s)
 
     def to_dict(self) -> dict[str, Any]:
         """Return the analysis as the JSON document's keys and plain values."""

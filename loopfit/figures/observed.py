@@ -13,7 +13,7 @@ from numpy.typing import ArrayLike
 from loopfit.core.arrays import Array
 from loopfit.core.quantity import Quantity
 from loopfit.figures.rest import resting_value
-from loopfit.figures.smoothing import Curve, blocks, smooth
+from loopfit.figures.smoothing import MOST_BLOCKS, Curve, blocks, long_variance, smooth
 
 _FEWEST_ROWS = 16
 _LAST_SWING = 0.02  # of the change
@@ -182,7 +182,9 @@ def _initial(before: Array, curve: Curve, quantile: float) -> Quantity:
     if before.size == 0:
         value, error = float(curve.value[0]), float(curve.error[0])
     else:
-        value, error = float(before.mean()), math.sqrt(curve.long_variance / before.size)
+        last = before[-MOST_BLOCKS:]
+        variance = max(curve.long_variance, long_variance(last))
+        value, error = float(before.mean()), math.sqrt(variance / before.size)
     return Quantity(value, value - quantile * error, value + quantile * error)
 
 

@@ -87,6 +87,27 @@ def blocks(time: Array, measurement: Array) -> tuple[Array, Array, int]:
     return _means(time, rows), _means(measurement, rows), rows
 
 
+def long_variance(rest: Array) -> float:
+    """Return what one of the rows at rest contributes to the variance of a long mean: variance x count.
+
+    From these rows alone, the colours weighed by their likelihood; 0 for fewer than 8 rows.
+    """
+    if rest.size < 8:
+        return 0.0
+    shape = _colours(rest.size)
+    excess, logarithm = _quiet(rest)
+    fit = -0.5 * (logarithm + (rest.size - 1) * np.log(np.maximum(excess, 1e-300)))
+    weight = np.exp(fit - fit.max())
+    return float(weight @ (shape[:, 0] * excess) / weight.sum() / (rest.size - 1))
+
+
+def _quiet(rest: Array) -> tuple[Array, Array]:
+    """Return, per colour, sum of power over shape and of the log shape, for rows that hold noise only."""
+    shape = _colours(rest.size)[:, 1:]
+    power = (_transform(rest.size, 1)[0][1:] @ rest) ** 2
+    return (power / shape).sum(1), np.log(shape).sum(1)
+
+
 def smooth(time: Array, measurement: Array, before: Array, least_noise: float = 0.0) -> Curve:
     """Return the curve under the rows after a step.
 
@@ -98,15 +119,10 @@ def smooth(time: Array, measurement: Array, before: Array, least_noise: float = 
     basis, inverse, roughness, colour = _transform(size, rows)
     content = basis @ measurement
     power = content[1:] ** 2
-    rest = np.zeros(len(_COLOURS))
-    rest_log, rest_count = rest, 0
     quiet = _means(before[-MOST_BLOCKS * rows :], rows)
-    if quiet.size >= 8:
-        rest_colour = _colours(quiet.size)[:, 1:]
-        rest_power = (_transform(quiet.size, rows)[0][1:] @ quiet) ** 2
-        rest, rest_log = (rest_power / rest_colour).sum(1), np.log(rest_colour).sum(1)
-        rest_count = quiet.size - 1
-    total = size - 1 + rest_count
+    known = quiet.size >= 8
+    rest, rest_log = _quiet(quiet) if known else (np.zeros(len(_COLOURS)), np.zeros(len(_COLOURS)))
+    total = size - 1 + (quiet.size - 1 if known else 0)
     bend = 1 / (roughness[:, None] * _STIFFNESSES[:, None])  # (form, stiffness, frequency)
     # single precision is enough to weigh the combinations and halves the time
     spectrum = colour[:, None, None, 1:].astype(np.float32) + bend.astype(np.float32)

@@ -29,7 +29,7 @@ class FittedCurve:
     final_value: float | None
 
 
-def curve_of(fit: Fit, points: Points, time: Array) -> FittedCurve:
+def curve_of(fit: Fit, points: Points, window_s: tuple[float, float]) -> FittedCurve:
     """Return the best model's response over the rows of a record, and the band of the allowed models.
 
     Parameters
@@ -37,10 +37,10 @@ def curve_of(fit: Fit, points: Points, time: Array) -> FittedCurve:
     fit : Fit
     points : Points
         Models on the likelihood-ratio surface, the best first.
-    time : (n,) array
-        Rows of the record, s.
+    window_s : (begin, end)
+        Of the curve, s.
     """
-    grid = np.linspace(time[0], time[-1], _GRID)
+    grid = np.linspace(*window_s, _GRID)
     if fit.columns.input is not None:
         steps = fit.columns.input.times
         steps = steps[(steps >= grid[0]) & (steps <= grid[-1])][:50]

@@ -195,32 +195,43 @@ class _UnitTimes:
     """Times in units of T as functions of r, with slopes by small differences, for the walkers' aims."""
 
     def __init__(self, r: Array, names: list[str], band: float) -> None:
-        self.r, self.names, self.band = r, names, band
+        self.band = band
+        nudges = 1.0 + _NUDGE * np.array([-1.0, 0.0, 1.0])[:, None]
+        self.spread = np.maximum(r, 1e-5)[None, :] * nudges
+        levels = {"rise": (0.1, 0.9), "delay": (0.5,), "settle": (1.0 - band,)}
+        wanted = [(i, level) for i, name in enumerate(names) for level in levels.get(name, ())]
+        if wanted:  # all crossings in one call
+            pairs = np.stack([self.spread[:, 2 * i : 2 * i + 2] for i, _ in wanted])
+            times = unit_step.crossing_time(pairs, np.array([level for _, level in wanted])[:, None, None])
+            self.crossings = {(names[i], level): time for (i, level), time in zip(wanted, times, strict=True)}
 
     def of(self, name: str, rows: slice) -> tuple[Array, Array]:
-        r = np.maximum(self.r[rows], 1e-5)
-        spread = r[None, :] * (1.0 + _NUDGE * np.array([-1.0, 0.0, 1.0]))[:, None]
-        low, middle, high = self._value(name, spread)
-        return middle, (high - low) / (2.0 * _NUDGE * r)
+        """Return value and slope in r for the walkers in these rows."""
+        r = self.spread[:, rows]
+        low, middle, high = self._value(name, r)
+        return middle, (high - low) / (r[2] - r[0])
 
     def _value(self, name: str, r: Array) -> Array:
-        if name == "rise":
-            ends = unit_step.crossing_time(r[..., None], np.array([0.1, 0.9]))
-            return np.asarray(ends[..., 1] - ends[..., 0])
-        if name == "delay":
-            return unit_step.crossing_time(r, 0.5)
-        if name == "settle":
-            return unit_step.crossing_time(r, 1.0 - self.band)
-        if name == "envelope":
-            return 2.0 * r * float(np.log(1.0 / self.band))
-        if name in ("peak", "damped"):
-            return np.pi * 2.0 * r / np.sqrt(np.maximum(4.0 * r - 1.0, 1e-3))
         root = np.sqrt(np.maximum(1.0 - 4.0 * r, 1e-6))
-        if name == "slow":
-            return 0.5 * (1.0 + root)
-        if name == "fast":
-            return 0.5 * (1.0 - root)
-        return np.ones_like(r)  # lag and dead time together
+        value: Array
+        match name:
+            case "rise":
+                value = self.crossings[name, 0.9] - self.crossings[name, 0.1]
+            case "delay":
+                value = self.crossings[name, 0.5]
+            case "settle":
+                value = self.crossings[name, 1.0 - self.band]
+            case "envelope":
+                value = 2.0 * r * np.log(1.0 / self.band)
+            case "peak" | "damped":
+                value = 2.0 * np.pi * r / np.sqrt(np.maximum(4.0 * r - 1.0, 1e-3))
+            case "slow":
+                value = 0.5 * (1.0 + root)
+            case "fast":
+                value = 0.5 * (1.0 - root)
+            case _:  # lag and dead time together
+                value = np.ones_like(r)
+        return value
 
 
 def _aim(

@@ -19,7 +19,7 @@ _MONTHS = {
     "dec": 12, "dez": 12, "déc": 12, "dic": 12,
 }  # fmt: skip
 _STAMP = re.compile(
-    r"\s*(?:(\d{1,4})([-/. ])([^\W\d_]{3,10}\.?|\d{1,2})[-/. ]+(\d{1,4}))?[T ,_]*"
+    r"\s*(?:(\d{1,4})([-/. ]) ?([^\W\d_]{3,10}\.?|\d{1,2})[-/. ]+(\d{1,4}))?[T ,_]*"
     r"(?:([+-]?\d{1,4}):(\d{2})(?::(\d{2}))?(?:[.,:](\d{1,9}))?\s*([aApP]\.?[mM]\.?)?)?\s*(Z|UTC|GMT|[+-]\d{2}:?\d{2})?\s*",
     re.ASCII | re.IGNORECASE,
 )
@@ -63,6 +63,10 @@ def numeric_clock(values: Array, name: str, unit: str | None, cells: Sequence[st
             (seconds_per(word) for word in reversed(words) if len(word) > 1 and seconds_per(word) is not None), None
         )
     middle = float(np.median(known)) if len(known) else 0.0
+    if 1.9e13 < middle < 2.2e13 and bool(np.all(known == np.floor(known))):  # 20260301115950
+        compact = stamp_clock([f"{int(v):014d}"[:8] + "T" + f"{int(v):014d}"[8:] if np.isfinite(v) else "" for v in values], name)
+        if compact is not None:
+            return compact
     per_second = next((count for low, high, count in _EPOCHS if low <= middle < high), None)
     if per_second is not None and (factor is None or abs(factor * per_second - 1) < 1e-9):
         return _epoch(values, name, per_second, cells)
@@ -138,7 +142,7 @@ def stamp_clock(cells: Sequence[str], name: str) -> Clock | None:
 
 def _iso(cells: Sequence[str]) -> Clock | None:
     """Return the clock of stamps that are all ISO 8601 with at most microseconds, None when any is not."""
-    if not cells or len(cells[0]) < 10 or not cells[0][:4].isdigit() or "-" not in cells[0][:8]:
+    if not cells or len(cells[0]) < 10 or not cells[0][:4].isdigit() or ("-" not in cells[0][:8] and cells[0][8:9] != "T"):
         return None
     if any(len(cell) > 26 and re.search(r"[.,]\d{7}", cell) for cell in (cells[0], cells[-1])):
         return None

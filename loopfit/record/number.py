@@ -81,6 +81,9 @@ def column_of_numbers(cells: Sequence[str], marks: Marks) -> tuple[Array, str | 
         if len(values) and np.isfinite(values).all():
             return values, None
     values = np.full(len(cells), np.nan)
+    filled = [cell for cell in cells[:: max(1, len(cells) // 200)] if cell]
+    if len(filled) > 20 and not any(parse_number(cell, marks) for cell in filled):
+        return values, None  # a column of stamps or texts
     units: dict[str, int] = {}
     for index, cell in enumerate(cells):
         parsed = parse_number(cell.strip(), marks)

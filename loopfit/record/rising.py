@@ -186,31 +186,30 @@ def _spread(name: str, seconds: Array, findings: list[Finding]) -> Array:
     starts = np.concatenate([[0], np.flatnonzero(np.diff(seconds) > 0) + 1])
     stamps = seconds[starts]
     counts = np.diff(np.append(starts, len(seconds)))
-    resolution = float(np.median(np.diff(stamps)))
     index = np.arange(len(seconds), dtype=np.float64)
     # the first and the last stamp may be shared by fewer rows: the mean interval comes from the whole ones between
     inner = slice(1, -1) if len(stamps) > 4 else slice(0, None)
-    slope = float(np.ptp(stamps[inner])) / float(np.ptp(starts[inner]))
-    line = slope * index + seconds[0]
-    lag = line - seconds
-    if slope > 0 and float(np.ptp(lag)) <= 1.5 * resolution + slope:
+    interval = float(np.ptp(stamps[inner])) / float(np.ptp(starts[inner]))
+    wait = float(np.quantile(np.diff(stamps), 0.9))
+    even: Array = interval * index + seconds[0]
+    regular = int(np.ptp(counts[inner])) <= max(1, 0.1 * float(np.median(counts)))
+    if float(np.ptp(even - seconds)) <= 1.5 * wait + interval:
         text = (
-            f"{name!r} gives one stamp to {int(np.median(counts))} rows or so (steps of {resolution:g} s); the rows are taken as evenly "
-            f"spaced, {slope:.4g} s apart, so times carry an uncertainty of up to {resolution:g} s, the same for all rows"
+            f"{name!r} gives one stamp to {'about ' if regular else '1 to '}{int(np.median(counts) if regular else counts.max())} rows; the rows "
+            f"are taken as evenly spaced, {interval:.4g} s apart, so times are uncertain by up to {wait:.3g} s, the same for all rows"
         )
-        findings.append(Finding(code="coarse_stamps", severity="note", text=text))
-        even: Array = line
+        findings.append(Finding(code="coarse_stamps" if regular else "stamps_in_bursts", severity="note" if regular else "warning", text=text))
         return even
-    spread = np.interp(
-        index, np.append(starts, len(seconds)), np.append(stamps, stamps[-1] + float(counts[-1]) * max(slope, 1e-12))
-    )
+    # a stamp's rows reach until the next stamp, but not over a gap
+    usual = float(np.median(np.diff(stamps) / counts[:-1]))
+    ends = np.minimum(np.append(stamps[1:], np.inf), stamps + 1.5 * usual * counts)
+    spread: Array = np.repeat(stamps, counts) + (index - np.repeat(starts, counts)) * np.repeat((ends - stamps) / counts, counts)
     text = (
-        f"{name!r} gives one stamp to several rows, unevenly (1 to {int(counts.max())} rows); the rows of a stamp are spread "
-        f"until the next one, so single times may be wrong by {float(np.diff(stamps).max()):.3g} s: dead time and fast motion are doubtful"
+        f"{name!r} gives one stamp to 1 to {int(counts.max())} rows, unevenly; the rows of a stamp are spread until the next one, "
+        f"so single times may be wrong by {wait:.3g} s: dead time and fast motion are doubtful"
     )
     findings.append(Finding(code="stamps_in_bursts", severity="warning", text=text))
-    result: Array = spread
-    return result
+    return spread
 
 
 def _spacing(

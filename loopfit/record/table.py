@@ -93,9 +93,8 @@ def table_from_rows(
     else:
         ragged_tail = 0
         if cells and not closed:
-            text = f"the file does not end with a line break, so its last row ({lines[-1]}) may be incomplete; it is used as it stands"
-            findings.append(Finding(code="no_final_line_break", severity="note", text=text))
-    columns = [_column(place, header, column, layout) for place, column in enumerate(zip(*cells, strict=True))]
+            findings.append(unclosed(lines[-1]))
+    columns = [column_of(place, header, column, layout) for place, column in enumerate(zip(*cells, strict=True))]
     keep = np.ones(len(cells), dtype=bool)
     for index in _rows_without_values(columns, wanted, len(cells)):
         row = cells[index]
@@ -114,12 +113,7 @@ def table_from_rows(
         restarts = [int(kept_before[index]) for index in restarts]
     placed = np.array(lines, dtype=np.int64)[keep]
     findings += _row_findings(ragged, texts, repeats, width, placed)
-    if header.named is False and len(placed):
-        text = "the file has no line of column names; its columns are called by their numbers"
-        findings.append(Finding(code="no_header", severity="note", text=text))
-    if layout.thousands_guessed:
-        text = f"a {layout.marks.thousands!r} before three digits is read as a mark between thousands, since smaller numbers have none"
-        findings.append(Finding(code="thousands_mark", severity="warning", text=text))
+    findings += opening_findings(header, layout, len(placed))
     return Table(
         source=source,
         lines=placed,
@@ -132,7 +126,26 @@ def table_from_rows(
     )
 
 
-def _column(place: int, header: Header, cells: Sequence[str], layout: Layout) -> Column:
+def opening_findings(header: Header, layout: Layout, rows: int) -> list[Finding]:
+    """Return what there is to say of the header and the marks."""
+    findings = []
+    if not header.named and rows:
+        text = "the file has no line of column names; its columns are called by their numbers"
+        findings.append(Finding(code="no_header", severity="note", text=text))
+    if layout.thousands_guessed:
+        text = f"a {layout.marks.thousands!r} before three digits is read as a mark between thousands, since smaller numbers have none"
+        findings.append(Finding(code="thousands_mark", severity="warning", text=text))
+    return findings
+
+
+def unclosed(line: int) -> Finding:
+    """Return the finding that the last line has no line break."""
+    text = f"the file does not end with a line break, so its last row ({line}) may be incomplete; it is used as it stands"
+    return Finding(code="no_final_line_break", severity="note", text=text)
+
+
+def column_of(place: int, header: Header, cells: Sequence[str], layout: Layout) -> Column:
+    """Return a column of cells: numbers when at least six filled cells in ten are, else text."""
     values, unit = column_of_numbers(cells, layout.marks)
     good = np.isfinite(values)
     usable = bool(good.any())

@@ -2,16 +2,22 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 from loopfit.core.errors import RecordError
 from loopfit.core.finding import Finding
 from loopfit.record.encoding import decode
+from loopfit.record.fast import table_by_columns
 from loopfit.record.header import find_header, is_comment
 from loopfit.record.layout import Layout, find_layout, numeric_columns, rows_of
 from loopfit.record.table import Table, table_from_rows
 
 LONG = 1_000_000  # characters from which whole columns pay
+_HEAD = 60_000  # characters in which the header must end
 _SAMPLE = 150
 _LONGEST_LINE = 200_000
+_MOST_LINES = 20_000_000
+_MOST_CELLS = 40_000_000
 
 
 def table_from_text(source: str, data: bytes) -> Table:
@@ -35,24 +41,56 @@ def table_from_text(source: str, data: bytes) -> Table:
         text = text.replace("\0", "")
         note = f"{count} zero bytes left out, as a logger writes them when its power fails; rows may be missing there"
         findings.append(Finding(code="zero_bytes", severity="warning", text=note))
-    text = text.replace("\x1a", "") if text[-10:].find("\x1a") >= 0 else text
-    closed = text.endswith(("\n", "\r"))
+    if "\x1a" in text[-10:]:
+        text = text.replace("\x1a", "")
     if "\r" in text:
         text = text.replace("\r\n", "\n").replace("\r", "\n")
+    table = _by_columns(source, text) if len(text) > LONG else None
+    if table is None:
+        table = _by_rows(source, text)
+    return replace(table, findings=(*findings, *table.findings))
+
+
+def _by_rows(source: str, text: str) -> Table:
+    closed = text.endswith("\n")
+    if text.count("\n") > _MOST_LINES:
+        raise RecordError(source, f"more than {_MOST_LINES // 10**6} million lines; keep only the part with the step test")
     lines = text.split("\n")
     if closed:
         lines.pop()
-    table = _by_rows(source, lines, closed)
-    if not findings:
-        return table
-    return _with_findings(table, findings)
-
-
-def _by_rows(source: str, lines: list[str], closed: bool) -> Table:
-    layout, numeric = layout_of(source, lines)
+    full = [line for line in lines if line.strip()]
+    longest = max(range(len(lines)), key=lambda place: len(lines[place]))
+    if len(lines[longest]) > _LONGEST_LINE:
+        reason = f"the line is {len(lines[longest])} characters long; this does not look like rows of a recording"
+        raise RecordError(source, reason, row=longest + 1)
+    layout, numeric = layout_of(source, full)
+    if len(lines) * layout.width > _MOST_CELLS:
+        raise RecordError(source, f"{len(lines)} rows of {layout.width} columns are too many; keep only the part with the step test")
     rows = list(rows_of(lines, layout.delimiter))
     header = find_header(rows, layout, numeric, lines)
     return table_from_rows(source, rows, header, layout, numeric, closed=closed)
+
+
+def _by_columns(source: str, text: str) -> Table | None:
+    """Return the table of a long text by the quick way, None when a row needs a closer look."""
+    head = text[:_HEAD].split("\n")[:-1]
+    stride = len(text) // 12
+    places = [stride * part for part in range(1, 12)]
+    inside = [line for place in places for line in text[place : place + 2000].split("\n")[1:-1][:12]]
+    if not head or not inside:
+        return None
+    full = [line for line in [*head[:150], *inside] if line.strip()]
+    try:
+        layout, numeric = layout_of(source, full)
+    except RecordError:  # let every line have its say
+        return None
+    rows = list(rows_of(head, layout.delimiter))
+    header = find_header(rows, layout, numeric, head)
+    if header.first >= len(rows):
+        return None
+    first_line = rows[header.first][0]
+    start = sum(len(line) + 1 for line in head[: first_line - 1])
+    return table_by_columns(source, text, header, layout, numeric, start, first_line)
 
 
 def layout_of(source: str, lines: list[str]) -> tuple[Layout, list[bool]]:
@@ -66,10 +104,6 @@ def layout_of(source: str, lines: list[str]) -> tuple[Layout, list[bool]]:
     full = [line for line in lines if line.strip()]
     if not full:
         raise RecordError(source, "the file is empty but for blanks")
-    longest = max(range(len(lines)), key=lambda place: len(lines[place]))
-    if len(lines[longest]) > _LONGEST_LINE:
-        reason = f"the line is {len(lines[longest])} characters long; this does not look like rows of a recording"
-        raise RecordError(source, reason, row=longest + 1)
     plain = [line for line in full if not is_comment(line)]
     stride = max(1, len(plain) // _SAMPLE)
     sample = plain[:20] + plain[20::stride] if stride > 1 else plain
@@ -78,16 +112,3 @@ def layout_of(source: str, lines: list[str]) -> tuple[Layout, list[bool]]:
         raise RecordError(source, "no rows of numbers found; a recording has one row per time, with a column for each signal")
     rows = [cells for _, cells in rows_of(sample, layout.delimiter)]
     return layout, numeric_columns(rows, layout)
-
-
-def _with_findings(table: Table, findings: list[Finding]) -> Table:
-    return Table(
-        source=table.source,
-        lines=table.lines,
-        columns=table.columns,
-        named=table.named,
-        preamble=table.preamble,
-        restarts=table.restarts,
-        set_aside=table.set_aside,
-        findings=(*findings, *table.findings),
-    )

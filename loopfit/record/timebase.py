@@ -76,7 +76,7 @@ def time_base(table: Table, wanted: Column | None, interval_s: float | None, tak
     claimed = [
         c
         for c in free
-        if c.values is not None and weight(c.name, "time") == 2 and c not in named and _mostly_rises(c.values)
+        if c.values is not None and weight(c.name, "time") == 2 and c not in named and _claims_time(c, c.values)
     ]
     if named or claimed:
         return _numeric((named or claimed)[0], free, ())
@@ -195,9 +195,11 @@ def _is_rising(values: Array) -> bool:
     return bool(np.all(step >= 0)) and known[-1] > known[0] and float(np.mean(step > 0)) > 0.05
 
 
-def _mostly_rises(values: Array) -> bool:
-    known = values[np.isfinite(values)]
-    return len(known) >= 2 and float(np.mean(np.diff(known) >= 0)) >= 0.5
+def _claims_time(column: Column, values: Array) -> bool:
+    """Return whether a column named for the time rises in half of the rows, or falls throughout under a name that means nothing else."""
+    step = np.diff(values[np.isfinite(values)])
+    falls = len(column.name) > 1 and bool(np.all(step < 0))
+    return len(step) > 0 and (falls or float(np.mean(step > 0)) >= 0.5)
 
 
 def _is_even(values: Array | None) -> bool:

@@ -7,6 +7,7 @@ import io
 import re
 import zipfile
 from collections.abc import Sequence
+from dataclasses import replace
 
 from loopfit.core.errors import RecordError
 from loopfit.core.finding import Finding
@@ -50,16 +51,7 @@ def table_from_workbook(source: str, data: bytes) -> Table:
         rest = names_text([name for name in filled if name != best])
         text = f"the sheet {best!r} is read, which has most rows of numbers; not read: {rest}"
         finding = Finding(code="sheet_chosen", severity="note", text=text)
-        return Table(
-            source=source,
-            lines=table.lines,
-            columns=table.columns,
-            named=table.named,
-            preamble=table.preamble,
-            restarts=table.restarts,
-            set_aside=table.set_aside,
-            findings=(finding, *table.findings),
-        )
+        return replace(table, findings=(finding, *table.findings))
     return table
 
 

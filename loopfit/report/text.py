@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import textwrap
 
 from loopfit.analysis.result import Analysis, Model, ResponseFigures, StepUsed
 from loopfit.core.quantity import Quantity
@@ -10,6 +11,8 @@ from loopfit.core.rounding import decimals_for, decimals_of, number
 from loopfit.record.record import Signal
 
 _NAME, _UNIT, _VALUE, _RANGE = 23, 12, 11, 24
+_WIDTH, _LABEL = 100, 13
+_ORDER = ("error", "warning", "note")
 _KINDS = {
     "second_order": "second order with dead time",
     "first_order": "first order with dead time",
@@ -27,7 +30,8 @@ def page(analysis: Analysis) -> str:
     if analysis.model is not None:
         parts.append(_model_line(analysis.model))
     if analysis.findings:
-        parts.append("Findings\n" + "\n".join(_wrapped(f.severity, f.text) for f in analysis.findings))
+        ordered = sorted(analysis.findings, key=lambda finding: _ORDER.index(finding.severity))
+        parts.append("Findings\n" + "\n".join(_wrapped(f.severity, f.text) for f in ordered))
     return "\n\n".join(parts)
 
 
@@ -132,7 +136,13 @@ def _table(analysis: Analysis) -> str:
         rate = f"{per or '-'}/s" if model.kind == "integrating" else per
         rows += _rows(
             ("damping ratio", "", model.damping_ratio, None),
-            ("natural frequency", "rad/s", model.natural_frequency_rad_s, None),
+            # a first-order lag has no natural frequency worth reading
+            (
+                "natural frequency",
+                "rad/s",
+                None if model.kind == "first_order" else model.natural_frequency_rad_s,
+                None,
+            ),
             ("damped frequency", "rad/s", model.damped_frequency_rad_s, None),
             ("damped period", "s", model.damped_period_s, None),
             ("gain", rate, model.gain, None),
@@ -191,6 +201,8 @@ def _rows(*rows: tuple[str, str, Quantity | None, Quantity | None]) -> list[str]
 def _cells(quantity: Quantity | None) -> tuple[str, str]:
     if quantity is None:
         return "", ""
+    if quantity.value == quantity.low == quantity.high == 0.0:
+        return "0", ""
     places = decimals_of(quantity)
     value = number(quantity.value, places) if math.isfinite(quantity.value) else "none"
     if math.isinf(quantity.high):
@@ -203,7 +215,7 @@ def _seen(quantity: Quantity | None) -> str:
     if quantity is None:
         return ""
     value, interval = _cells(quantity)
-    return f"{value} ({interval})"
+    return f"{value} ({interval})" if interval else value
 
 
 def _model_line(model: Model) -> str:
@@ -212,16 +224,9 @@ def _model_line(model: Model) -> str:
     return _wrapped("model", first) + "".join("\n" + _wrapped("", reason) for reason in model.reasons)
 
 
-def _wrapped(label: str, text: str, width: int = 100) -> str:
-    lines, line = [], ""
-    for word in text.split():
-        if line and len(line) + 1 + len(word) > width - 13:
-            lines.append(line)
-            line = word
-        else:
-            line = f"{line} {word}" if line else word
-    lines.append(line)
-    return "\n".join(f"{label if i == 0 else '':<13}{line}".rstrip() for i, line in enumerate(lines))
+def _wrapped(label: str, text: str) -> str:
+    lines = textwrap.fill(text, _WIDTH, initial_indent=f"{label:<{_LABEL}}", subsequent_indent=" " * _LABEL)
+    return lines.rstrip()
 
 
 def _of(response: ResponseFigures | None, name: str) -> Quantity | None:

@@ -24,4 +24,15 @@ def release_row(values: Array, noise: float) -> int:
     near = np.abs(values - level) <= _HELD * noise + 1e-12 * float(np.ptp(values))
     away = np.flatnonzero(~near)
     first_away = int(away[0]) if away.size else values.size
-    return first_away - 1 if _HELD_ROWS < first_away < values.size else 0
+    if not _HELD_ROWS < first_away < values.size:
+        return 0
+    return first_away - 1 if _is_flat(values[: max(first_away - first_away // 4, _HELD_ROWS)], noise) else 0
+
+
+def _is_flat(values: Array, noise: float) -> bool:
+    """Tell whether rows are level: no slope or bend beyond their noise (a swing at its turning point has one)."""
+    x = np.linspace(-1.0, 1.0, values.size)
+    shapes = np.stack([x, x * x - np.mean(x * x)])
+    shapes /= np.linalg.norm(shapes, axis=1, keepdims=True)
+    moved = shapes @ (values - values.mean())
+    return bool(np.all(np.abs(moved) <= _HELD * noise + 1e-12 * float(np.ptp(values))))

@@ -56,11 +56,11 @@ def ultrasonic(x: Array, theta: Array) -> Parts:
 
 @dataclass(frozen=True)
 class Form:
-    """A model, its start from the certified parameters, and the matrix from (coordinates, linear) to b1, b2, ..."""
+    """A model: columns, coordinates of a start b, and the map from (coordinates, linear parameters) to b1, b2, ..."""
 
     columns: Callable[[Array, Array], Parts]
     start: Callable[[Array], list[float]]
-    certified_order: Callable[[Array], Array]  # (theta..., linear...) -> b
+    certified_order: Callable[[Array], Array]
 
 
 RISE = Form(rise, lambda b: [b[1]], lambda v: v[[1, 0]])
@@ -79,21 +79,18 @@ FORMS = {
     "Chwirut2": ULTRASONIC,
 }
 
-# Measured with numpy 2.4 and OpenBLAS on x86-64: digits from start 1 and 2 by `minimise` alone, then after
-# undamped steps with the same Jacobian. `minimise` stops when rounding hides any gain in the sum of squares,
-# which leaves about sqrt(eps) of a standard deviation: half the digits of a badly determined parameter.
+# Digits after undamped last steps, measured with numpy 2.4 and OpenBLAS on x86-64, from both starts.
 REACHED = {
-    "Misra1a": (11.1, 10.6, 11.1),
-    "BoxBOD": (9.9, 8.9, 11.0),  # six rows, standard deviation of b2 19 %
-    "MGH17": (10.6, 10.8, 10.8),
-    "Lanczos1": (10.6, 10.6, 10.5),  # certified values themselves rest on rounding: rss is 1e-25
-    "Lanczos2": (10.4, 10.4, 10.4),
-    "Lanczos3": (8.2, 6.9, 10.5),  # standard deviation of b1 20 %
-    "Chwirut1": (10.7, 10.5, 10.7),
-    "Chwirut2": (10.1, 10.9, 10.9),
+    "Misra1a": 11.1,
+    "BoxBOD": 11.0,
+    "MGH17": 10.8,
+    "Lanczos1": 10.5,
+    "Lanczos2": 10.4,
+    "Lanczos3": 10.5,
+    "Chwirut1": 10.7,
+    "Chwirut2": 10.9,
 }
-MARGIN = 1.0  # another order of summation may stop one step earlier
-POLISHED_MARGIN = 0.5
+MARGIN = 0.5  # certified values have 11 digits; another order of summation moves the last
 
 
 @cache
@@ -134,7 +131,7 @@ def solved(name: str, start: int, *, polish: bool = False) -> tuple[Array, float
         rounds=2000,
     )
     assert found.settled.all()
-    theta = found.theta
+    theta = np.sort(found.theta) if form.columns in (decays, decays_and_offset) else found.theta
     for _ in range(200 if polish else 0):
         columns, slopes = form.columns(x, theta)
         best = solve_linear(columns, y)
@@ -148,36 +145,44 @@ def solved(name: str, start: int, *, polish: bool = False) -> tuple[Array, float
     _, triangle = np.linalg.qr(jacobian.T)
     root = np.linalg.inv(triangle)
     order = form.certified_order
-    step = 1e-6 * values  # of a map that is at most a quotient: complex steps give it to rounding
-    moved = np.array(
-        [order(values + 1j * np.where(np.arange(values.size) == i, step, 0.0)).imag / step[i] for i in range(values.size)]
-    )
+    tiny = 1e-20  # complex steps give the slopes of the map to rounding
+    moved = np.array([order(values + 1j * tiny * row).imag / tiny for row in np.eye(values.size)])
     spread = np.sqrt(variance * np.sum((moved.T @ root) ** 2, axis=1))
     return order(values), float(best.sse[0]), spread
 
 
 @pytest.mark.parametrize("start", [1, 2])
 @pytest.mark.parametrize("name", FORMS)
-def test_certified_digits_from_certified_starts(name: str, start: int) -> None:
+def test_minimum_from_certified_starts(name: str, start: int) -> None:
+    """`minimise` alone ends as near the certified minimum as its sum of squares can tell.
+
+    A residual e of values y carries rounding of eps |y|, so that its square is known to eps |y| / |e| of itself and the
+    minimum to the root of that in standard deviations. Over 80 starts moved by 0.1 % the largest distance was 3 times
+    that; typical digits then: Misra1a 11.1, BoxBOD 9.2, MGH17 9.3, Lanczos1 10.6, Lanczos2 10.4, Lanczos3 9.5 (least
+    6.2), Chwirut1 9.8, Chwirut2 10.1.
+    """
     found, sse, _ = solved(name, start)
-    assert digits(found, parameters(name, 3)) > REACHED[name][start - 1] - MARGIN
+    wanted, spread = parameters(name, 3), parameters(name, 4)
+    rss = float(certified()[name]["rss"])
+    blind = np.sqrt(np.finfo(float).eps * np.linalg.norm(rows(name)[1]) / np.sqrt(rss))
+    assert np.all(np.abs(found - wanted) <= 10.0 * blind * spread + 1e-10 * np.abs(wanted))
     if name != "Lanczos1":  # 24 residuals of 1e-13 beside values of 2.5 are rounding
-        assert digits(np.array([sse]), np.array([float(certified()[name]["rss"])])) > 9.0
+        assert digits(np.array([sse]), np.array([rss])) > 9.0
 
 
 @pytest.mark.parametrize("start", [1, 2])
 @pytest.mark.parametrize("name", FORMS)
 def test_certified_digits_with_undamped_last_steps(name: str, start: int) -> None:
     found, _, _ = solved(name, start, polish=True)
-    assert digits(found, parameters(name, 3)) > REACHED[name][2] - POLISHED_MARGIN
+    assert digits(found, parameters(name, 3)) > REACHED[name] - MARGIN
 
 
 @pytest.mark.parametrize("start", [1, 2])
 @pytest.mark.parametrize("name", [name for name in FORMS if name != "Lanczos1"])
 def test_certified_standard_deviations(name: str, start: int) -> None:
     _, _, spread = solved(name, start, polish=True)
-    print(name, start, digits(spread, parameters(name, 4)))
-    assert digits(spread, parameters(name, 4)) > 8.0
+    # measured: 10.0 (Lanczos2) to 11.2
+    assert digits(spread, parameters(name, 4)) > 9.5
 
 
 def test_both_starts_at_once_reach_the_same_minimum() -> None:
@@ -187,5 +192,5 @@ def test_both_starts_at_once_reach_the_same_minimum() -> None:
     found = minimise(
         lambda t: rise(x, t), y, theta, lowest=np.array([-np.inf]), free=np.array([True]), tolerance=1e-28, rounds=500
     )
-    # sqrt(eps) of a standard deviation (0.105), see REACHED
-    assert found.theta[:, 0] == pytest.approx(parameters("BoxBOD", 3)[1], abs=1.5e-8 * 0.105 * 10)
+    # bound as above: 10 sqrt(eps |y| / |e|) standard deviations of 0.105
+    assert found.theta[:, 0] == pytest.approx(parameters("BoxBOD", 3)[1], rel=0, abs=6e-8)
