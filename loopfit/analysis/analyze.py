@@ -156,7 +156,7 @@ def analyze_record(
         if prepared.step is not None:
             findings += other_inputs(record, trace, prepared.step)
             findings += standing_offset(observed, figures["gain"], prepared.step)
-    model = None if verdict.refused else model_of(fit, figures, verdict)
+    model = None if verdict.refused else model_of(fit, figures, verdict, record.sample_interval_s)
     return Analysis(
         record=record,
         findings=tuple(findings),

@@ -40,6 +40,16 @@ def around_the_step(trace: Trace, fit: Fit, figures: dict[str, Quantity | None],
                 ),
             )
         )
+    if fit.structure.rungs == (2,):
+        findings.append(
+            Finding(
+                code="still_ramping",
+                severity="warning",
+                at_s=(end, end),
+                text="The measurement still ramps when the record ends: it is taken as integrating, but a lag much longer "
+                "than the record would look the same.",
+            )
+        )
     settling = figures.get("settling_time_s")
     if trace.input is None or settling is None or settling.value <= end - trace.begins:
         return findings

@@ -13,11 +13,12 @@ from loopfit.fit.surface import Surface
 
 _MOST_DAMPED = 11.0  # a damping ratio beyond this is a first-order lag (r = 0.002)
 _NEAR_CRITICAL = (0.95, 1.05)
+_UNSEEN = 0.5  # lags shorter than this many rows are no more than a dead time
 
 
-def model_of(fit: Fit, figures: Figures, verdict: Verdict) -> Model:
+def model_of(fit: Fit, figures: Figures, verdict: Verdict, interval: float) -> Model:
     """Return the model with its intervals, regime and adequacy."""
-    kind = _kind(fit, figures)
+    kind = _kind(fit, figures, interval)
     damping = None if kind in ("integrating", "dead_time") else figures["damping_ratio"]
     damping = None if damping is None else _capped(damping)
     target = fit.columns.target
@@ -29,8 +30,8 @@ def model_of(fit: Fit, figures: Figures, verdict: Verdict) -> Model:
         gain=figures["gain"],
         damping_ratio=damping,
         natural_frequency_rad_s=_frequency(figures["natural_frequency_rad_s"], damping),
-        damped_frequency_rad_s=figures["damped_frequency_rad_s"],
-        damped_period_s=figures["damped_period_s"],
+        damped_frequency_rad_s=None if kind == "dead_time" else figures["damped_frequency_rad_s"],
+        damped_period_s=None if kind == "dead_time" else figures["damped_period_s"],
         dead_time_s=figures["dead_time_s"],
         time_constants_s=_lags(kind, figures["slow_time_constant_s"], figures["fast_time_constant_s"]),
         lag_plus_dead_time_s=figures["lag_plus_dead_time_s"],
@@ -43,12 +44,16 @@ def model_of(fit: Fit, figures: Figures, verdict: Verdict) -> Model:
     )
 
 
-def _kind(fit: Fit, figures: Figures) -> Kind:
+def _kind(fit: Fit, figures: Figures, interval: float) -> Kind:
     if fit.structure.rungs == (2,):
         return "integrating"
     if fit.structure.rungs == (1, 0):
         return "second_order_zero"
-    damping = figures["damping_ratio"]
+    damping, frequency = figures["damping_ratio"], figures["natural_frequency_rad_s"]
+    if damping is not None and frequency is not None and fit.columns.input is not None:
+        unseen = _UNSEEN * interval
+        if 2.0 * damping.value < unseen * frequency.value and unseen * frequency.value > 1.0:
+            return "dead_time"
     if damping is not None and damping.value > _MOST_DAMPED and damping.high == math.inf:
         return "first_order"
     return "second_order"
@@ -66,7 +71,7 @@ def _frequency(frequency: Quantity | None, damping: Quantity | None) -> Quantity
 
 
 def _lags(kind: Kind, slow: Quantity | None, fast: Quantity | None) -> tuple[Quantity, ...] | None:
-    if slow is None or fast is None:
+    if slow is None or fast is None or kind == "dead_time":
         return None
     return (slow,) if kind in ("first_order", "integrating") else (slow, fast)
 

@@ -61,6 +61,13 @@ def prepare(record: Record, *, number: int | None, stated: StatedStep | None) ->
     RecordError
         If there is no such step, or too little of the record after it.
     """
+    if np.ptp(record.measurement.values) == 0:
+        raise RecordError(
+            record.source,
+            "the measurement is the same in every row: nothing moved, or the wrong column was taken "
+            "(choose with --measurement)",
+            column=record.measurement.name,
+        )
     if stated is not None:
         return _stated(record, stated)
     found, other = _stepped(record)

@@ -12,7 +12,37 @@ from loopfit.core.quantity import Quantity
 _PARTS = (4, 5, 6, 8, 10, 14, 20)  # the record is cut into this many equal parts; the last three are compared
 _FEWEST_POINTS = 3  # in a part
 _STILL_MOVING = 0.05  # of the change; a tail that visibly drifts and may have more than this to go is not at rest
+LAST_SWING = 0.02  # of the change
 _DURATION = np.geomspace(0.5, 40.0, 80)  # of the record in time constants of the slowest part of the motion
+
+
+def moving_rows(since: Array, values: Array, fewest: int) -> int:
+    """Return how many rows hold the motion and as much rest again; the others are at rest to within the noise.
+
+    The time is halved as long as the half given up scatters no more about the rest value than the last half
+    of the record does.
+    """
+    half = int(np.searchsorted(since, since[-1] / 2))
+    square = (values - values[half:].mean()) ** 2
+    noise, count, limit = square[half:].mean(), values.size - half, values.size
+    while half >= fewest:
+        quarter = int(np.searchsorted(since, since[half] / 2))
+        # mean squares of the two stretches differ by chance by this factor (coloured noise has fewer free rows)
+        chance = 1 + 4 * math.sqrt(1 / max(half - quarter, 1) + 1 / count)
+        if not square[quarter:half].mean() <= chance * noise:
+            break
+        limit, half = half, quarter
+    return limit
+
+
+def room_for_a_swing(final: Quantity, change: float, moving: float, end: float) -> Quantity:
+    """Return the final value with room for a last small swing, on top of which a short record may end.
+
+    A swing below 2 % of the change shows little at its top and lasts about as long as the motion before it. A
+    record (up to `end`) at rest for 1.5 times as long as it moved needs no room; one just at rest needs 2 %.
+    """
+    room = LAST_SWING * change * max(1 - (end - moving) / (1.5 * moving), 0.0)
+    return Quantity(final.value, final.low - room, final.high + room)
 
 
 def resting_value(values: Array, start: float, variance: float, quantile: float) -> Quantity | None:

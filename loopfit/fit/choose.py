@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import numpy as np
 
@@ -30,22 +31,18 @@ def choose(trace: Trace, noise: float, *, noise_floor: float) -> Fit:
     best = fit_trace(trace, start, noise_floor=noise_floor)
     if trace.input is None:
         return best
-    if _may_integrate(best, trace):
+    if start.moving_start:  # a drift is considered only where the rows before the step show movement
+        rival = fit_trace(trace, Structure(drift=True), noise_floor=noise_floor)
+        best = min(best, rival, key=criterion)
+    if _may_integrate(best, trace) and not best.structure.drift:
         rival = fit_trace(trace, Structure(rungs=(2,), first_order=True), noise_floor=noise_floor)
         if criterion(rival) <= criterion(best) + 2.0:
             return rival
     if best.colour * math.sqrt(best.columns.target.size) < _STRUCTURED:
         return best
-    rivals = [Structure(rungs=(1, 0), moving_start=start.moving_start)]
-    if start.moving_start:  # without movement before the step, a drift is only noise that the model would follow
-        rivals.append(Structure(drift=True))
-    plain = best
-    for structure in rivals:
-        rival = fit_trace(trace, structure, noise_floor=noise_floor)
-        clearly = criterion(rival) < criterion(best) - _EVIDENCE
-        if clearly and structured(rival, noise) < _HALVED * structured(plain, noise):
-            best = rival
-    return best
+    rival = fit_trace(trace, replace(best.structure, rungs=(1, 0)), noise_floor=noise_floor)
+    clearly = criterion(rival) < criterion(best) - _EVIDENCE
+    return rival if clearly and structured(rival, noise) < _HALVED * structured(best, noise) else best
 
 
 def criterion(fit: Fit) -> float:

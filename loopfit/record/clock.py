@@ -5,9 +5,10 @@ from __future__ import annotations
 import re
 from collections.abc import Sequence
 from dataclasses import dataclass
-from datetime import date, datetime, timezone
+from datetime import date, datetime, time, timedelta
 
 import numpy as np
+from numpy.typing import NDArray
 
 from loopfit.core.arrays import Array
 from loopfit.core.finding import Finding
@@ -23,6 +24,7 @@ _STAMP = re.compile(
     r"(?:([+-]?\d{1,4}):(\d{2})(?::(\d{2}))?(?:[.,:](\d{1,9}))?\s*([aApP]\.?[mM]\.?)?)?\s*(Z|UTC|GMT|[+-]\d{2}:?\d{2})?\s*",
     re.ASCII | re.IGNORECASE,
 )
+_MICROSECOND = timedelta(microseconds=1)
 _STAMP_WORDS = re.compile(_STAMP.pattern, re.IGNORECASE)
 # size of a time since 1970 (or 1601, 0001 for ticks of 100 ns), and its units in a second
 _EPOCHS = (
@@ -47,6 +49,11 @@ class Clock:
     of_day_s: Array | None
     weekday: Array | None
     findings: tuple[Finding, ...]
+
+    def part(self, rows: NDArray[np.int64]) -> Clock:
+        """Return the clock of some rows, without its findings."""
+        of_day, weekday = (None if values is None else values[rows] for values in (self.of_day_s, self.weekday))
+        return Clock(seconds=self.seconds[rows], kind=self.kind, of_day_s=of_day, weekday=weekday, findings=())
 
 
 class UndecidedStampsError(ValueError):
@@ -150,21 +157,17 @@ def _iso(cells: Sequence[str]) -> Clock | None:
         stamps = [datetime.fromisoformat(cell) for cell in cells]
     except ValueError:
         return None
-    zoned = [stamp.tzinfo is not None for stamp in (stamps[0], stamps[-1])]
-    if any(zoned):
-        if not all(stamp.tzinfo is not None for stamp in stamps):
-            return None
-        stamps = [stamp.astimezone(timezone.utc).replace(tzinfo=None) for stamp in stamps]
+    first = stamps[0]
     try:
-        ticks = np.array(stamps, dtype="datetime64[us]").astype(np.int64)
-    except (ValueError, TypeError):
+        ticks = np.array([(stamp - first) // _MICROSECOND for stamp in stamps], dtype=np.int64)
+    except TypeError:  # some with a zone and some without
         return None
-    seconds = (ticks - ticks[0]) / 1e6
-    of_day = None if any(zoned) else (ticks % 86_400_000_000) / 1e6
-    weekday = (
-        None if any(zoned) else ((ticks // 86_400_000_000 + 3) % 7).astype(np.float64)
-    )  # 1 January 1970 was a Thursday
-    return Clock(seconds=seconds, kind="date", of_day_s=of_day, weekday=weekday, findings=())
+    if first.tzinfo is not None:
+        return Clock(seconds=ticks / 1e6, kind="date", of_day_s=None, weekday=None, findings=())
+    of_day = ticks + (first - datetime.combine(first.date(), time())) // _MICROSECOND
+    days = of_day // 86_400_000_000
+    weekday = ((days + first.weekday()) % 7).astype(np.float64)
+    return Clock(seconds=ticks / 1e6, kind="date", of_day_s=(of_day % 86_400_000_000) / 1e6, weekday=weekday, findings=())
 
 
 _Groups = Sequence["tuple[str | None, ...] | None"]

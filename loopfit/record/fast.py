@@ -2,76 +2,65 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 import numpy as np
 
+from loopfit.core.arrays import Array
 from loopfit.record.header import Header
 from loopfit.record.layout import Layout, split_line
+from loopfit.record.number import Marks, parse_number
 from loopfit.record.table import Column, Table, column_of, opening_findings, unclosed
 
+if TYPE_CHECKING:
+    import polars as pl
 
-def table_by_columns(source: str, text: str, header: Header, layout: Layout, numeric: list[bool], start: int, first_line: int) -> Table | None:
-    """Return the table of a long text whose rows are all alike, None when any row is not.
+
+def table_by_columns(
+    source: str, body: bytes, header: Header, layout: Layout, numeric: list[bool], first_line: int
+) -> Table | None:
+    """Return the table of a long text whose rows are all alike, None when a row needs a closer look.
 
     Parameters
     ----------
-    text : str
-        The text with line feeds only.
-    start : int
-        Place of the first data row in the text.
+    body : bytes
+        The data rows in UTF-8, with line feeds only.
     first_line : int
-        Its line number.
+        Line number of the first one.
 
     Notes
     -----
-    polars reads correctly rounded floats, as Python does (tested bit for bit). Whatever it passes over or
-    takes in another way (an empty cell, a short row, a blank line, a word) makes this function return None, and
-    the text is read again row by row.
+    polars rounds decimal numbers correctly, as Python does (tested bit for bit), and cells that it does not take
+    are parsed by our own grammar. Short and long rows, blank lines, quotes over several lines, comments, lines of
+    text, and cells with units make this function return None; the text is then read again row by row.
     """
-    if layout.delimiter == " " or layout.marks.thousands:
+    closed = body.endswith(b"\n")
+    if layout.delimiter == " " or layout.marks.thousands or body.count(b'"') % 2 or (not closed and _is_doubtful(body, layout)):
         return None
-    closed = text.endswith("\n")
-    if not closed and _tail_is_doubtful(text, layout):
+    padded = (layout.delimiter + " ").encode()
+    if b'"' not in body and padded in body[:10000]:
+        body = body.replace(padded, layout.delimiter.encode())
+    rows = body.count(b"\n") + (not closed)
+    stamps = _stamp_columns(body, layout, numeric)
+    plain = [flag and place not in stamps for place, flag in enumerate(numeric)]
+    frame = _frame(body, layout, plain)
+    if frame is None or frame.height != rows or any(s.null_count() for s, flag in zip(frame, plain, strict=True) if flag):
+        frame = _frame(body, layout, [False] * len(plain))
+    if frame is None or frame.height != rows or frame.to_series(-1).null_count() or _has_comments(frame):
         return None
-    body = text[start:].encode()
-    if b'"' not in body:
-        padded = (layout.delimiter + " ").encode()
-        if padded in body[:10000]:
-            body = body.replace(padded, layout.delimiter.encode())
-    elif body.count(b'"') % 2:
+    columns = []
+    empty = np.ones(rows, dtype=bool)
+    for place, series in enumerate(frame):
+        column = _column(place, series, header, layout, plain[place])
+        if column is None:
+            return None
+        columns.append(column)
+        if numeric[place] and bool(empty.any()):
+            empty &= np.zeros(rows, dtype=bool) if column.values is None else ~np.isfinite(column.values)
+    if bool(empty.any()):
         return None
-    import polars as pl
-
-    kinds = {f"c{place}": pl.Float64 if flag else pl.String for place, flag in enumerate(numeric)}
-    stamped = _stamp_columns(text[start : start + 20000], layout, numeric)
-    for place in stamped:
-        kinds[f"c{place}"] = pl.String
-    try:
-        frame = pl.read_csv(
-            body,
-            has_header=False,
-            separator=layout.delimiter,
-            schema=kinds,
-            decimal_comma=layout.marks.decimal == ",",
-        )
-    except (pl.exceptions.PolarsError, ValueError):
-        return None
-    if frame.height != body.count(b"\n") + (not closed):
-        return None
-    columns: list[Column] = []
-    for place, series in enumerate(frame.get_columns()):
-        if series.dtype == pl.Float64:
-            if series.null_count():
-                return None
-            values = series.to_numpy()
-            if not np.isfinite(values).all():
-                return None
-            columns.append(Column(number=place + 1, name=header.names[place], unit=header.units[place], values=values, cells=None))
-        else:
-            columns.append(column_of(place, header, [cell.strip() for cell in series.fill_null("").to_list()], layout))
-    lines = np.arange(first_line, first_line + frame.height)
-    findings = opening_findings(header, layout, len(lines))
-    if not closed:
-        findings.append(unclosed(int(lines[-1])))
+    lines = np.arange(first_line, first_line + rows)
+    findings = [] if closed else [unclosed(int(lines[-1]))]
     return Table(
         source=source,
         lines=lines,
@@ -80,21 +69,76 @@ def table_by_columns(source: str, text: str, header: Header, layout: Layout, num
         preamble=header.preamble,
         restarts=(),
         set_aside=0,
-        findings=tuple(findings),
+        findings=(*findings, *opening_findings(header, layout, rows)),
     )
 
 
-def _tail_is_doubtful(text: str, layout: Layout) -> bool:
+def _frame(body: bytes, layout: Layout, numbers: list[bool]) -> pl.DataFrame | None:
+    """Return the columns as numbers or text, None when polars does not take the text."""
+    import polars as pl
+
+    schema = {f"c{place}": pl.Float64 if flag else pl.String for place, flag in enumerate(numbers)}
+    mark = layout.marks.decimal == ","
+    try:
+        return pl.read_csv(body, has_header=False, separator=layout.delimiter, schema=schema, decimal_comma=mark)
+    except (pl.exceptions.PolarsError, ValueError):
+        return None
+
+
+def _column(place: int, series: pl.Series, header: Header, layout: Layout, number: bool) -> Column | None:
+    """Return one column, None when its cells need a closer look."""
+    import polars as pl
+
+    if series.dtype == pl.Float64:
+        values = series.to_numpy()
+        if not np.isfinite(values).all():
+            return None
+        return Column(number=place + 1, name=header.names[place], unit=header.units[place], values=values, cells=None)
+    if series.null_count() == len(series):
+        cells: list[str] = [""] * len(series)
+        return column_of(place, header, cells, layout)
+    text = series.fill_null("").str.strip_chars()
+    if not number:
+        return column_of(place, header, text.to_list(), layout)
+    parsed = _numbers(text, layout.marks)
+    return None if parsed is None else column_of(place, header, text.to_list(), layout, parsed)
+
+
+def _numbers(text: pl.Series, marks: Marks) -> Array | None:
+    """Return the numbers of a column of text, NaN where a cell is none; None when a cell carries a unit."""
+    import polars as pl
+
+    plain = text
+    if marks.decimal == ",":
+        plain = text.set(text.str.contains(".", literal=True), None).str.replace(",", ".", literal=True)
+    values = np.array(plain.cast(pl.Float64, strict=False).to_numpy())
+    for place in np.flatnonzero(~np.isfinite(values)):
+        parsed = parse_number(text[int(place)], marks)
+        if parsed is not None and parsed[1]:
+            return None
+        values[place] = np.nan if parsed is None or not np.isfinite(parsed[0]) else parsed[0]
+    return values
+
+
+def _has_comments(frame: pl.DataFrame) -> bool:
+    """Return whether a row begins with a comment mark."""
+    import polars as pl
+
+    first = frame.to_series(0)
+    return first.dtype == pl.String and bool(first.str.starts_with("#").any())
+
+
+def _is_doubtful(body: bytes, layout: Layout) -> bool:
     """Return whether the last cell is shorter than its neighbours above, so that the slow way must judge it."""
-    lines = text[-20000:].split("\n")[1:]
+    lines = body[-20000:].decode(errors="replace").split("\n")[1:]
     cells = [split_line(line, layout.delimiter)[-1] for line in lines]
     return len(cells) < 3 or len(cells[-1]) < min(map(len, cells[:-1])) or cells[-1].endswith((".", ","))
 
 
-def _stamp_columns(head: str, layout: Layout, numeric: list[bool]) -> list[int]:
+def _stamp_columns(body: bytes, layout: Layout, numeric: list[bool]) -> list[int]:
     """Return the columns among the numeric ones that hold times written out."""
-    for line in head.split("\n"):
+    for line in body[:20000].decode(errors="replace").split("\n"):
         cells = split_line(line, layout.delimiter)
         if len(cells) >= len(numeric):
-            return [place for place, flag in enumerate(numeric) if flag and any(mark in cells[place] for mark in ":/T")]
+            return [place for place, flag in enumerate(numeric) if flag and any(m in cells[place][1:] for m in ":/T-") and "e-" not in cells[place].lower()]
     return []

@@ -25,7 +25,7 @@ _MONTHS = (
     "jan|feb|fév|fev|ene|mar|mär|mrz|apr|avr|abr|may|mai|jun|jui|jul|aug|aoû|aou|ago|sep|oct|okt|nov|dec|dez|déc|dic"
 )
 STAMP = re.compile(
-    r"(?:\d{4}-\d{1,2}-\d{1,2}|\d{1,4}([-/.])\d{1,2}\1\d{1,4}|\d{1,4}[-/. ](?:"
+    r"(?:\d{4}-\d{1,2}-\d{1,2}|\d{1,4}([-/.])\d{1,2}\1\d{1,4}|\d{1,4}[-/. ] ?(?:"
     + _MONTHS
     + r")[^\d\s]*[-/. ]+\d{1,4}|\d{8}(?=T))"
     r"(?:[T ,_]+\d{1,2}[:.]?\d{2}.*)?|[+-]?\d{1,4}:\d{2}(?::\d{2})?(?:[.,]\d+)?(?: ?[ap]\.?m\.?)?",

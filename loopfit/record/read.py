@@ -6,7 +6,7 @@ import os
 from collections.abc import Mapping
 
 import numpy as np
-from numpy.typing import ArrayLike
+from numpy.typing import ArrayLike, NDArray
 
 from loopfit.core.arrays import Array, read_only
 from loopfit.core.errors import RecordError
@@ -129,23 +129,15 @@ def record_from_table(
     roles, others, role_findings = assign_roles(source, numeric, {role: c for role, c in given.items() if role != "time"})
     findings = [*table.findings, *base.findings, *role_findings]
     rows, roles = usable_rows(table, base.clock.seconds, base.name, roles, findings)
-    same = np.zeros(len(table.lines), dtype=bool)
-    if len(rows) > 1:
-        equal = np.ones(len(rows) - 1, dtype=bool)
-        for column in (*roles.values(), *others):
-            values = column.values
-            if values is not None:
-                equal &= np.diff(values[rows]) == 0
-        same[rows[1:]] = equal
-    part = type(base.clock)(
-        seconds=base.clock.seconds[rows],
-        kind=base.clock.kind,
-        of_day_s=None if base.clock.of_day_s is None else base.clock.of_day_s[rows],
-        weekday=None if base.clock.weekday is None else base.clock.weekday[rows],
-        findings=(),
-    )
+    signals = [column.values for column in (*roles.values(), *others) if column.values is not None]
+
+    def same_as_before(places: NDArray[np.int64]) -> NDArray[np.bool_]:
+        here, before = rows[places], rows[places - 1]
+        return np.all([values[here] == values[before] for values in signals], axis=0)
+
     restarts = [int(np.searchsorted(rows, restart)) for restart in table.restarts]
-    line = rising(source, base.name or "row", part, table.lines[rows], restarts, same[rows])
+    clock = base.clock if len(rows) == len(table.lines) else base.clock.part(rows)
+    line = rising(source, base.name or "row", clock, table.lines[rows], restarts, same_as_before)
     findings += line.findings
     total = len(table.lines) + table.set_aside
     return _record(source, total, line.seconds, base.name, roles, others, findings, rows[line.rows], window_s)
@@ -159,7 +151,7 @@ def _record(
     roles: Mapping[str, Column],
     others: list[Column],
     findings: list[Finding],
-    rows: np.ndarray,
+    rows: NDArray[np.int64],
     window_s: Window | None,
 ) -> Record:
     low, high = (None, None) if window_s is None else window_s
@@ -178,7 +170,8 @@ def _record(
     def signal(column: Column | None) -> Signal | None:
         if column is None or column.values is None:
             return None
-        return Signal(name=column.name, unit=column.unit, values=read_only(column.values[kept]))
+        values = column.values if len(kept) == len(column.values) and kept[0] < kept[-1] else column.values[kept]
+        return Signal(name=column.name, unit=column.unit, values=read_only(values))
 
     measurement = signal(roles["measurement"])
     assert measurement is not None

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -15,6 +15,7 @@ from loopfit.record.clock import Clock
 from loopfit.record.wording import count_of, lines_text
 
 _DAY = 86400.0
+SameAsBefore = Callable[[NDArray[np.int64]], NDArray[np.bool_]]
 _GAP = 3.5  # times the median interval: beyond jitter, and beyond one lost row on each side
 
 
@@ -33,7 +34,7 @@ def rising(
     clock: Clock,
     lines: NDArray[np.int64],
     restarts: Sequence[int],
-    same_rows: NDArray[np.bool_],
+    same_as_before: SameAsBefore,
 ) -> Timeline:
     """Return a strictly rising clock, or say where it runs back.
 
@@ -45,8 +46,8 @@ def rising(
         Lines of the file.
     restarts : sequence of int
         Rows before which the line of names came again.
-    same_rows : (n,) bool
-        Rows that equal the row before in every cell.
+    same_as_before : callable
+        Tells of rows, by their places, which equal the row before in every signal.
 
     Raises
     ------
@@ -66,7 +67,7 @@ def rising(
     elif of_day is not None and weekday is not None:
         seconds = _summer_time(seconds, of_day, weekday, lines[rows], findings)
     seconds, rows = _longest_run(source, name, seconds, rows, lines, restarts, findings)
-    seconds, rows = _one_stamp_a_row(name, seconds, rows, lines, same_rows, findings)
+    seconds, rows = _one_stamp_a_row(name, seconds, rows, lines, same_as_before, findings)
     _spacing(name, seconds, rows, lines, findings)
     return Timeline(seconds=seconds, rows=rows, findings=tuple(findings))
 
@@ -155,7 +156,7 @@ def _one_stamp_a_row(
     seconds: Array,
     rows: NDArray[np.int64],
     lines: NDArray[np.int64],
-    same_rows: NDArray[np.bool_],
+    same_as_before: SameAsBefore,
     findings: list[Finding],
 ) -> tuple[Array, NDArray[np.int64]]:
     step = np.diff(seconds)
@@ -164,7 +165,7 @@ def _one_stamp_a_row(
         return seconds, rows
     if len(repeat) > 0.2 * len(seconds) and len(seconds) - len(repeat) >= 3:
         return _spread(name, seconds, findings), rows
-    same = same_rows[rows[repeat]]
+    same = same_as_before(rows[repeat])
     keep = np.ones(len(seconds), dtype=bool)
     keep[repeat] = False
     if same.any():

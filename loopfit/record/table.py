@@ -144,9 +144,12 @@ def unclosed(line: int) -> Finding:
     return Finding(code="no_final_line_break", severity="note", text=text)
 
 
-def column_of(place: int, header: Header, cells: Sequence[str], layout: Layout) -> Column:
-    """Return a column of cells: numbers when at least six filled cells in ten are, else text."""
-    values, unit = column_of_numbers(cells, layout.marks)
+def column_of(place: int, header: Header, cells: Sequence[str], layout: Layout, numbers: Array | None = None) -> Column:
+    """Return a column of cells: numbers when at least six filled cells in ten are, else text.
+
+    `numbers` (n,) are its values where they are known already, NaN where a cell is no number.
+    """
+    values, unit = (numbers, None) if numbers is not None else column_of_numbers(cells, layout.marks)
     good = np.isfinite(values)
     usable = bool(good.any())
     if usable and not good.all():

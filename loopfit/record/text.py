@@ -74,23 +74,22 @@ def _by_rows(source: str, text: str) -> Table:
 def _by_columns(source: str, text: str) -> Table | None:
     """Return the table of a long text by the quick way, None when a row needs a closer look."""
     head = text[:_HEAD].split("\n")[:-1]
-    stride = len(text) // 12
-    places = [stride * part for part in range(1, 12)]
-    inside = [line for place in places for line in text[place : place + 2000].split("\n")[1:-1][:12]]
+    places = [len(text) // 12 * part for part in range(1, 12)]
+    inside = [line for place in places for line in text[place : place + 2000].split("\n")[1:-1][:6]]
+    full = [line for line in [*head[:80], *inside] if line.strip()]
     if not head or not inside:
         return None
-    full = [line for line in [*head[:150], *inside] if line.strip()]
     try:
         layout, numeric = layout_of(source, full)
     except RecordError:  # let every line have its say
         return None
-    rows = list(rows_of(head, layout.delimiter))
+    rows = list(rows_of(head[:400], layout.delimiter))
     header = find_header(rows, layout, numeric, head)
     if header.first >= len(rows):
         return None
     first_line = rows[header.first][0]
     start = sum(len(line) + 1 for line in head[: first_line - 1])
-    return table_by_columns(source, text, header, layout, numeric, start, first_line)
+    return table_by_columns(source, text[start:].encode(), header, layout, numeric, first_line)
 
 
 def layout_of(source: str, lines: list[str]) -> tuple[Layout, list[bool]]:

@@ -81,11 +81,7 @@ def time_base(table: Table, wanted: Column | None, interval_s: float | None, tak
     if named or claimed:
         return _numeric((named or claimed)[0], free, ())
     if numeric:
-        counters = [
-            column
-            for column in numeric
-            if _counts(column.values) and (is_counter_name(column.name) or not table.named or _unnamed(column))
-        ]
+        counters = [column for column in numeric if _counts_rows(column)]
         better = [column for column in numeric if column not in counters and _is_even(column.values)]
         if better:
             text = f"time is taken from {better[0].name!r} because it rises evenly; its name does not say so"
@@ -188,11 +184,13 @@ def _unnamed(column: Column) -> bool:
 
 def _is_rising(values: Array) -> bool:
     """Return whether the numbers never fall and rise in most rows or in bursts, NaN passed over."""
+    if len(values) > 1 and values[-1] < values[0]:
+        return False
     known = values[np.isfinite(values)]
-    if len(known) < 2:
+    if len(known) < 2 or not known[-1] > known[0] or bool(np.any(known[:-1:97] > known[-1])):
         return False
     step = np.diff(known)
-    return bool(np.all(step >= 0)) and known[-1] > known[0] and float(np.mean(step > 0)) > 0.05
+    return bool(np.all(step >= 0)) and float(np.mean(step > 0)) > 0.05
 
 
 def _claims_time(column: Column, values: Array) -> bool:
@@ -236,7 +234,8 @@ def _other_times(free: Sequence[Column]) -> frozenset[int]:
         if _is_stamped(column)
         or (
             column.values is not None
+            and (_says_time(column) or is_counter_name(column.name) or _unnamed(column))
             and _is_rising(column.values)
-            and (_says_time(column) or (_counts(column.values) and _is_even(column.values)))
+            and (_says_time(column) or _counts_rows(column))
         )
     )

@@ -24,7 +24,7 @@ _KINDS = {
 
 def page(analysis: Analysis) -> str:
     """Return the whole page, without a final newline."""
-    parts = [_answer(analysis), _record(analysis)]
+    parts = [answer(analysis), _record(analysis)]
     if analysis.model is not None or _observed_rows(analysis):
         parts.append(_table(analysis))
     if analysis.model is not None:
@@ -46,7 +46,8 @@ def in_words(quantity: Quantity, unit: str = "") -> str:
     return f"{number(quantity.value, places)}{tail} ({number(quantity.low, places)} to {number(quantity.high, places)})"
 
 
-def _answer(analysis: Analysis) -> str:
+def answer(analysis: Analysis) -> str:
+    """Return the answer in words: regime and damping, a caution if need be, overshoot and settling."""
     model, response = analysis.model, analysis.response
     if model is None:
         return f"Cannot tell: {analysis.refusal}"
