@@ -46,8 +46,8 @@ def around_the_step(trace: Trace, fit: Fit, figures: dict[str, Quantity | None],
                 code="still_ramping",
                 severity="warning",
                 at_s=(end, end),
-                text="The measurement still ramps when the record ends: it is taken as integrating, but a lag much longer "
-                "than the record would look the same.",
+                text="The measurement still ramps when the record ends: it is taken as integrating, but a lag much "
+                "longer than the record would look the same.",
             )
         )
     settling = figures.get("settling_time_s")

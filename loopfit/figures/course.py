@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from statistics import NormalDist
 
 import numpy as np
+from numpy.typing import NDArray
 
 from loopfit.core.arrays import Array
 from loopfit.core.quantity import Quantity
@@ -30,12 +31,12 @@ class Course:
     end: float
     confidence: float
 
-    def quantile(self, where: Array | None = None) -> float:
+    def quantile(self, where: NDArray[np.bool_] | None = None) -> float:
         """Return the normal quantile that holds for all points together, or for those of `where`."""
         share = 1.0 if where is None else float(np.mean(where))
         return NormalDist().inv_cdf(1 - (1 - self.confidence) / (2 * max(share * self.freedom, 1.0)))
 
-    def width(self, level: float | Array, where: Array | None = None) -> Array:
+    def width(self, level: float | Array, where: NDArray[np.bool_] | None = None) -> Array:
         """Return half-widths (m,) of height minus a level, a fraction of the change."""
         curve = self.quantile(where) * self.error
         return np.sqrt(curve**2 + ((1 - level) * self.start) ** 2 + (level * self.end) ** 2)
@@ -54,6 +55,7 @@ def _first_at(time: Array, height: Array, level: float | Array) -> float:
 
 
 def crossing_time(course: Course, level: float) -> Quantity | None:
+    """Return when the response first reaches the level, a fraction of the change; None if it does not."""
     value = _first_at(course.time, course.height, level)
     if math.isinf(value):
         return None
@@ -66,6 +68,7 @@ def crossing_time(course: Course, level: float) -> Quantity | None:
 
 
 def rise_time(course: Course) -> Quantity | None:
+    """Return the time between the first 10 % and the first 90 %; the errors of the two are independent."""
     lower, upper = crossing_time(course, 0.1), crossing_time(course, 0.9)
     if lower is None or upper is None:
         return None

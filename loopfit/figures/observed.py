@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from statistics import NormalDist
 
 import numpy as np
@@ -117,14 +117,13 @@ def observe(
 
     near, tail = course(curve), None
     seen = near.time[np.abs(near.height - 1) > near.quantile() * near.error]
-    # what is lost in the noise at first still has some way to go
-    rest = int(np.searchsorted(since, 1.5 * seen[-1])) if seen.size else since.size
+    # a swing lost in the noise may follow the last that is seen, and lasts about as long
+    rest = int(np.searchsorted(since, 2.5 * seen[-1])) if seen.size else since.size
     if since.size - rest >= _FEWEST_ROWS_APART:
         tail = course(smooth(since[rest:], after[rest:], before, noise_rms or 0.0))
     rise = rise_time(near)
-    settling = settling_time(near, tail, band)
     if rise is None or rise.value < near.interval:  # all of it between two rows
-        return replace(_nothing(initial, final, deviation), settling_time_s=settling)
+        return _nothing(initial, final, deviation)
     height, overshoot, moment = peak(near)
     return Observed(
         initial_value=initial,
@@ -133,7 +132,7 @@ def observe(
         overshoot_percent=overshoot.scaled(100.0),
         peak_time_s=moment,
         rise_time_s=rise,
-        settling_time_s=settling,
+        settling_time_s=settling_time(near, tail, band),
         delay_time_s=crossing_time(near, 0.5),
         decay_ratio=decay_ratio(near) if moment is not None else None,
         steady_state_deviation=deviation,

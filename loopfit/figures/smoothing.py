@@ -52,7 +52,8 @@ def _transform(size: int, rows: int) -> tuple[Array, Array, Array, Array]:
     The inverse undoes the averaging within blocks.
     """
     index = np.arange(size)
-    scale = np.where(index == 0, np.sqrt(1 / size), np.sqrt(2 / size))[:, None]
+    scale = np.full((size, 1), np.sqrt(2 / size))
+    scale[0] = np.sqrt(1 / size)
     basis = scale * np.cos(np.pi / size * np.outer(index, index + 0.5))
     frequency = np.pi * index / size
     blur = np.ones(size)
