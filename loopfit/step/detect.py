@@ -14,6 +14,7 @@ Stepped = Literal["setpoint", "output"]
 _CLEAR = 8.0  # noise levels by which a change must stand out in a noisy column
 _SMALLEST_SHARE = 0.02  # of the column's range
 _MOVING_SHARE = 0.3
+_WANDERS = 3.0  # a column that spreads this many noise levels is no constant
 _BESIDE = 8  # rows whose median tells a level
 _ONE_MOVE = 3  # changes that follow each other within so many rows are one move
 
@@ -82,7 +83,7 @@ def find_steps(time: Array, values: Array, signal: Stepped) -> StepsFound:
     else:
         rows, sizes = _noisy_changes(values, noise, spread)
     if rows.size == 0:
-        return replace(nothing, noise=noise, always_moving=noise > 0.02 * spread)
+        return replace(nothing, noise=noise, always_moving=float(np.std(values)) > _WANDERS * noise > 0)
     return StepsFound(
         steps=_moves(time, values, rows, sizes, signal, noise), rows=rows, sizes=sizes, noise=noise, always_moving=False
     )
