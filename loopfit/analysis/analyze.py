@@ -5,27 +5,25 @@ from __future__ import annotations
 import math
 import os
 from collections.abc import Mapping
+from dataclasses import replace
+from functools import partial
 
 from numpy.typing import ArrayLike
 
+from loopfit.analysis.assess import assess
 from loopfit.analysis.circumstances import about_rows, around_the_step, other_inputs, standing_offset
 from loopfit.analysis.figures import model_of, response_of
-from loopfit.analysis.judge import judge
-from loopfit.analysis.result import Analysis, ObservedFigures
-from loopfit.analysis.trace import Prepared, StatedStep, prepare
+from loopfit.analysis.result import Analysis, ObservedFigures, StepFigures, StepUsed
+from loopfit.analysis.several import disagreements, of_each
+from loopfit.analysis.trace import StatedStep, prepare
 from loopfit.core.errors import UsageError
 from loopfit.core.finding import Finding
 from loopfit.core.quantity import Quantity
 from loopfit.figures.observed import observe
-from loopfit.fit.choose import change_of, choose, structured
-from loopfit.fit.estimate import Trace, quantities, refine, surface_of
-from loopfit.fit.set_aside import false_first_rows, without_rows
+from loopfit.fit.estimate import Trace
 from loopfit.record.read import read_record, record_from_arrays
 from loopfit.record.record import Record
 from loopfit.step.noise import noise_rms, resolution
-
-_REFITS = 3
-_WORTH_A_LOOK = 0.02  # of the change left unexplained
 
 
 def analyze(
@@ -127,70 +125,64 @@ def analyze_record(
 ) -> Analysis:
     """Analyse a record that has been read; see `analyze`."""
     prepared = prepare(record, number=step, stated=stated)
-    trace = prepared.trace
     band, confidence = band_percent / 100.0, confidence_percent / 100.0
-    noise = noise_rms(trace.values)
-    grid = resolution(trace.values)
+    noise = noise_rms(prepared.trace.values)
+    grid = resolution(prepared.trace.values)
     floor = grid / math.sqrt(12.0) if noise < grid / 3.0 else 0.0  # undithered: sigma >= q / sqrt(12)
-    observed = _observed(prepared, band, confidence, noise)
     noise = max(noise, floor)
-    fit = choose(trace, noise, noise_floor=floor)
-    aside: list[Finding] = []
-    if trace.input is not None and structured(fit, noise) > _WORTH_A_LOOK * abs(change_of(fit, trace)):
-        count, fit = false_first_rows(trace, fit, noise_floor=floor)
-        if count:
-            aside = [_set_aside(trace, count)]
-            trace = without_rows(trace, count)
-    surface = surface_of(fit, confidence=confidence, band=band)
-    for _ in range(_REFITS):  # a walker can meet a better model than the search did
-        if surface.better is None:
-            break
-        fit = refine(fit, surface.better)
-        surface = surface_of(fit, confidence=confidence, band=band)
-    figures = quantities(fit, surface, band)
-    verdict = judge(trace, fit, figures, noise, pushed=prepared.held_before)
-    findings = [*record.findings, *prepared.findings, *aside, *verdict.findings]
-    if not verdict.refused:
+    one = partial(assess, noise=noise, noise_floor=floor, confidence=confidence, band=band)
+    best = one(prepared.trace, pushed=prepared.held_before)
+    findings = [*record.findings, *prepared.findings]
+    each: list[StepFigures] = []
+    steps, first_trace = prepared.steps, prepared.trace
+    if prepared.separate:
+        alone = [one(trace) for _, trace in prepared.separate]
+        each = [of_each(step_used, assessed) for (step_used, _), assessed in zip(prepared.separate, alone, strict=True)]
+        first_trace = prepared.separate[0][1]
+        apart = disagreements(each)
+        findings += apart or [_taken_together(len(each))]
+        if apart:
+            best = alone[0]
+            steps = tuple(replace(s, used=s.time_s == prepared.separate[0][0].time_s) for s in steps)
+    observed = _observed(prepared.step, first_trace, band, confidence, noise)
+    findings += [*best.aside, *best.verdict.findings]
+    fit, figures, trace = best.fit, best.figures, best.trace
+    model = None if best.verdict.refused else model_of(fit, figures, best.verdict, record.sample_interval_s)
+    if model is not None:
         findings += around_the_step(trace, fit, figures, noise)
         findings += about_rows(trace, fit, noise)
         if prepared.step is not None:
             findings += other_inputs(record, trace, prepared.step)
             findings += standing_offset(observed, figures["gain"], prepared.step)
-    model = None if verdict.refused else model_of(fit, figures, verdict, record.sample_interval_s)
     return Analysis(
         record=record,
         findings=tuple(findings),
         window_s=(float(trace.time[0]), float(trace.time[-1])),
         noise_rms=noise,
         step=prepared.step,
-        steps=prepared.steps,
+        steps=steps,
+        per_step=tuple(each),
         observed=observed,
         model=model,
-        response=None if model is None else response_of(fit, figures, surface, band, model),
+        response=None if model is None else response_of(fit, figures, best.points, band, model),
         fit=fit,
-        points=surface.points,
+        points=best.points,
         band_percent=float(band_percent),
         confidence_percent=float(confidence_percent),
     )
 
 
-def _set_aside(trace: Trace, count: int) -> Finding:
-    rows = slice(trace.step_row, trace.step_row + count)
-    values = ", ".join(f"{value:g}" for value in trace.values[rows])
-    which = f"first {count} rows" if count > 1 else "first row"
+def _taken_together(count: int) -> Finding:
     return Finding(
-        code="false_first_rows",
-        severity="warning",
-        at_s=(float(trace.time[rows][0]), float(trace.time[rows][-1])),
-        text=f"The {which} after the step ({values}) do not belong to the response and were set aside: the first "
-        "samples after a switch are often false, and a fit would take them for ringing.",
+        code="several_steps",
+        severity="note",
+        text=f"The {count} steps of the record agree and are fitted together; what the record shows is of the first.",
     )
 
 
-def _observed(prepared: Prepared, band: float, confidence: float, noise: float) -> ObservedFigures:
-    if prepared.step is None:
+def _observed(step: StepUsed | None, trace: Trace, band: float, confidence: float, noise: float) -> ObservedFigures:
+    if step is None:
         return ObservedFigures()
-    step, trace = prepared.step, prepared.trace
     setpoint = step.to if step.signal == "setpoint" else None
     seen = observe(
         trace.time,

@@ -51,11 +51,11 @@ def around_the_step(trace: Trace, fit: Fit, figures: dict[str, Quantity | None],
             )
         )
     settling = figures.get("settling_time_s")
-    if trace.input is None or settling is None or settling.value <= end - trace.begins:
+    if trace.input is None or settling is None or settling.value <= end - trace.last_change:
         return findings
     if not math.isfinite(settling.value):
         return findings
-    longer = f"record at least {settling.value - (end - trace.begins):.3g} s longer"
+    longer = f"record at least {settling.value - (end - trace.last_change):.3g} s longer"
     reached = _reached(fit, trace)
     if reached is not None and reached < _ENOUGH:
         text = (
@@ -70,13 +70,13 @@ def around_the_step(trace: Trace, fit: Fit, figures: dict[str, Quantity | None],
 
 
 def _reached(fit: Fit, trace: Trace) -> float | None:
-    """Return the share of the change that is done at the end of the record, by the model."""
+    """Return the share of the last change that is done at the end of the record, by the model."""
     if fit.structure.rungs != (1,) or trace.input is None:
         return None
     columns, _ = fit.columns.evaluate(fit.theta[None], derivatives=False)
-    total = float(np.sum(trace.input.sizes))
+    level = float(np.sum(trace.input.sizes))
     last = columns[0, 0, -1] / fit.columns.samples.root_count[-1]
-    return float(last / total) if total else None
+    return float(1.0 - (level - last) / trace.input.sizes[-1])
 
 
 def about_rows(trace: Trace, fit: Fit, noise: float) -> list[Finding]:

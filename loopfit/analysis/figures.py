@@ -8,8 +8,7 @@ from loopfit.analysis.judge import Figures, Verdict
 from loopfit.analysis.result import Kind, Model, ResponseFigures
 from loopfit.core.quantity import Quantity
 from loopfit.fit.estimate import Fit
-from loopfit.fit.figures_of import rest_crossings
-from loopfit.fit.surface import Surface
+from loopfit.fit.figures_of import Points, rest_crossings
 
 _MOST_DAMPED = 11.0  # a damping ratio beyond this is a first-order lag (r = 0.002)
 _NEAR_CRITICAL = (0.95, 1.05)
@@ -93,7 +92,7 @@ def regime(damping: Quantity) -> str:
     return "cannot tell"
 
 
-def response_of(fit: Fit, figures: Figures, surface: Surface, band: float, model: Model) -> ResponseFigures | None:
+def response_of(fit: Fit, figures: Figures, points: Points, band: float, model: Model) -> ResponseFigures | None:
     """Return the figures of the model's response; None where it has no final value."""
     if model.kind in ("integrating", "dead_time"):
         return None
@@ -104,5 +103,5 @@ def response_of(fit: Fit, figures: Figures, surface: Surface, band: float, model
         settling_time_s=figures["settling_time_s"],
         delay_time_s=figures["delay_time_s"],
         decay_ratio=figures["decay_ratio"],
-        rest_crossings=None if fit.columns.input is not None else rest_crossings(fit.columns, surface.points, band),
+        rest_crossings=None if fit.columns.input is not None else rest_crossings(fit.columns, points, band),
     )

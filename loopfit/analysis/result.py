@@ -90,6 +90,19 @@ class ResponseFigures:
     rest_crossings: Quantity | None
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class StepFigures:
+    """What one of several steps says alone; `refusal` where it says nothing."""
+
+    step: StepUsed
+    gain: Quantity | None
+    damping_ratio: Quantity | None
+    natural_frequency_rad_s: Quantity | None
+    lag_plus_dead_time_s: Quantity | None
+    dead_time_s: Quantity | None
+    refusal: str | None
+
+
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Analysis:
     """The result for one record. `model` is None when it was refused; the findings say why.
@@ -103,6 +116,7 @@ class Analysis:
     noise_rms: float
     step: StepUsed | None
     steps: tuple[StepUsed, ...]
+    per_step: tuple[StepFigures, ...]
     observed: ObservedFigures
     model: Model | None
     response: ResponseFigures | None
@@ -160,6 +174,7 @@ class Analysis:
             },
             "step": None if self.step is None else _step(self.step, used=False),
             "steps": [_step(step, used=True) for step in self.steps],
+            "per_step": [_fields(row) | {"step": _step(row.step, used=False)} for row in self.per_step],
             "observed": _fields(self.observed),
             "model": None if self.model is None else _fields(self.model),
             "response": None if self.response is None else _fields(self.response),
@@ -185,5 +200,5 @@ def _step(step: StepUsed, *, used: bool) -> dict[str, Any]:
     return out | {"used": step.used} if used else out
 
 
-def _fields(result: ObservedFigures | Model | ResponseFigures) -> dict[str, Any]:
+def _fields(result: ObservedFigures | Model | ResponseFigures | StepFigures) -> dict[str, Any]:
     return {field.name: getattr(result, field.name) for field in fields(result)}

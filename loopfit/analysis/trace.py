@@ -19,6 +19,8 @@ from loopfit.step.release import release_row
 
 _CHANGES_AT_MOST = 200
 _AFTER_AT_LEAST = 5
+_BEFORE_AT_LEAST = 10
+_BEFORE_SHARE = 0.15
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -34,7 +36,8 @@ class StatedStep:
 class Prepared:
     """What the estimator gets, and what is known about the step.
 
-    `held_before`: a record without a step begins with the measurement at rest.
+    `held_before`: a record without a step begins with the measurement at rest. `separate`: where several steps
+    are taken together, each one with the trace of its own.
     """
 
     trace: Trace
@@ -42,6 +45,7 @@ class Prepared:
     steps: tuple[StepUsed, ...]
     findings: tuple[Finding, ...]
     held_before: bool = False
+    separate: tuple[tuple[StepUsed, Trace], ...] = ()
 
 
 def prepare(record: Record, *, number: int | None, stated: StatedStep | None) -> Prepared:
@@ -52,7 +56,7 @@ def prepare(record: Record, *, number: int | None, stated: StatedStep | None) ->
     record : Record
         As read.
     number : int, optional
-        Which step, counted from 1; the first by default.
+        Which step, counted from 1; all together by default.
     stated : StatedStep, optional
         Overrides the column.
 
@@ -81,6 +85,8 @@ def prepare(record: Record, *, number: int | None, stated: StatedStep | None) ->
                 "name the setpoint column with --setpoint, or state the step with --step-at, --step-from and --step-to",
             )
         return _release(record, other)
+    if number is None and len(found.steps) > 1:
+        return _all_of(record, found)
     return _one_of(record, found, number or 1)
 
 
@@ -103,6 +109,7 @@ def _stepped(record: Record) -> tuple[StepsFound | None, bool]:
 
 
 def _one_of(record: Record, found: StepsFound, number: int) -> Prepared:
+    """Return the trace of one step, the others left out."""
     count = len(found.steps)
     if not 1 <= number <= count:
         raise RecordError(
@@ -111,31 +118,68 @@ def _one_of(record: Record, found: StepsFound, number: int) -> Prepared:
             f"choose with --step 1{'' if count == 1 else f' to {count}'}",
         )
     step = found.steps[number - 1]
-    n = record.time.size
-    first = found.steps[number - 2].row if number > 1 else 0
-    beyond = found.steps[number].row if number < count else n
-    if beyond - step.row < _AFTER_AT_LEAST:
+    begin, end = _rows_of(record, found, number)
+    if end - step.row < _AFTER_AT_LEAST:
         raise RecordError(
             record.source,
-            f"only {beyond - step.row} rows follow the step at {step.time_s:g} s; "
+            f"only {end - step.row} rows follow the step at {step.time_s:g} s; "
             "record longer after the step" + (", or choose another with --step" if count > 1 else ""),
         )
-    inside = (found.rows > first) & (found.rows < beyond)
+    return Prepared(
+        trace=_between(record, found, step, begin, end),
+        step=_used(step, used=True),
+        steps=tuple(_used(s, used=s is step) for s in found.steps),
+        findings=_about_steps(record, found, number),
+    )
+
+
+def _all_of(record: Record, found: StepsFound) -> Prepared:
+    """Return the trace of all steps together, and that of each one alone."""
+    usable = []
+    for number, step in enumerate(found.steps, start=1):
+        begin, end = _rows_of(record, found, number)
+        if end - step.row >= _AFTER_AT_LEAST:
+            usable.append((step, _between(record, found, step, begin, end)))
+    if len(usable) < 2:
+        number = found.steps.index(usable[0][0]) + 1 if usable else 1
+        return _one_of(record, found, number)
+    first = usable[0][0]
+    used = [step for step, _ in usable]
+    return Prepared(
+        trace=_between(record, found, first, 0, record.time.size),
+        step=_used(first, used=True),
+        steps=tuple(_used(step, used=step in used) for step in found.steps),
+        findings=_about_steps(record, found, None),
+        separate=tuple((_used(step, used=True), trace) for step, trace in usable),
+    )
+
+
+def _rows_of(record: Record, found: StepsFound, number: int) -> tuple[int, int]:
+    """Return the first row and the row beyond the last of what belongs to a step.
+
+    After an earlier step only so many rows before this one are taken as show where it starts: the earlier
+    response is still in the rows before them.
+    """
+    step = found.steps[number - 1]
+    end = found.steps[number].row if number < len(found.steps) else record.time.size
     if number == 1:
-        inside |= found.rows < beyond
+        return 0, end
+    before = max(_BEFORE_AT_LEAST, int(_BEFORE_SHARE * (end - step.row)))
+    return max(found.steps[number - 2].last_row, step.row - before), end
+
+
+def _between(record: Record, found: StepsFound, step: Step, begin: int, end: int) -> Trace:
+    inside = (found.rows > begin) & (found.rows < end)
     rows, sizes = found.rows[inside], found.sizes[inside]
     if rows.size > _CHANGES_AT_MOST:
         rows, sizes = _thinned(rows, sizes)
-    trace = Trace(
-        time=record.time[first:beyond],
-        values=record.measurement.values[first:beyond],
+    return Trace(
+        time=record.time[begin:end],
+        values=record.measurement.values[begin:end],
         input=Input(times=record.time[rows], sizes=sizes),
         begins=step.time_s,
-        step_row=step.row - first,
+        step_row=step.row - begin,
     )
-    findings = _about_steps(record, found, step, number, beyond)
-    steps = tuple(_used(s, used=i == number - 1) for i, s in enumerate(found.steps))
-    return Prepared(trace=trace, step=_used(step, used=True), steps=steps, findings=findings)
 
 
 def _used(step: Step, *, used: bool) -> StepUsed:
@@ -150,40 +194,42 @@ def _thinned(rows: np.ndarray, sizes: Array) -> tuple[np.ndarray, Array]:
     return middles, np.add.reduceat(sizes, starts)
 
 
-def _about_steps(record: Record, found: StepsFound, step: Step, number: int, beyond: int) -> tuple[Finding, ...]:
+def _about_steps(record: Record, found: StepsFound, number: int | None) -> tuple[Finding, ...]:
     findings = []
     count = len(found.steps)
-    if count > 1:
+    if number is not None and count > 1:
+        one = found.steps[number - 1]
         findings.append(
             Finding(
-                code="several_steps",
-                severity="warning",
-                text=f"The record holds {count} steps; the figures are of step {number}, at {step.time_s:g} s, up to "
-                f"{'the next one' if beyond < record.time.size else 'the end'}; choose another with --step.",
-            )
-        )
-        last = found.steps[-1]
-        if record.time.size - last.row < _AFTER_AT_LEAST and number < count:
-            findings.append(
-                Finding(
-                    code="step_at_end",
-                    severity="note",
-                    at_s=(last.time_s, last.time_s),
-                    text=f"The second step, at {last.time_s:g} s, is at the very end of the record and tells nothing."
-                    if count == 2
-                    else f"The step at {last.time_s:g} s is at the very end and tells nothing.",
-                )
-            )
-    if step.last_row > step.row:
-        findings.append(
-            Finding(
-                code="gradual_change",
+                code="one_of_several_steps",
                 severity="note",
-                at_s=(step.time_s, float(record.time[step.last_row])),
-                text=f"The {step.signal} changes over {step.last_row - step.row + 1} rows; it is used as the input it "
-                "is, and the figures are those of an ideal step.",
+                text=f"The record holds {count} steps; the figures are of step {number} alone, at {one.time_s:g} s.",
             )
         )
+    last = found.steps[-1]
+    if count > 1 and record.time.size - last.row < _AFTER_AT_LEAST:
+        findings.append(
+            Finding(
+                code="step_at_end",
+                severity="note",
+                at_s=(last.time_s, last.time_s),
+                text=f"A second step at the end, at {last.time_s:g} s, comes too late to tell anything."
+                if count == 2
+                else f"The step at the end, at {last.time_s:g} s, comes too late to tell anything.",
+            )
+        )
+    wanted = found.steps if number is None else found.steps[number - 1 : number]
+    findings += [
+        Finding(
+            code="gradual_change",
+            severity="note",
+            at_s=(step.time_s, float(record.time[step.last_row])),
+            text=f"The {step.signal} changes over {step.last_row - step.row + 1} rows at {step.time_s:g} s; it is used "
+            "as the input it is, and the figures are those of an ideal step.",
+        )
+        for step in wanted
+        if step.last_row > step.row
+    ]
     return tuple(findings)
 
 

@@ -63,6 +63,8 @@ def crossing_time(course: Course, level: float) -> Quantity | None:
     width = course.width(level, np.abs(course.height - level) < width)
     low = _first_at(course.time, course.height + width, level)
     high = _first_at(course.time, course.height - width, level)
+    if low <= course.time[0]:  # it may have been before the first reading
+        low = 0.0
     unseen = _UNSEEN * course.interval
     return Quantity.spanning(value, max(low - unseen, 0.0), high + unseen)
 
@@ -78,6 +80,16 @@ def rise_time(course: Course) -> Quantity | None:
     return Quantity.spanning(max(value, 0.0), max(low, 0.0), high)
 
 
+def _largest(values: Array) -> float:
+    """Return the largest value, between points by the parabola through the top three."""
+    at = int(np.argmax(values))
+    if at in (0, values.size - 1):
+        return float(values[at])
+    before, top, after = (float(value) for value in values[at - 1 : at + 2])
+    bend = before - 2 * top + after
+    return top - (after - before) ** 2 / (8 * bend) if bend < 0 else top
+
+
 def peak(course: Course) -> tuple[Quantity, Quantity, Quantity | None]:
     """Return peak height and overshoot as fractions of the change, and the time of the peak if there is one."""
     height = course.height
@@ -85,17 +97,18 @@ def peak(course: Course) -> tuple[Quantity, Quantity, Quantity | None]:
     for _ in range(2):  # fewer places compete for the peak than the whole curve has
         band = course.quantile(possible) * course.error
         possible = height + band >= np.max(height - band)
-    least, most = float(np.max(height - band)), float(np.max(height + band))
+    least, most = _largest(height - band), _largest(height + band)
     width = course.width(height, possible)
-    low, high = float(np.max(height - width)) - 1, max(float(np.max(height + width)) - 1, 0.0)
+    low, high = _largest(height - width) - 1, max(_largest(height + width) - 1, 0.0)
     if not low > 0:
         return Quantity.spanning(1.0, 1 - course.end, max(most, 1 + course.end)), Quantity(0.0, 0.0, high), None
-    # the first stretch that may hold the largest value: later swings are lower
-    begin = int(np.argmax(possible))
-    end = begin + int(np.argmin(np.append(possible[begin:], False)))
+    # the first stretch that may hold the largest value and reaches it: later swings are lower
+    inside = int(np.argmax(height >= np.max(height - band)))
+    begin = inside - int(np.argmin(np.append(possible[inside::-1], False))) + 1
+    end = inside + int(np.argmin(np.append(possible[inside:], False)))
     at = begin + int(np.argmax(height[begin:end]))
     moment = Quantity.spanning(course.time[at], course.time[max(begin - 1, 0)], course.time[min(end, height.size - 1)])
-    top = float(height[at])
+    top = _largest(height[begin:end])
     return Quantity.spanning(top, least, most), Quantity.spanning(top - 1, low, high), moment
 
 

@@ -188,7 +188,7 @@ def time_to_descend(r: Array, b: Array, level: Array) -> Array:
         gap = np.where(logarithmic, np.log(np.where(logarithmic, f, 1.0)) + depth, f - level)
         slope = np.where(logarithmic, slope / np.where(logarithmic, f, 1.0), slope)
         low, high = np.where(gap > 0, x, low), np.where(gap > 0, high, x)
-        step = -gap / np.where(slope < 0, slope, -1e-30)
+        step = -gap / np.minimum(slope, -1e-30)
         x_new = x + step
         safe = (x_new >= low) & (x_new <= high) & (np.abs(step) <= np.maximum(0.5 * before, 1e-9 * x))
         x_new = np.where(safe, x_new, 0.5 * (low + high))

@@ -74,10 +74,12 @@ def observe(
 
     Notes
     -----
-    The record is smoothed (see smoothing), and each figure's interval holds the figures of all curves in a
-    band about the smoothed one that covers the whole course at the stated confidence. The intervals are
-    therefore rather too wide than too narrow. A long rest at the end is cut off before the
-    response itself is smoothed again.
+    The record is smoothed (see smoothing), and each figure's interval holds the figures of all curves in a band
+    about the smoothed one that covers the whole course at the stated confidence: rather too wide than too
+    narrow. A long rest at the end is set apart before the response is smoothed; there it shows the noise.
+
+    Without rows before the step, coloured noise and swings of a few rows each cannot be told apart, and the
+    intervals may then be too narrow.
     """
     time, measurement = np.asarray(time, dtype=np.float64), np.asarray(measurement, dtype=np.float64)
     first = int(np.searchsorted(time, step_time))

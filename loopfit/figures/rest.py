@@ -27,6 +27,8 @@ def moving_rows(since: Array, values: Array, fewest: int) -> int:
     noise, count, limit = square[half:].mean(), values.size - half, values.size
     while half >= fewest:
         quarter = int(np.searchsorted(since, since[half] / 2))
+        if half - quarter < _FEWEST_POINTS:
+            break
         # mean squares of the two stretches differ by chance by this factor (coloured noise has fewer free rows)
         chance = 1 + 4 * math.sqrt(1 / max(half - quarter, 1) + 1 / count)
         if not square[quarter:half].mean() <= chance * noise:
@@ -41,6 +43,8 @@ def room_for_a_swing(final: Quantity, change: float, moving: float, end: float) 
     A swing below 2 % of the change shows little at its top and lasts about as long as the motion before it. A
     record (up to `end`) at rest for 1.5 times as long as it moved needs no room; one just at rest needs 2 %.
     """
+    if not moving > 0:
+        return final
     room = LAST_SWING * change * max(1 - (end - moving) / (1.5 * moving), 0.0)
     return Quantity(final.value, final.low - room, final.high + room)
 
@@ -76,9 +80,9 @@ def resting_value(values: Array, start: float, variance: float, quantile: float)
         noise = quantile * math.sqrt(variance / length)
         ratio = np.exp(-_DURATION / parts)
         mean = ratio ** (parts - 1) * (1 - ratio) / -np.log(ratio)  # of exp(-t/T) over the last part
-        change = abs(last - start)
-        late, early = change * mean * (1 / ratio - 1), change * mean * (1 / ratio - 1) / ratio
         error = noise * math.sqrt(2)
+        change = max(abs(last - start), error, 1e-300)
+        late, early = change * mean * (1 / ratio - 1), change * mean * (1 / ratio - 1) / ratio
         drifts = abs(last - second), abs(second - first)
         most = np.minimum(most, np.maximum((drifts[0] + error) / late, (drifts[1] + error) / early))
         least = np.maximum(least, np.maximum((drifts[0] - error) / late, (drifts[1] - error) / early))

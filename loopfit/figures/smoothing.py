@@ -32,8 +32,9 @@ _SOFTER = 10.0
 class Curve:
     """A smoothed record: times (m,), s, values (m,), standard errors (m,).
 
-    `interval` is the time between independent readings, `freedom` the number of independent values in the curve, `long_variance` the variance that one row
-    contributes to a long mean (variance of the mean x rows), `noise_rms` the scatter of the block means.
+    `interval` is the time between independent readings, `freedom` the number of independent values in the curve,
+    `long_variance` the variance that one row contributes to a long mean (variance of the mean x rows), and
+    `noise_rms` the scatter of the block means.
     """
 
     time: Array
@@ -137,6 +138,8 @@ def smooth(time: Array, measurement: Array, before: Array, least_noise: float = 
     chosen = np.nonzero(weight > 0.02)
     weight = weight[chosen] / weight[chosen].sum()
     scale = scale[chosen]
+    if known:  # no form of the curve fits exactly: the noise must not come out below that of the rows at rest
+        scale = np.maximum(scale, rest[chosen[0]] / (quiet.size - 1))
     noise = colour[chosen[0]] * scale[:, None]
     kept = np.ones_like(noise)
     curve = scale[:, None] * bend[chosen[1:]] * _SOFTER

@@ -55,7 +55,7 @@ def criterion(fit: Fit) -> float:
 def change_of(fit: Fit, trace: Trace) -> float:
     """Return the change of the measurement that the model says, with its sign.
 
-    The gain times the step; the largest excursion from rest, for a release; the whole travel, where an
+    The gain times the travel of the input; the largest excursion from rest, for a release; the whole travel, where an
     integrating plant has no final value.
     """
     columns, _ = fit.columns.evaluate(fit.theta[None], derivatives=False)
@@ -63,7 +63,7 @@ def change_of(fit: Fit, trace: Trace) -> float:
     if trace.input is None:
         return float(np.max(np.abs(moving / fit.columns.samples.root_count)))
     if 1 in fit.structure.rungs:
-        return float(fit.linear[0] * np.sum(trace.input.sizes))
+        return float(fit.linear[0] * np.ptp(np.append(0.0, np.cumsum(trace.input.sizes))))
     return float(np.ptp(moving / fit.columns.samples.root_count))
 
 

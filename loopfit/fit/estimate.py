@@ -51,6 +51,11 @@ class Trace:
     step_row: int
 
     @property
+    def last_change(self) -> float:
+        """Instant of the last change of the input, s; of the first row, for a release."""
+        return self.begins if self.input is None else float(self.input.times[-1])
+
+    @property
     def span(self) -> float:
         """Time from the step to the last row, s."""
         return float(self.time[-1] - self.begins)

@@ -55,7 +55,12 @@ def check_count(source: str, rows: int) -> None:
 
 
 def usable_rows(
-    table: Table, seconds: Array, time_name: str | None, roles: Mapping[str, Column], findings: list[Finding]
+    table: Table,
+    seconds: Array,
+    time_name: str | None,
+    roles: Mapping[str, Column],
+    findings: list[Finding],
+    unflagged: NDArray[np.bool_],
 ) -> tuple[NDArray[np.int64], dict[str, Column]]:
     """Return the rows whose time and signals are all numbers, and the roles with sparse inputs held.
 
@@ -70,6 +75,7 @@ def usable_rows(
     good = np.isfinite(seconds)
     if not good.all():
         findings.append(_bad(table, np.flatnonzero(~good), time_name or "time"))
+    good &= unflagged
     for column in roles.values():
         values = column.values
         assert values is not None
@@ -85,16 +91,18 @@ def usable_rows(
     if len(rows) < 5:
         total = len(table.lines)
         names = names_text([column.name for column in roles.values()])
-        raise RecordError(table.source, f"only {len(rows)} of {count_of(total, 'row')} have a time and a number in {names}; at least 5 are needed")
+        raise RecordError(
+            table.source,
+            f"only {len(rows)} of {count_of(total, 'row')} have a time and a number in {names}; at least 5 are needed",
+        )
     return rows, roles
 
 
 def _bad(table: Table, places: NDArray[np.int64], name: str) -> Finding:
     lines = [int(table.lines[place]) for place in places[:4]] + [0] * (len(places) - 4)
     share = len(places) / max(1, len(table.lines))
-    text = (
-        f"{count_of(len(places), 'row')} without a number in {name!r} left out ({lines_text(lines)})"
-        + ("; with so many gone the figures may be wrong" if share > 0.05 else "")
+    text = f"{count_of(len(places), 'row')} without a number in {name!r} left out ({lines_text(lines)})" + (
+        "; with so many gone the figures may be wrong" if share > 0.05 else ""
     )
     return Finding(code="bad_cells", severity="warning", text=text)
 

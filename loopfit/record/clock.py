@@ -6,18 +6,18 @@ import re
 from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import date, datetime, time, timedelta
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
 
 from loopfit.core.arrays import Array
 from loopfit.core.finding import Finding
-from loopfit.record.units import seconds_per
 
 _MONTHS = {
-    "jan": 1, "ene": 1, "feb": 2, "fev": 2, "fév": 2, "mar": 3, "mär": 3, "mrz": 3, "apr": 4, "avr": 4, "abr": 4, "may": 5,
-    "mai": 5, "jun": 6, "jui": 6, "jul": 7, "aug": 8, "aou": 8, "aoû": 8, "ago": 8, "sep": 9, "oct": 10, "okt": 10, "nov": 11,
-    "dec": 12, "dez": 12, "déc": 12, "dic": 12,
+    "jan": 1, "ene": 1, "feb": 2, "fev": 2, "fév": 2, "mar": 3, "mär": 3, "mrz": 3, "apr": 4, "avr": 4, "abr": 4,
+    "may": 5, "mai": 5, "jun": 6, "jui": 6, "jul": 7, "aug": 8, "aou": 8, "aoû": 8, "ago": 8, "sep": 9, "oct": 10,
+    "okt": 10, "nov": 11, "dec": 12, "dez": 12, "déc": 12, "dic": 12,
 }  # fmt: skip
 _STAMP = re.compile(
     r"\s*(?:(\d{1,4})([-/. ]) ?([^\W\d_]{3,10}\.?|\d{1,2})[-/. ]+(\d{1,4}))?[T ,_]*"
@@ -26,15 +26,6 @@ _STAMP = re.compile(
 )
 _MICROSECOND = timedelta(microseconds=1)
 _STAMP_WORDS = re.compile(_STAMP.pattern, re.IGNORECASE)
-# size of a time since 1970 (or 1601, 0001 for ticks of 100 ns), and its units in a second
-_EPOCHS = (
-    (9e8, 1e10, 1),
-    (9e11, 1e13, 10**3),
-    (9e14, 1e16, 10**6),
-    (1.1e17, 1.7e17, 10**7),
-    (6e17, 7e17, 10**7),
-    (9e17, 1e19, 10**9),
-)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -58,71 +49,6 @@ class Clock:
 
 class UndecidedStampsError(ValueError):
     """Two readings of the stamps give different elapsed times; the text says which."""
-
-
-def numeric_clock(values: Array, name: str, unit: str | None, cells: Sequence[str] | None = None) -> Clock:
-    """Return seconds from numbers, by the unit in the header or the words of the name, else by their size."""
-    known = values[np.isfinite(values)]
-    factor = seconds_per(unit)
-    if factor is None and unit is None:
-        words = re.split(r"[\W_]+", name.lower())
-        factor = next(
-            (seconds_per(word) for word in reversed(words) if len(word) > 1 and seconds_per(word) is not None), None
-        )
-    middle = float(np.median(known)) if len(known) else 0.0
-    if 1.9e13 < middle < 2.2e13 and bool(np.all(known == np.floor(known))):  # 20260301115950
-        compact = stamp_clock([f"{int(v):014d}"[:8] + "T" + f"{int(v):014d}"[8:] if np.isfinite(v) else "" for v in values], name)
-        if compact is not None:
-            return compact
-    per_second = next((count for low, high, count in _EPOCHS if low <= middle < high), None)
-    if per_second is not None and (factor is None or abs(factor * per_second - 1) < 1e-9):
-        return _epoch(values, name, per_second, cells)
-    if factor is not None and not (factor == 86400.0 and middle > 20000):
-        seconds = values if factor == 1 else values * factor if factor > 1 else values / round(1 / factor)
-        return Clock(seconds=seconds, kind="seconds", of_day_s=None, weekday=None, findings=())
-    if _are_days(known, name, factor):
-        text = f"{name!r} is read as days of a spreadsheet's calendar: one day is 86400 s"
-        finding = Finding(code="time_in_days", severity="note", text=text)
-        first = float(known[0])
-        # days with nine decimals tell 0.1 ms: rounding to 1 µs takes out the error of multiplying
-        seconds = np.round((values - np.floor(first)) * 86400.0, 6)
-        seconds = np.round(seconds - np.round((first - np.floor(first)) * 86400.0, 6), 6)
-        return Clock(seconds=seconds, kind="date", of_day_s=None, weekday=None, findings=(finding,))
-    text = f"no unit of time is stated for {name!r}: it is read as seconds"
-    finding = Finding(code="time_unit_assumed", severity="note", text=text)
-    return Clock(seconds=values, kind="seconds", of_day_s=None, weekday=None, findings=(finding,))
-
-
-def _epoch(values: Array, name: str, per_second: int, cells: Sequence[str] | None) -> Clock:
-    first = float(values[np.isfinite(values)][0])
-    seconds = (values - first) / per_second
-    if abs(first) > 2**53 and cells is not None:  # whole numbers beyond what a float holds
-        whole = [int(cell) if re.fullmatch(r"\d+", cell) else None for cell in cells]
-        start = next((value for value in whole if value is not None), 0)
-        seconds = np.array([np.nan if value is None else (value - start) / per_second for value in whole])
-    names = {1: "seconds", 10**3: "milliseconds", 10**6: "microseconds", 10**7: "ticks of 100 ns", 10**9: "nanoseconds"}
-    text = f"{name!r} is read, by its size, as {names[per_second]} of a calendar clock; time 0 is the first row"
-    return Clock(
-        seconds=seconds,
-        kind="date",
-        of_day_s=None,
-        weekday=None,
-        findings=(Finding(code="time_epoch", severity="note", text=text),),
-    )
-
-
-def _are_days(known: Array, name: str, factor: float | None) -> bool:
-    """Return whether numbers are days since 1900 or since year 0: in the range of 2000 to 2100, in steps of whole milliseconds."""
-    if len(known) < 3:
-        return False
-    first, last = float(known[0]), float(known[-1])
-    if not ((36526 <= first <= last <= 73415) or (730486 <= first <= last <= 767376)):
-        return False
-    step = float(np.median(np.diff(known))) * 86400.0
-    named = factor == 86400.0 or re.search(r"date|datum|fecha|day|tag|serial", name, re.IGNORECASE) is not None
-    return 0 < step < 43200 and (
-        named or (last - first < 40 and step > 0.005 and bool(np.any(known != np.round(known, 3))))
-    )
 
 
 def stamp_clock(cells: Sequence[str], name: str) -> Clock | None:
@@ -149,7 +75,12 @@ def stamp_clock(cells: Sequence[str], name: str) -> Clock | None:
 
 def _iso(cells: Sequence[str]) -> Clock | None:
     """Return the clock of stamps that are all ISO 8601 with at most microseconds, None when any is not."""
-    if not cells or len(cells[0]) < 10 or not cells[0][:4].isdigit() or ("-" not in cells[0][:8] and cells[0][8:9] != "T"):
+    if (
+        not cells
+        or len(cells[0]) < 10
+        or not cells[0][:4].isdigit()
+        or ("-" not in cells[0][:8] and cells[0][8:9] != "T")
+    ):
         return None
     if any(len(cell) > 26 and re.search(r"[.,]\d{7}", cell) for cell in (cells[0], cells[-1])):
         return None
@@ -167,7 +98,9 @@ def _iso(cells: Sequence[str]) -> Clock | None:
     of_day = ticks + (first - datetime.combine(first.date(), time())) // _MICROSECOND
     days = of_day // 86_400_000_000
     weekday = ((days + first.weekday()) % 7).astype(np.float64)
-    return Clock(seconds=ticks / 1e6, kind="date", of_day_s=(of_day % 86_400_000_000) / 1e6, weekday=weekday, findings=())
+    return Clock(
+        seconds=ticks / 1e6, kind="date", of_day_s=(of_day % 86_400_000_000) / 1e6, weekday=weekday, findings=()
+    )
 
 
 _Groups = Sequence["tuple[str | None, ...] | None"]
@@ -239,10 +172,14 @@ def _dates(groups: _Groups, name: str) -> Clock | None:
         else:
             both = " or ".join(elapsed)
             raise UndecidedStampsError(
-                f"dates such as {''.join(str(part) for part in sample[:3])}{sample[1]}{sample[3]} can be read {both}, with different elapsed times; write them as 2026-03-01"
+                f"dates such as {''.join(str(part) for part in sample[:3])}{sample[1]}{sample[3]} can be read "
+                f"{both}, with different elapsed times; write them as 2026-03-01"
             )
     elif len(readings) > 1:
-        text = f"whether the dates of {name!r} are {' or '.join(readings)} cannot be told; the times between rows do not depend on it"
+        text = (
+            f"whether the dates of {name!r} are {' or '.join(readings)} cannot be told; the times between rows do "
+            f"not depend on it"
+        )
         findings.append(Finding(code="date_order", severity="note", text=text))
     seconds = np.array([np.nan if tick is None else (tick - start) / 1e9 for tick in ticks])
     zoned = any(group is not None and group[9] is not None for group in groups)
@@ -261,7 +198,7 @@ def _first(ticks: Sequence[int | None]) -> int:
 
 def _rises(ticks: Sequence[int | None]) -> bool:
     known = [tick for tick in ticks if tick is not None]
-    pairs = list(zip(known, known[1:], strict=False))
+    pairs = list(pairwise(known))
     return all(b >= a for a, b in pairs) or all(b <= a for a, b in pairs)
 
 

@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import numpy as np
+from numpy.typing import NDArray
 
 from loopfit.core.arrays import Array
 
@@ -13,10 +16,9 @@ def is_constant(values: Array) -> bool:
     return len(known) == 0 or bool(np.all(known == known[0]))
 
 
-def changes_of(values: Array) -> Array:
+def changes_of(values: Array) -> NDArray[np.int64]:
     """Return the rows (k,) at which the value differs from the row before."""
-    changed: Array = np.flatnonzero(np.diff(values) != 0) + 1
-    return changed
+    return np.flatnonzero(np.diff(values) != 0) + 1
 
 
 def is_stepped(values: Array) -> bool:
@@ -59,7 +61,7 @@ def follows(measurement: Array, stepped: Array) -> bool:
     known = np.isfinite(measurement) & np.isfinite(stepped)
     y, r = measurement[known], stepped[known]
     edges = [0, *changes_of(r).tolist(), len(r)]
-    stretches = [(a, b) for a, b in zip(edges, edges[1:], strict=False)]
+    stretches = [(a, b) for a, b in pairwise(edges)]
     longest = max(b - a for a, b in stretches)
     judged = [(a, b) for a, b in stretches if b - a >= max(8, longest / 5)] or stretches
     step = float(np.ptp(r))
@@ -76,11 +78,13 @@ def distance(measurement: Array, reference: Array) -> float:
     """Return how far a column is from a reference: rms difference over the rms of the reference about its mean."""
     known = np.isfinite(measurement) & np.isfinite(reference)
     spread = float(np.std(reference[known]))
-    return float(np.sqrt(np.mean((measurement[known] - reference[known]) ** 2))) / spread if spread > 0 else float("inf")
+    return (
+        float(np.sqrt(np.mean((measurement[known] - reference[known]) ** 2))) / spread if spread > 0 else float("inf")
+    )
 
 
 def same_shape(one: Array, other: Array) -> bool:
-    """Return whether one column is the other in another unit: a straight line between them, to a thousandth of the range."""
+    """Return whether one column is the other in another unit: a straight line, to a thousandth of the range."""
     known = np.isfinite(one) & np.isfinite(other)
     a, b = one[known], other[known]
     if len(a) < 3 or is_constant(a) or is_constant(b):

@@ -35,7 +35,12 @@ def table_by_columns(
     text, and cells with units make this function return None; the text is then read again row by row.
     """
     closed = body.endswith(b"\n")
-    if layout.delimiter == " " or layout.marks.thousands or body.count(b'"') % 2 or (not closed and _is_doubtful(body, layout)):
+    if (
+        layout.delimiter == " "
+        or layout.marks.thousands
+        or body.count(b'"') % 2
+        or (not closed and _is_doubtful(body, layout))
+    ):
         return None
     padded = (layout.delimiter + " ").encode()
     if b'"' not in body and padded in body[:10000]:
@@ -44,7 +49,7 @@ def table_by_columns(
     stamps = _stamp_columns(body, layout, numeric)
     plain = [flag and place not in stamps for place, flag in enumerate(numeric)]
     frame = _frame(body, layout, plain)
-    if frame is None or frame.height != rows or any(s.null_count() for s, flag in zip(frame, plain, strict=True) if flag):
+    if frame is None or frame.height != rows or not _all_finite(frame, plain):
         frame = _frame(body, layout, [False] * len(plain))
     if frame is None or frame.height != rows or frame.to_series(-1).null_count() or _has_comments(frame):
         return None
@@ -83,6 +88,12 @@ def _frame(body: bytes, layout: Layout, numbers: list[bool]) -> pl.DataFrame | N
         return pl.read_csv(body, has_header=False, separator=layout.delimiter, schema=schema, decimal_comma=mark)
     except (pl.exceptions.PolarsError, ValueError):
         return None
+
+
+def _all_finite(frame: pl.DataFrame, numbers: list[bool]) -> bool:
+    """Return whether every cell of the columns of numbers is a finite number."""
+    columns = [series for series, flag in zip(frame, numbers, strict=True) if flag]
+    return all(not series.null_count() and bool(series.is_finite().all()) for series in columns)
 
 
 def _column(place: int, series: pl.Series, header: Header, layout: Layout, number: bool) -> Column | None:
@@ -140,5 +151,9 @@ def _stamp_columns(body: bytes, layout: Layout, numeric: list[bool]) -> list[int
     for line in body[:20000].decode(errors="replace").split("\n"):
         cells = split_line(line, layout.delimiter)
         if len(cells) >= len(numeric):
-            return [place for place, flag in enumerate(numeric) if flag and any(m in cells[place][1:] for m in ":/T-") and "e-" not in cells[place].lower()]
+            return [
+                place
+                for place, flag in enumerate(numeric)
+                if flag and any(m in cells[place][1:] for m in ":/T-") and "e-" not in cells[place].lower()
+            ]
     return []

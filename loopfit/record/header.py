@@ -26,7 +26,7 @@ class Header:
     cells: tuple[str, ...]
     first: int
     preamble: tuple[str, ...]
-    index_unnamed: bool = False
+    unfit: tuple[int, int] | None = None  # line and number of names of a header that does not fit the rows
 
 
 def is_comment(line: str) -> bool:
@@ -55,7 +55,7 @@ def find_header(rows: Sequence[Row], layout: Layout, numeric: Sequence[bool], li
     units: list[str | None] = [None] * width
     used = 0
     for line, cells in reversed(above):
-        fitted = _fit(cells, lines[line - 1] if line <= len(lines) else "", width)
+        fitted = _fit(cells, lines[line - 1] if line <= len(lines) else "", width, layout.delimiter in " \t")
         if fitted is None:
             break
         if names is None and used == 0 and _are_units(fitted):
@@ -78,7 +78,14 @@ def find_header(rows: Sequence[Row], layout: Layout, numeric: Sequence[bool], li
     names = plain if names is None else [name or other for name, other in zip(names, plain, strict=True)]
     split = [split_unit(name) for name in names] if named else [(name, None) for name in names]
     units = [unit or own for unit, (_, own) in zip(units, split, strict=True)]
-    blank_first = named and names[0] == plain[0]
+    unfit = None
+    if (
+        not named
+        and above
+        and len(above[-1][1]) > 1
+        and all(cell_kind(c, layout.marks) == "text" for c in above[-1][1])
+    ):
+        unfit = above[-1][0], len(above[-1][1])
     return Header(
         names=tuple(names),
         units=tuple(units),
@@ -86,7 +93,7 @@ def find_header(rows: Sequence[Row], layout: Layout, numeric: Sequence[bool], li
         cells=cells_above,
         first=first,
         preamble=preamble,
-        index_unnamed=blank_first,
+        unfit=unfit,
     )
 
 
@@ -107,7 +114,7 @@ def _is_poor_data(cells: Sequence[str], layout: Layout, numeric: Sequence[bool])
     return kinds[0] in ("number", "stamp") and 2 * good >= len(kinds)
 
 
-def _fit(cells: list[str], line: str, width: int) -> list[str] | None:
+def _fit(cells: list[str], line: str, width: int, row_names: bool) -> list[str] | None:
     """Return the cells of a header line as `width` names, None when they cannot be brought to that number."""
     body = _COMMENT.sub("", line)
     choices = [cells]
@@ -122,7 +129,9 @@ def _fit(cells: list[str], line: str, width: int) -> list[str] | None:
             choice = choice[:-1]
         if len(choice) == width and any(choice):
             return [cell.strip().strip('"').strip() for cell in choice]
-    if len(cells) == width - 1 and width > 2 and all(cells):  # row names, as statistics programs write them
+    if (
+        row_names and len(cells) == width - 1 and width > 2 and all(cells)
+    ):  # row names, as statistics programs write them
         return ["", *cells]
     return None
 

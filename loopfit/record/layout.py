@@ -7,6 +7,7 @@ import re
 from collections import Counter
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 
 from loopfit.record.number import Marks, is_bad_word, parse_number, thousands_suspected
 
@@ -25,10 +26,10 @@ _MONTHS = (
     "jan|feb|fév|fev|ene|mar|mär|mrz|apr|avr|abr|may|mai|jun|jui|jul|aug|aoû|aou|ago|sep|oct|okt|nov|dec|dez|déc|dic"
 )
 STAMP = re.compile(
-    r"(?:\d{4}-\d{1,2}-\d{1,2}|\d{1,4}([-/.])\d{1,2}\1\d{1,4}|\d{1,4}[-/. ] ?(?:"
-    + _MONTHS
-    + r")[^\d\s]*[-/. ]+\d{1,4}|\d{8}(?=T))"
-    r"(?:[T ,_]+\d{1,2}[:.]?\d{2}.*)?|[+-]?\d{1,4}:\d{2}(?::\d{2})?(?:[.,]\d+)?(?: ?[ap]\.?m\.?)?",
+    r"(?:\d{4}-\d{1,2}-\d{1,2}|\d{1,4}([-/.])\d{1,2}\1\d{1,4}|\d{8}(?=T)"
+    rf"|\d{{1,4}}[-/. ] ?(?:{_MONTHS})[^\d\s]*[-/. ]+\d{{1,4}})"
+    r"(?:[T ,_]+\d{1,2}(?:[:.]?\d{2}){1,2}(?:[.,:]\d{1,9})?\s*(?:[ap]\.?m\.?)?\s*(?:Z|UTC|GMT|[+-]\d{2}:?\d{2})?)?"
+    r"|[+-]?\d{1,4}:\d{2}(?::\d{2})?(?:[.,]\d+)?(?: ?[ap]\.?m\.?)?",
     re.ASCII | re.IGNORECASE,
 )
 Row = tuple[int, list[str]]  # line of the file, counted from 1, and its cells
@@ -124,12 +125,14 @@ def layout_of_cells(rows: Sequence[list[str]]) -> Layout | None:
 
 
 def _score(split: Sequence[list[str]], marks: Marks) -> tuple[float, int]:
-    kinds = [[cell_kind(cell, marks) for cell in _trimmed(cells)] for cells in split]
+    kinds = [[cell_kind(cell, marks) for cell in cells] for cells in split]
     widths = Counter(len(row) for row in kinds if "number" in row or "stamp" in row)
     if not widths:
         return 0.0, 0
-    width = max(widths, key=lambda count: (widths[count], count))
-    rows = [row for row in kinds if len(row) == width]
+    usual = width = max(widths, key=lambda count: (widths[count], count))
+    while width > 1 and not any(cells[width - 1] for cells in split if len(cells) >= width):
+        width -= 1  # closing delimiters
+    rows = [row[:width] for row in kinds if width <= len(row) <= usual]
     good = text = 0
     for column in zip(*rows, strict=True):
         full = sum(kind != "bad" for kind in column)
@@ -146,20 +149,12 @@ def _score(split: Sequence[list[str]], marks: Marks) -> tuple[float, int]:
 def numeric_columns(rows: Sequence[list[str]], layout: Layout) -> list[bool]:
     """Return which columns hold numbers or times in most rows, and are filled in at least half of them."""
     numeric = []
-    for column in zip(*[row for row in map(_trimmed, rows) if len(row) == layout.width], strict=True):
+    for column in zip(*[row[: layout.width] for row in rows if len(row) >= layout.width], strict=True):
         kinds = [cell_kind(cell, layout.marks) for cell in column]
         full = sum(kind != "bad" for kind in kinds)
         good = sum(kind in ("number", "stamp") for kind in kinds)
         numeric.append(2 * full >= len(kinds) and good >= 0.6 * full)
     return numeric
-
-
-def _trimmed(cells: list[str]) -> list[str]:
-    """Return the cells without the empty ones at the end, which a closing delimiter makes."""
-    end = len(cells)
-    while end > 1 and not cells[end - 1]:
-        end -= 1
-    return cells[:end]
 
 
 def _settle(layout: Layout, split: Sequence[list[str]]) -> Layout:
@@ -173,7 +168,7 @@ def _settle(layout: Layout, split: Sequence[list[str]]) -> Layout:
     ):
         rows = [cells for cells in split if len(cells) == 2 and all(c.lstrip("+-").isdigit() for c in cells)]
         heads = [cells for cells in split if not any(c.lstrip("+-").isdigit() for c in cells)]
-        rising = all(float(a[0]) < float(b[0]) for a, b in zip(rows, rows[1:], strict=False))
+        rising = all(float(a[0]) < float(b[0]) for a, b in pairwise(rows))
         unsigned = all(row[1].isdigit() for row in rows)
         if unsigned and not rising and (not heads or len(heads[-1]) == 1):
             return Layout("\t", Marks(","), 1)  # one column of 12,5 rather than two of 12 and 5

@@ -6,17 +6,23 @@ import re
 from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import lru_cache
+from itertools import pairwise
 
 import numpy as np
 
 from loopfit.core.arrays import Array
 from loopfit.record.units import UNITS
+from loopfit.record.wording import word_set
 
-BAD_WORDS = frozenset(
-    "nan|na|n/a|n.a.|#n/a|null|nil|none|bad|-|--|---|----|-----|no data|nodata|no_data|no value|error|err|#value!|#div/0!|#ref!"
-    "|inf|-inf|+inf|1.#inf|-1.#inf|1.#qnan|1.#ind|-1.#ind|overrange|over range|under range|underrange|ol|+ol|-ol|overflow|fault"
-    "|failed|comm fail|timeout|i/o timeout|invalid|missing|?|??|???|*|**|***|off-line|offline|shutdown|bad input|pt created"
-    "|ungültig|fehler|kein wert|keine daten|erreur|défaut|invalide|pas de données|fallo|inválido|sin datos".split("|")
+BAD_WORDS = word_set(
+    "nan|na|n/a|n.a.|#n/a|null|nil|none|bad|-|--|---|----|-----|no data|nodata|no_data|no "
+    "value|error|err|#value!|#div/0!|#ref!"
+    "|inf|-inf|+inf|1.#inf|-1.#inf|1.#qnan|1.#ind|-1.#ind|overrange|over range|under "
+    "range|underrange|ol|+ol|-ol|overflow|fault"
+    "|failed|comm fail|timeout|i/o timeout|invalid|missing|?|??|???|*|**|***|off-line|offline|shutdown|bad "
+    "input|pt created"
+    "|ungültig|fehler|kein wert|keine daten|erreur|défaut|invalide|pas de données|fallo|inválido|sin datos",
+    "|",
 )
 _BLANKS = "[ \u00a0\u202f\u2009]"
 
@@ -112,9 +118,18 @@ def thousands_suspected(cells: Sequence[str], mark: str) -> bool:
         return False
     if any(cell.count(mark) > 1 for cell in marked):
         return True
-    small = [cell for cell in bare if re.fullmatch(r"[+\-]?\d{1,3}", cell)]
-    return (
-        len(set(marked)) >= 2
-        and len(small) >= 2
-        and len(small) == len([cell for cell in bare if any(c.isdigit() for c in cell)])
-    )
+    if any(not re.fullmatch(r"[+\-]?\d{1,3}", cell) for cell in bare if any(letter.isdigit() for letter in cell)):
+        return False
+    return _thousands_join_better(cells, mark)
+
+
+def _thousands_join_better(cells: Sequence[str], mark: str) -> bool:
+    """Return whether marked cells lie nearer to their bare neighbours as thousands than as decimals: 998, 1.002."""
+    votes = 0
+    for before, after in pairwise(cells):
+        marked, bare = (before, after) if mark in before else (after, before)
+        if mark not in marked or mark in bare or not bare.lstrip("+-").isdigit() or int(bare) == 0:
+            continue
+        thousands = abs(float(marked.replace(mark, "")) / float(bare))
+        votes += 1 if thousands < 1000 / thousands else -1  # as a decimal it is a thousandth of that
+    return votes > 0

@@ -45,7 +45,9 @@ def is_workbook(data: bytes) -> bool:
 
 
 def _too_large(source: str) -> RecordError:
-    return RecordError(source, f"unpacks to more than {LARGEST // 2**20} MB; unpack it and keep the part with the step test")
+    return RecordError(
+        source, f"unpacks to more than {LARGEST // 2**20} MB; unpack it and keep the part with the step test"
+    )
 
 
 def _gunzip(source: str, data: bytes) -> bytes:
@@ -76,12 +78,25 @@ def _unzip(source: str, data: bytes) -> bytes:
             members = [m for m in archive.infolist() if not m.is_dir() and not m.filename.startswith(("__MACOSX", "."))]
             if len(members) != 1:
                 names = ", ".join(member.filename for member in members[:5])
-                raise RecordError(source, f"the archive holds {len(members)} files ({names}); unpack it and name one" if members else "the archive is empty")
+                raise RecordError(
+                    source,
+                    f"the archive holds {len(members)} files ({names}); unpack it and name one"
+                    if members
+                    else "the archive is empty",
+                )
             if members[0].flag_bits & 1:
                 raise RecordError(source, "the archive is locked with a password; unpack it first")
             with archive.open(members[0]) as stream:
                 inside = stream.read(LARGEST + 1)
-    except (zipfile.BadZipFile, zlib.error, EOFError, OSError, NotImplementedError, ValueError, RuntimeError) as problem:
+    except (
+        zipfile.BadZipFile,
+        zlib.error,
+        EOFError,
+        OSError,
+        NotImplementedError,
+        ValueError,
+        RuntimeError,
+    ) as problem:
         if isinstance(problem, RecordError):
             raise
         raise RecordError(source, "the zip archive is damaged; fetch the file again") from None

@@ -27,7 +27,9 @@ def table_from_parquet(source: str, data: bytes) -> Table:
         schema = pl.read_parquet_schema(io.BytesIO(data))
         height = pl.scan_parquet(io.BytesIO(data)).select(pl.len()).collect().item()
         if height * max(len(schema), 1) * 8 > _MOST_BYTES:
-            raise RecordError(source, f"{height} rows of {len(schema)} columns are too many; keep only the part with the step test")
+            raise RecordError(
+                source, f"{height} rows of {len(schema)} columns are too many; keep only the part with the step test"
+            )
         frame = pl.read_parquet(io.BytesIO(data))
     except RecordError:
         raise
@@ -49,7 +51,15 @@ def table_from_parquet(source: str, data: bytes) -> Table:
             values = series.dt.total_nanoseconds().cast(pl.Float64).to_numpy() / 1e9
         else:
             cells = series.cast(pl.String, strict=False).fill_null("").to_list()
-        columns.append(Column(number=place + 1, name=name or f"column {place + 1}", unit=split_unit(name)[1], values=values, cells=cells))
+        columns.append(
+            Column(
+                number=place + 1,
+                name=name or f"column {place + 1}",
+                unit=split_unit(name)[1],
+                values=values,
+                cells=cells,
+            )
+        )
     if not columns or not frame.height:
         raise RecordError(source, "the Parquet file has no rows")
     return Table(

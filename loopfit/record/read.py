@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping, Sequence
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -12,12 +12,14 @@ from loopfit.core.arrays import Array, read_only
 from loopfit.core.errors import RecordError
 from loopfit.core.finding import Finding
 from loopfit.record.checks import check_count, check_interval, check_roles, check_window, usable_rows
+from loopfit.record.longform import wide_from_long, without_flagged
 from loopfit.record.record import Record, Signal
 from loopfit.record.rising import rising
 from loopfit.record.roles import assign_roles
 from loopfit.record.source import read_table
 from loopfit.record.table import Column, Table
-from loopfit.record.timebase import time_base
+from loopfit.record.timebase import TimeBase, clock_of, is_stamped, time_base
+from loopfit.record.units import split_unit
 from loopfit.record.wording import names_text
 
 Window = tuple[float | None, float | None]
@@ -101,16 +103,24 @@ def record_from_arrays(
     count = len(signals["measurement"])
     for role, values in signals.items():
         if len(values) != count:
-            raise RecordError("arrays", f"the {role} has {len(values)} values, the measurement {count}; give arrays of one length")
+            raise RecordError(
+                "arrays", f"the {role} has {len(values)} values, the measurement {count}; give arrays of one length"
+            )
         bad = np.flatnonzero(~np.isfinite(values))
         if len(bad):
-            raise RecordError("arrays", f"the {role} is {values[bad[0]]} there; leave out such rows", row=int(bad[0]) + 1)
+            raise RecordError(
+                "arrays", f"the {role} is {values[bad[0]]} there; leave out such rows", row=int(bad[0]) + 1
+            )
     if "time" not in signals:
-        signals["time"] = np.arange(count) * float(interval_s if interval_s is not None else np.nan)
+        signals["time"] = np.arange(count, dtype=np.float64) * float(interval_s or np.nan)
     back = np.flatnonzero(np.diff(signals["time"]) <= 0)
     if len(back):
-        raise RecordError("arrays", "the time does not rise there; sort the rows and leave out repeated times", row=int(back[0]) + 2)
-    columns = {role: Column(number=0, name=role, unit=None, values=values, cells=None) for role, values in signals.items()}
+        raise RecordError(
+            "arrays", "the time does not rise there; sort the rows and leave out repeated times", row=int(back[0]) + 2
+        )
+    columns = {
+        role: Column(number=0, name=role, unit=None, values=values, cells=None) for role, values in signals.items()
+    }
     return _record("arrays", count, signals["time"], None, columns, [], [], np.arange(count), window_s)
 
 
@@ -120,20 +130,27 @@ def record_from_table(
     """Return the record in a table: find the roles, then the rows that can be used."""
     source = table.source
     check_count(source, len(table.lines))
+    tag = str(columns["measurement"]) if columns and "measurement" in columns else None
+    table, good = without_flagged(wide_from_long(table, clock_of, tag))
     given = {role: _find(table, role, wanted) for role, wanted in (columns or {}).items()}
     taken = frozenset(column.number for role, column in given.items() if role != "time")
     base = time_base(table, given.get("time"), interval_s, taken)
     beside = base.used | base.set_aside
     numeric = [c for c in table.columns if c.values is not None and (c.number not in beside or c.number in taken)]
     numeric = [c for c in numeric if c.number not in base.used]
-    roles, others, role_findings = assign_roles(source, numeric, {role: c for role, c in given.items() if role != "time"})
-    findings = [*table.findings, *base.findings, *role_findings]
-    rows, roles = usable_rows(table, base.clock.seconds, base.name, roles, findings)
+    roles, others, role_findings = assign_roles(
+        source, numeric, {role: c for role, c in given.items() if role != "time"}
+    )
+    findings = [*table.findings, *base.findings, *role_findings, *_unread(table, base)]
+    rows, roles = usable_rows(table, base.clock.seconds, base.name, roles, findings, good)
     signals = [column.values for column in (*roles.values(), *others) if column.values is not None]
 
     def same_as_before(places: NDArray[np.int64]) -> NDArray[np.bool_]:
         here, before = rows[places], rows[places - 1]
-        return np.all([values[here] == values[before] for values in signals], axis=0)
+        same = np.ones(len(places), dtype=bool)
+        for values in signals:
+            same &= values[here] == values[before]
+        return same
 
     restarts = [int(np.searchsorted(rows, restart)) for restart in table.restarts]
     clock = base.clock if len(rows) == len(table.lines) else base.clock.part(rows)
@@ -141,6 +158,19 @@ def record_from_table(
     findings += line.findings
     total = len(table.lines) + table.set_aside
     return _record(source, total, line.seconds, base.name, roles, others, findings, rows[line.rows], window_s)
+
+
+def _unread(table: Table, base: TimeBase) -> list[Finding]:
+    """Return a note of the columns that hold texts, which no figure uses."""
+    texts = [
+        c
+        for c in table.columns
+        if c.values is None and c.number not in base.used and not is_stamped(c) and any(c.cells or ())
+    ]
+    if not texts:
+        return []
+    text = f"not read, since they hold no numbers: {names_text([column.name for column in texts])}"
+    return [Finding(code="text_columns", severity="note", text=text)]
 
 
 def _record(
@@ -190,7 +220,7 @@ def _record(
 
 def _one_array(role: str, values: ArrayLike) -> Array:
     try:
-        array = np.asarray(values, dtype=np.float64)
+        array: Array = np.asarray(values, dtype=np.float64)
     except (TypeError, ValueError):
         raise RecordError("arrays", f"the {role} is not an array of numbers") from None
     if array.ndim != 1:
@@ -202,23 +232,29 @@ def _find(table: Table, role: str, wanted: str | int) -> Column:
     """Return the column of that name (exact, then without regard to case or unit) or number."""
     names = [column.name for column in table.columns]
     if isinstance(wanted, str):
-        for same in (
-            lambda c: c.name == wanted.strip(),
-            lambda c: c.name.casefold() == wanted.strip().casefold(),
-            lambda c: c.name.casefold().startswith(wanted.strip().casefold()) and not c.name[len(wanted.strip()) :].strip()[:1].isalnum(),
-        ):
-            matches = [column for column in table.columns if same(column)]
+        for matches in _by_name(table.columns, wanted.strip()):
             if len(matches) == 1:
                 return _numeric_or_time(table, role, matches[0])
             if matches:
                 numbers = " or ".join(str(column.number) for column in matches)
-                raise RecordError(table.source, f"{len(matches)} columns are called {wanted!r}; give the number instead, --{role} {numbers}")
+                raise RecordError(
+                    table.source,
+                    f"{len(matches)} columns are called {wanted!r}; give the number instead, --{role} {numbers}",
+                )
     number = int(wanted) if isinstance(wanted, int) or wanted.strip().isdigit() else 0
     found = next((column for column in table.columns if column.number == number), None)
     if found is None:
         what = f"no column {number}" if number else f"no column {wanted!r}"
         raise RecordError(table.source, f"{what}; there are {names_text(names)} (numbers 1 to {len(names)})")
     return _numeric_or_time(table, role, found)
+
+
+def _by_name(columns: Sequence[Column], wanted: str) -> Iterator[list[Column]]:
+    """Yield the columns of that name, then those without regard to case, then those that only have a unit more."""
+    folded = wanted.casefold()
+    yield [c for c in columns if c.name == wanted]
+    yield [c for c in columns if c.name.casefold() == folded]
+    yield [c for c in columns if split_unit(c.name)[0].casefold() == folded]
 
 
 def _numeric_or_time(table: Table, role: str, column: Column) -> Column:

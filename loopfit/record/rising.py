@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -82,7 +83,10 @@ def _over_midnight(seconds: Array, of_day: Array | None, name: str, findings: li
         return seconds
     days = np.zeros(len(seconds))
     days[back + 1] = 1
-    text = f"the time of day in {name!r} passes midnight {count_of(len(back), 'time')}; the rows after it count on into the next day"
+    text = (
+        f"the time of day in {name!r} passes midnight {count_of(len(back), 'time')}; the rows after it count on "
+        f"into the next day"
+    )
     findings.append(Finding(code="past_midnight", severity="note", text=text))
     result: Array = seconds + np.cumsum(days) * _DAY
     return result
@@ -109,7 +113,10 @@ def _summer_time(
     result: Array = seconds.copy()
     result[change + 1 :] += shift
     way = "back" if shift > 0 else "ahead"
-    text = f"the clock is set {way} by one hour at line {int(lines[change + 1])} (change of summer time); the hour is taken out"
+    text = (
+        f"the clock is set {way} by one hour at line {int(lines[change + 1])} (change of summer time); the hour is "
+        f"taken out"
+    )
     findings.append(Finding(code="summer_time", severity="note", text=text))
     return result
 
@@ -141,10 +148,11 @@ def _longest_run(
             raise RecordError(source, reason, row=int(lines[rows[again]]))
         cuts.append(again)
     edges = [0, *cuts, len(seconds)]
-    parts = list(zip(edges, edges[1:], strict=False))
+    parts = list(pairwise(edges))
     start, stop = max(parts, key=lambda part: part[1] - part[0])
     text = (
-        f"the clock begins again at {lines_text([int(lines[rows[cut]]) for cut in cuts])}: the file holds {len(parts)} recordings; "
+        f"the clock begins again at {lines_text([int(lines[rows[cut]]) for cut in cuts])}: the file holds "
+        f"{len(parts)} recordings; "
         f"only the longest is used, lines {int(lines[rows[start]])} to {int(lines[rows[stop - 1]])}"
     )
     findings.append(Finding(code="restarted", severity="warning", text=text))
@@ -175,7 +183,8 @@ def _one_stamp_a_row(
     if not same.all():
         places = [int(lines[rows[index]]) for index in repeat[~same]]
         text = (
-            f"{count_of(len(places), 'row')} with the stamp of the row before but other values left out ({lines_text(places)}); "
+            f"{count_of(len(places), 'row')} with the stamp of the row before but other values left out "
+            f"({lines_text(places)}); "
             "the first row of each stamp is used"
         )
         findings.append(Finding(code="repeated_stamps", severity="warning", text=text))
@@ -196,17 +205,28 @@ def _spread(name: str, seconds: Array, findings: list[Finding]) -> Array:
     regular = int(np.ptp(counts[inner])) <= max(1, 0.1 * float(np.median(counts)))
     if float(np.ptp(even - seconds)) <= 1.5 * wait + interval:
         text = (
-            f"{name!r} gives one stamp to {'about ' if regular else '1 to '}{int(np.median(counts) if regular else counts.max())} rows; the rows "
-            f"are taken as evenly spaced, {interval:.4g} s apart, so times are uncertain by up to {wait:.3g} s, the same for all rows"
+            f"{name!r} gives one stamp to "
+            f"{'about ' if regular else '1 to '}{int(np.median(counts) if regular else counts.max())} rows; the rows "
+            f"are taken as evenly spaced, {interval:.4g} s apart, so times are uncertain by up to {wait:.3g} s, "
+            f"the same for all rows"
         )
-        findings.append(Finding(code="coarse_stamps" if regular else "stamps_in_bursts", severity="note" if regular else "warning", text=text))
+        findings.append(
+            Finding(
+                code="coarse_stamps" if regular else "stamps_in_bursts",
+                severity="note" if regular else "warning",
+                text=text,
+            )
+        )
         return even
     # a stamp's rows reach until the next stamp, but not over a gap
     usual = float(np.median(np.diff(stamps) / counts[:-1]))
     ends = np.minimum(np.append(stamps[1:], np.inf), stamps + 1.5 * usual * counts)
-    spread: Array = np.repeat(stamps, counts) + (index - np.repeat(starts, counts)) * np.repeat((ends - stamps) / counts, counts)
+    spread: Array = np.repeat(stamps, counts) + (index - np.repeat(starts, counts)) * np.repeat(
+        (ends - stamps) / counts, counts
+    )
     text = (
-        f"{name!r} gives one stamp to 1 to {int(counts.max())} rows, unevenly; the rows of a stamp are spread until the next one, "
+        f"{name!r} gives one stamp to 1 to {int(counts.max())} rows, unevenly; the rows of a stamp are spread "
+        f"until the next one, "
         f"so single times may be wrong by {wait:.3g} s: dead time and fast motion are doubtful"
     )
     findings.append(Finding(code="stamps_in_bursts", severity="warning", text=text))
@@ -231,7 +251,8 @@ def _spacing(
     worst = int(gaps[np.argmax(step[gaps])])
     places = [int(lines[rows[gap + 1]]) for gap in gaps]
     text = (
-        f"{count_of(len(gaps), 'gap')} in {name!r} (before {lines_text(places)}), the longest {step[worst]:.4g} s against a usual "
+        f"{count_of(len(gaps), 'gap')} in {name!r} (before {lines_text(places)}), the longest {step[worst]:.4g} s "
+        f"against a usual "
         f"{usual:.4g} s; what happened in a gap is not in the figures"
     )
     at = (float(seconds[worst]), float(seconds[worst + 1]))

@@ -13,7 +13,8 @@ _FOREIGN = (
     (b"\x89PNG", "a PNG image"), (b"\xff\xd8\xff", "a JPEG image"), (b"GIF8", "a GIF image"), (b"BM", "a BMP image"),
     (b"II*\0", "a TIFF image"), (b"MM\0*", "a TIFF image"), (b"%PDF", "a PDF document"), (b"\x7fELF", "a program"),
     (b"MZ", "a program"), (b"\x89HDF", "an HDF5 file"), (b"MATLAB 5.0", "a MAT file"), (b"TDSm", "a TDMS file"),
-    (b"Rar!", "a RAR archive"), (b"7z\xbc\xaf", "a 7-Zip archive"), (b"BZh", "a bzip2 archive"), (b"\xfd7zXZ", "an xz archive"),
+    (b"Rar!", "a RAR archive"), (b"7z\xbc\xaf", "a 7-Zip archive"), (b"BZh", "a bzip2 archive"),
+    (b"\xfd7zXZ", "an xz archive"),
     (b"(\xb5/\xfd", "a Zstandard archive"), (b"SQLite format 3", "a database"), (b"RIFF", "a sound or video file"),
     (b"ARROW1", "an Arrow file"), (b"{\\rtf", "a text document with formatting"),
 )  # fmt: skip
@@ -83,10 +84,17 @@ def _refuse_foreign(source: str, data: bytes) -> None:
         raise RecordError(source, f"this is an HTML page, perhaps an error message of the server; {wanted}")
     if text.startswith((b"<?xml", b"<svg")):
         raise RecordError(source, f"this is XML, not a table; {wanted}")
-    if text.startswith(b"{") or (text.startswith(b"[") and text[1:].lstrip()[:1] in (b"{", b"[", b'"', b"]") or _is_array(text)):
+    if text.startswith(b"{") or (
+        (text.startswith(b"[") and text[1:].lstrip()[:1] in (b"{", b"[", b'"', b"]")) or _is_array(text)
+    ):
         raise RecordError(source, f"this is JSON, not a table; {wanted}")
 
 
 def _is_array(text: bytes) -> bool:
     """Return whether a text opens like a JSON array of numbers; "[Header]" of a settings file does not."""
-    return text.startswith(b"[") and text[1:].lstrip()[:1].isdigit() and b"," in text[:200] and b"]" not in text.split(b",")[0]
+    return (
+        text.startswith(b"[")
+        and text[1:].lstrip()[:1].isdigit()
+        and b"," in text[:200]
+        and b"]" not in text.split(b",")[0]
+    )

@@ -34,7 +34,11 @@ class Column:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Table:
-    """The data rows of a file: `lines` (n,) are their places in the file, `restarts` the rows behind a repeated header."""
+    """The data rows of a file.
+
+    `lines` (n,) are their places in the file, `restarts` the rows behind a repeated header; `set_aside` counts
+    rows left out.
+    """
 
     source: str
     lines: Rows
@@ -129,18 +133,30 @@ def table_from_rows(
 def opening_findings(header: Header, layout: Layout, rows: int) -> list[Finding]:
     """Return what there is to say of the header and the marks."""
     findings = []
-    if not header.named and rows:
+    if header.unfit is not None:
+        line, names = header.unfit
+        text = (
+            f"line {line} holds {names} names for {layout.width} columns and is not used; the columns are called "
+            f"by their numbers"
+        )
+        findings.append(Finding(code="header_not_used", severity="warning", text=text))
+    elif not header.named and rows:
         text = "the file has no line of column names; its columns are called by their numbers"
         findings.append(Finding(code="no_header", severity="note", text=text))
     if layout.thousands_guessed:
-        text = f"a {layout.marks.thousands!r} before three digits is read as a mark between thousands, since smaller numbers have none"
+        text = (
+            f"a {layout.marks.thousands!r} before three digits is read as a mark between thousands, since smaller "
+            f"numbers have none"
+        )
         findings.append(Finding(code="thousands_mark", severity="warning", text=text))
     return findings
 
 
 def unclosed(line: int) -> Finding:
     """Return the finding that the last line has no line break."""
-    text = f"the file does not end with a line break, so its last row ({line}) may be incomplete; it is used as it stands"
+    text = (
+        f"the file does not end with a line break, so its last row ({line}) may be incomplete; it is used as it stands"
+    )
     return Finding(code="no_final_line_break", severity="note", text=text)
 
 
@@ -212,6 +228,9 @@ def _row_findings(ragged: list[int], texts: list[int], repeats: list[int], width
         text = f"{count_of(len(inside), 'line')} of text between the data rows left out ({lines_text(inside)})"
         findings.append(Finding(code="text_between_rows", severity="note", text=text))
     if repeats:
-        text = f"the line of names comes again {count_of(len(repeats), 'time')} ({lines_text(repeats)}): the logger was restarted there"
+        text = (
+            f"the line of names comes again {count_of(len(repeats), 'time')} ({lines_text(repeats)}): the logger "
+            f"was restarted there"
+        )
         findings.append(Finding(code="repeated_header", severity="note", text=text))
     return findings

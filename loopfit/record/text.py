@@ -2,15 +2,18 @@
 
 from __future__ import annotations
 
+import re
+from collections.abc import Sequence
 from dataclasses import replace
 
 from loopfit.core.errors import RecordError
 from loopfit.core.finding import Finding
 from loopfit.record.encoding import decode
 from loopfit.record.fast import table_by_columns
-from loopfit.record.header import find_header, is_comment
-from loopfit.record.layout import Layout, find_layout, numeric_columns, rows_of
+from loopfit.record.header import Header, find_header, is_comment
+from loopfit.record.layout import Layout, Row, find_layout, numeric_columns, rows_of
 from loopfit.record.table import Table, table_from_rows
+from loopfit.record.wording import count_of
 
 LONG = 1_000_000  # characters from which whole columns pay
 _HEAD = 60_000  # characters in which the header must end
@@ -54,7 +57,9 @@ def table_from_text(source: str, data: bytes) -> Table:
 def _by_rows(source: str, text: str) -> Table:
     closed = text.endswith("\n")
     if text.count("\n") > _MOST_LINES:
-        raise RecordError(source, f"more than {_MOST_LINES // 10**6} million lines; keep only the part with the step test")
+        raise RecordError(
+            source, f"more than {_MOST_LINES // 10**6} million lines; keep only the part with the step test"
+        )
     lines = text.split("\n")
     if closed:
         lines.pop()
@@ -65,10 +70,26 @@ def _by_rows(source: str, text: str) -> Table:
         raise RecordError(source, reason, row=longest + 1)
     layout, numeric = layout_of(source, full)
     if len(lines) * layout.width > _MOST_CELLS:
-        raise RecordError(source, f"{len(lines)} rows of {layout.width} columns are too many; keep only the part with the step test")
+        raise RecordError(
+            source, f"{len(lines)} rows of {layout.width} columns are too many; keep only the part with the step test"
+        )
     rows = list(rows_of(lines, layout.delimiter))
     header = find_header(rows, layout, numeric, lines)
+    _check_marks(source, header, layout, rows)
     return table_from_rows(source, rows, header, layout, numeric, closed=closed)
+
+
+def _check_marks(source: str, header: Header, layout: Layout, rows: Sequence[Row]) -> None:
+    """Raise RecordError when a comma seems to be delimiter and decimal mark at once: 0,20,5 under time,value."""
+    if header.unfit is None or layout.delimiter != "," or header.unfit[1] >= layout.width:
+        return
+    if not any("." in cell for _, cells in rows[header.first : header.first + 200] for cell in cells):
+        reason = (
+            f"the names are {header.unfit[1]}, the cells of a row {layout.width}: a comma seems to be both "
+            f"delimiter and decimal mark; "
+            "export with semicolons or with decimal points"
+        )
+        raise RecordError(source, reason, row=header.unfit[0])
 
 
 def _by_columns(source: str, text: str) -> Table | None:
@@ -85,7 +106,7 @@ def _by_columns(source: str, text: str) -> Table | None:
         return None
     rows = list(rows_of(head[:400], layout.delimiter))
     header = find_header(rows, layout, numeric, head)
-    if header.first >= len(rows):
+    if header.first >= len(rows) or header.unfit is not None:
         return None
     first_line = rows[header.first][0]
     start = sum(len(line) + 1 for line in head[: first_line - 1])
@@ -108,6 +129,11 @@ def layout_of(source: str, lines: list[str]) -> tuple[Layout, list[bool]]:
     sample = plain[:20] + plain[20::stride] if stride > 1 else plain
     layout = find_layout(sample)
     if layout is None:
-        raise RecordError(source, "no rows of numbers found; a recording has one row per time, with a column for each signal")
+        begun = sum(re.match(r"\s*[+-]?\d", line) is not None for line in plain)
+        if 0 < begun < 5:
+            raise RecordError(source, f"only {count_of(begun, 'row')} of data; a step test needs at least 5")
+        raise RecordError(
+            source, "no rows of numbers found; a recording has one row per time, with a column for each signal"
+        )
     rows = [cells for _, cells in rows_of(sample, layout.delimiter)]
     return layout, numeric_columns(rows, layout)

@@ -10,12 +10,13 @@ import numpy as np
 from loopfit.core.arrays import Array
 from loopfit.core.errors import RecordError
 from loopfit.core.finding import Finding
-from loopfit.record.clock import Clock, UndecidedStampsError, numeric_clock, stamp_clock
+from loopfit.record.clock import Clock, UndecidedStampsError, stamp_clock
+from loopfit.record.epoch import numeric_clock
 from loopfit.record.layout import STAMP
 from loopfit.record.table import Column, Table
 from loopfit.record.units import seconds_per
-from loopfit.record.words import is_counter_name, weight
 from loopfit.record.wording import names_text
+from loopfit.record.words import is_counter_name, weight
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -42,13 +43,13 @@ def time_base(table: Table, wanted: Column | None, interval_s: float | None, tak
     if interval_s is not None:
         return _even(table, wanted, interval_s, free)
     if wanted is not None:
-        clock = _clock_of(source, wanted)
+        clock = clock_of(source, wanted)
         if clock is None:
             raise RecordError(source, "this column holds no times", column=wanted.name)
         return TimeBase(
             clock=clock, name=wanted.name, used=frozenset({wanted.number}), set_aside=_other_times(free), findings=()
         )
-    stamped = [column for column in free if _is_stamped(column)]
+    stamped = [column for column in free if is_stamped(column)]
     numeric = [column for column in free if column.values is not None and _is_rising(column.values)]
     named = [column for column in numeric if _says_time(column)]
     joined = _date_and_time(source, stamped)
@@ -59,7 +60,7 @@ def time_base(table: Table, wanted: Column | None, interval_s: float | None, tak
         return TimeBase(clock=clock, name=names, used=used, set_aside=_other_times(free), findings=clock.findings)
     if stamped:
         chosen = max(stamped, key=lambda column: (weight(column.name, "time"), -column.number))
-        clock = _clock_of(source, chosen)
+        clock = clock_of(source, chosen)
         device = next((column for column in named if not is_counter_name(column.name)), None)
         if clock is not None and (device is None or not _is_coarse(clock)):
             return TimeBase(
@@ -87,9 +88,15 @@ def time_base(table: Table, wanted: Column | None, interval_s: float | None, tak
             text = f"time is taken from {better[0].name!r} because it rises evenly; its name does not say so"
             return _numeric(better[0], free, (Finding(code="time_by_content", severity="note", text=text),))
         if counters:
-            reason = f"{names_text([counters[0].name])} only counts the rows; give --interval SECONDS (or --time {counters[0].number} if it is in seconds)"
+            reason = (
+                f"{names_text([counters[0].name])} only counts the rows; give --interval SECONDS (or --time "
+                f"{counters[0].number} if it is in seconds)"
+            )
             raise RecordError(source, reason)
-    reason = f"no column of times among {names_text([column.name for column in table.columns])}; give --interval SECONDS, or --time COL"
+    reason = (
+        f"no column of times among {names_text([column.name for column in table.columns])}; give --interval "
+        f"SECONDS, or --time COL"
+    )
     raise RecordError(source, reason)
 
 
@@ -125,7 +132,8 @@ def _numeric(column: Column, free: Sequence[Column], findings: tuple[Finding, ..
     )
 
 
-def _clock_of(source: str, column: Column) -> Clock | None:
+def clock_of(source: str, column: Column) -> Clock | None:
+    """Return the clock of one column, None when it holds no times."""
     if column.values is not None:
         return numeric_clock(column.values, column.name, column.unit, column.cells)
     if column.cells is None:
@@ -161,7 +169,8 @@ def _example(column: Column) -> str:
     return next((cell for cell in column.cells or () if cell), "")
 
 
-def _is_stamped(column: Column) -> bool:
+def is_stamped(column: Column) -> bool:
+    """Return whether a column holds dates or times written out."""
     if column.values is not None or column.cells is None:
         return False
     full = [cell for cell in column.cells if cell]
@@ -194,7 +203,7 @@ def _is_rising(values: Array) -> bool:
 
 
 def _claims_time(column: Column, values: Array) -> bool:
-    """Return whether a column named for the time rises in half of the rows, or falls throughout under a name that means nothing else."""
+    """Return whether a column named for the time rises in half of its rows, or falls throughout (but for "T")."""
     step = np.diff(values[np.isfinite(values)])
     falls = len(column.name) > 1 and bool(np.all(step < 0))
     return len(step) > 0 and (falls or float(np.mean(step > 0)) >= 0.5)
@@ -231,7 +240,7 @@ def _other_times(free: Sequence[Column]) -> frozenset[int]:
     return frozenset(
         column.number
         for column in free
-        if _is_stamped(column)
+        if is_stamped(column)
         or (
             column.values is not None
             and (_says_time(column) or is_counter_name(column.name) or _unnamed(column))

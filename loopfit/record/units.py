@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import re
 
+from loopfit.record.wording import word_set
+
 SECONDS = {
     "s": 1.0, "sec": 1.0, "secs": 1.0, "second": 1.0, "seconds": 1.0, "sek": 1.0, "sekunden": 1.0, "secondes": 1.0,
     "segundos": 1.0, "seg": 1.0, "ms": 1e-3, "msec": 1e-3, "msecs": 1e-3, "millis": 1e-3, "milliseconds": 1e-3,
@@ -13,18 +15,23 @@ SECONDS = {
     "hr": 3600.0, "hrs": 3600.0, "hour": 3600.0, "hours": 3600.0, "std": 3600.0, "stunden": 3600.0, "heures": 3600.0,
     "horas": 3600.0, "d": 86400.0, "day": 86400.0, "days": 86400.0, "tage": 86400.0, "jours": 86400.0, "dias": 86400.0,
 }  # fmt: skip
-_OTHER = (
-    "°C degC °F degF C F K deg degree degrees ° %  pct percent bar mbar barg bara Pa hPa kPa MPa psi psig psia atm mmHg "
-    "inH2O mmH2O rpm RPM 1/min U/min min-1 min^-1 tr/min r/min rev/min V mV kV uV µV A mA uA µA kA W kW MW VA kVA J kJ Hz "
-    "kHz 1/s s^-1 m mm cm km um µm in ft m/s mm/s cm/s m/min km/h m/s2 m/s^2 m/s² g rad mrad rad/s mrad/s rad/s2 deg/s °/s "
-    "dps l L ml l/min L/min l/h l/s lpm gpm gal/min m3 m³ m3/h m³/h Nm3/h m3/s m³/s m3/min kg/h kg/s kg/min t/h kg t lb "
-    "lb/h N kN Nm N·m Nmm ohm Ω kΩ pH ppm ppb %RH %rF µS/cm mS/cm mg/l mg/L g/l counts count cnt cts inc digit digits bit "
+_OTHER = word_set(
+    "°C degC °F degF C F K deg degree degrees ° % pct percent bar mbar barg bara Pa hPa kPa MPa psi psig psia atm mmHg "
+    "inH2O mmH2O rpm RPM 1/min U/min min-1 min^-1 tr/min r/min rev/min V mV kV uV µV A mA uA µA kA W kW MW VA kVA "
+    "J kJ Hz "
+    "kHz 1/s s^-1 m mm cm km um µm in ft m/s mm/s cm/s m/min km/h m/s2 m/s^2 m/s² g rad mrad rad/s mrad/s rad/s2 "
+    "deg/s °/s "
+    "dps l L ml l/min L/min l/h l/s lpm gpm gal/min m3 m³ m3/h m³/h Nm3/h m3/s m³/s m3/min kg/h kg/s kg/min t/h "
+    "kg t lb "
+    "lb/h N kN Nm N·m Nmm ohm Ω kΩ pH ppm ppb %RH %rF µS/cm mS/cm mg/l mg/L g/l counts count cnt cts inc digit "
+    "digits bit "
     "bits LSB ticks -"
-).split()
-UNITS = frozenset(_OTHER) | frozenset(SECONDS) | {name.capitalize() for name in SECONDS if len(name) > 2}
-_SUFFIX = frozenset(
-    "degC degF degc degf pct percent bar mbar kPa MPa hPa Pa psi rpm ms us mm cm mA mV rad mrad Hz kW kg counts deg celsius"
-    " sec seconds millis".split()
+)
+UNITS = _OTHER | frozenset(SECONDS) | {name.capitalize() for name in SECONDS if len(name) > 2}
+_SUFFIX = word_set(
+    "degC degF degc degf pct percent bar mbar kPa MPa hPa Pa psi rpm ms us mm cm mA mV rad mrad Hz kW kg counts "
+    "deg celsius"
+    " sec seconds millis"
 )
 _BRACKETS = re.compile(r"^(.*?)\s*[(\[{<]\s*([^()\[\]{}<>]{0,16}?)\s*[)\]}>]\s*$", re.DOTALL)
 _BEHIND = re.compile(r"^(.*?)\s*(?:\s/\s|\s/|/\s|,\s+|;\s+|\s+in\s+|\s+en\s+|:\s+|\s-\s)\s*([^\s]{1,10})$")

@@ -1,8 +1,13 @@
-"""Words for counts and places in findings."""
+"""Words: sets of them, and those for counts and places in findings."""
 
 from __future__ import annotations
 
 from collections.abc import Sequence
+
+
+def word_set(text: str, mark: str = " ") -> frozenset[str]:
+    """Return the words of a text."""
+    return frozenset(text.split(mark))
 
 
 def count_of(count: int, word: str) -> str:

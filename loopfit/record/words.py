@@ -7,38 +7,58 @@ import unicodedata
 from functools import lru_cache
 
 from loopfit.record.units import split_unit
+from loopfit.record.wording import word_set
 
 # Strong words name the role; weak words name a quantity that usually has it. From common practice of the trade.
 _STRONG = {
-    "time": "time timestamp datetime date clock elapsed t zeit uhrzeit datum zeitstempel temps heure horodatage tiempo hora fecha "
-    "marca_de_tiempo seconds secs millis micros epoch local_time utc zeitpunkt date_time instant laufzeit stunden segundos secondes ms us",
-    "measurement": "pv measurement measured process_value process_variable actual act ist istwert regelgroesse messwert mesure "
-    "valeur_mesuree medida medicion valor_medido valor_actual variable_de_proceso variable_proceso feedback response measure y "
-    "grandeur_reglee valeur_reelle controlled_variable xist isttemperatur istdrehzahl istposition reponse respuesta antwort plant_output "
-    "real value_actual",
-    "setpoint": "sp setpoint set_point set setpt target reference ref soll sollwert fuehrungsgroesse consigne consigna referencia "
-    "desired r w csp rsp lsp wsp setvalue set_value sv valor_deseado deseado valeur_de_consigne solltemperatur solldrehzahl sollposition "
-    "xsoll goal vorgabe",
-    "output": "op out output co mv cv controller_output control_output control_signal stellgroesse stellwert stellgrad stellsignal ausgang "
-    "sortie salida mando u input eingang entrada entree manipulated manipulated_variable actuator pwm duty duty_cycle "
-    "control actuation stellung lzout opening ouverture apertura yout",
+    "time": (
+        "time timestamp datetime date clock elapsed t zeit uhrzeit datum zeitstempel temps heure horodatage "
+        "tiempo hora fecha marca_de_tiempo seconds secs millis micros epoch local_time utc zeitpunkt "
+        "date_time instant laufzeit stunden segundos secondes ms us"
+    ),
+    "measurement": (
+        "pv measurement measured process_value process_variable actual act ist istwert regelgroesse messwert "
+        "mesure valeur_mesuree medida medicion valor_medido valor_actual variable_de_proceso "
+        "variable_proceso feedback response measure y grandeur_reglee valeur_reelle controlled_variable xist "
+        "isttemperatur istdrehzahl istposition reponse respuesta antwort plant_output real value_actual"
+    ),
+    "setpoint": (
+        "sp setpoint set_point set setpt target reference ref soll sollwert fuehrungsgroesse consigne "
+        "consigna referencia desired r w csp rsp lsp wsp setvalue set_value sv valor_deseado deseado "
+        "valeur_de_consigne solltemperatur solldrehzahl sollposition xsoll goal vorgabe"
+    ),
+    "output": (
+        "op out output co mv cv controller_output control_output control_signal stellgroesse stellwert "
+        "stellgrad stellsignal ausgang sortie commande salida mando u input eingang entrada entree "
+        "manipulated manipulated_variable actuator pwm duty duty_cycle control actuation stellung lzout "
+        "opening ouverture apertura yout"
+    ),
 }
 _WEAK = {
-    "time": "x n s sec h min minutes sample_time",
-    "measurement": "temperature temp temperatur temperatura pressure druck pression presion level fuellstand niveau nivel flow "
-    "durchfluss debit caudal speed drehzahl vitesse velocidad velocity geschwindigkeit position angle winkel weg posicion angulo "
-    "rpm signal value wert valeur valor sensor probe thermocouple angular rate x ph conductivity leitfaehigkeit density dichte "
-    "concentration weight gewicht displacement acceleration level_m tank humidity feuchte kopf distance height hoehe altura hauteur "
-    "tt pt ft lt tc ti pi fi li pos vel omega theta gyro rotation frequency torque pt100 deviation",
-    "setpoint": "command cmd demand request reqd sollw",
-    "output": "command cmd demand power leistung puissance potencia voltage spannung tension voltaje current strom courant corriente "
-    "heater drive heizung heizleistung chauffage calentador valve ventil vanne valvula pump pumpe pompe bomba fan q motor throttle damper klappe steam dampf percent y control_value force kraft",
+    "time": ("x n s sec h min minutes sample_time"),
+    "measurement": (
+        "temperature temp temperatur temperatura pressure druck pression presion level fuellstand niveau "
+        "nivel flow durchfluss debit caudal speed drehzahl vitesse velocidad velocity geschwindigkeit "
+        "position angle winkel weg posicion angulo rpm signal value wert valeur valor sensor probe "
+        "thermocouple angular rate x ph conductivity leitfaehigkeit density dichte concentration weight "
+        "gewicht displacement acceleration level_m tank humidity feuchte kopf distance height hoehe altura "
+        "hauteur tt pt ft lt tc ti pi fi li pos vel omega theta gyro rotation frequency torque pt100 "
+        "deviation"
+    ),
+    "setpoint": ("command cmd demand request reqd sollw"),
+    "output": (
+        "command cmd demand power leistung puissance potencia voltage spannung tension voltaje current strom "
+        "courant corriente heater drive heizung heizleistung chauffage calentador valve ventil vanne valvula "
+        "pump pumpe pompe bomba fan q motor throttle damper klappe steam dampf percent y control_value force "
+        "kraft"
+    ),
 }
 _CUTS = re.compile(r"[A-Z]+(?=[A-Z][a-z])|[A-Z]?[a-z]+|[A-Z]+|\d+")
 _GERMAN = {"ä": "ae", "ö": "oe", "ü": "ue", "ß": "ss", "Ä": "Ae", "Ö": "Oe", "Ü": "Ue"}
-_COUNTERS = frozenset(
-    "index idx sample samples no nr num number count counter row record id item point scan seq sequence n i # lfd messung probe "
-    "numero muestra echantillon zeile ligne fila line nummer unnamed".split()
+_COUNTERS = word_set(
+    "index idx sample samples no nr num number count counter row record id item point scan seq sequence n i # lfd "
+    "messung probe "
+    "numero muestra echantillon zeile ligne fila line nummer unnamed"
 )
 
 
@@ -85,7 +105,7 @@ def weight(name: str, role: str) -> int:
     words = words_of(name)
     if len(words) == 2 and words[0] in "tpxyz" and words[1].isdigit():
         return 1 if role == "measurement" else 0  # T1, P2: a quantity and the number of its sensor
-    # "PV setpoint", "set point temperature", "output setpoint": the word for a setpoint wins over the quantity it is for
+    # in "PV setpoint" or "set point temperature" the word for a setpoint wins (see the callers)
     if _holds(words, _STRONG_SETS[role]) or any(
         word.endswith(_ENDINGS.get(role, ())) for word in words if _ENDINGS.get(role)
     ):
@@ -106,10 +126,16 @@ def is_counter_name(name: str) -> bool:
 
 
 def group_of(name: str) -> str:
-    """Return what is left of a name without role words, single letters and unit: "Heater 1 (%)" and "Set Point 1" both give "1"."""
-    return " ".join(word for word in words_of(split_unit(name)[0]) if word.isdigit() or (len(word) > 1 and word not in _ROLE_WORDS))
+    """Return what is left of a name without role words, single letters and unit: "Heater 1 (%)" gives "1"."""
+    return " ".join(
+        word for word in words_of(split_unit(name)[0]) if word.isdigit() or (len(word) > 1 and word not in _ROLE_WORDS)
+    )
 
 
 _ROLE_WORDS = frozenset(
-    piece for sets in (_STRONG_SETS, _WEAK_SETS) for role in ("measurement", "setpoint", "output") for word in sets[role] for piece in word.split("_")
+    piece
+    for sets in (_STRONG_SETS, _WEAK_SETS)
+    for role in ("measurement", "setpoint", "output")
+    for word in sets[role]
+    for piece in word.split("_")
 )

@@ -35,13 +35,17 @@ def table_from_workbook(source: str, data: bytes) -> Table:
     _check_size(source, data)
     try:
         book = load_workbook(io.BytesIO(data))
-        sheets = {name: _cells(book.get_sheet_by_name(name).to_python(skip_empty_area=False)) for name in book.sheet_names}
+        sheets = {
+            name: _cells(book.get_sheet_by_name(name).to_python(skip_empty_area=False)) for name in book.sheet_names
+        }
     except PasswordError:
         raise RecordError(source, "the workbook is locked with a password; save it without one") from None
     except (CalamineError, OSError, ValueError) as problem:
         reason = " ".join(str(problem).split())[:80]
         raise RecordError(source, f"the workbook cannot be read ({reason}); save it again, or as .csv") from None
-    sizes = {name: sum(sum(_looks_numeric(cell) for cell in cells) > 0 for _, cells in rows) for name, rows in sheets.items()}
+    sizes = {
+        name: sum(sum(_looks_numeric(cell) for cell in cells) > 0 for _, cells in rows) for name, rows in sheets.items()
+    }
     filled = [name for name, size in sizes.items() if size >= 5]
     if not sizes or max(sizes.values()) == 0:
         raise RecordError(source, "no sheet of the workbook holds rows of numbers")
@@ -61,7 +65,9 @@ def _table(source: str, rows: Sequence[Row]) -> Table:
     sample = filled[:20] + filled[20::stride] if stride > 1 else filled
     layout = layout_of_cells(sample)
     if layout is None:
-        raise RecordError(source, "no rows of numbers found; a recording has one row per time, with a column for each signal")
+        raise RecordError(
+            source, "no rows of numbers found; a recording has one row per time, with a column for each signal"
+        )
     numeric = numeric_columns(sample, layout)
     header = find_header(rows, layout, numeric, ())
     return table_from_rows(source, rows, header, layout, numeric)
@@ -106,7 +112,11 @@ def _check_size(source: str, data: bytes) -> None:
         with zipfile.ZipFile(io.BytesIO(data)) as archive:
             for part in archive.infolist():
                 if part.file_size > _LARGEST_PART:
-                    raise RecordError(source, f"a part of the workbook unpacks to {part.file_size // 2**20} MB; keep only the part with the step test")
+                    raise RecordError(
+                        source,
+                        f"a part of the workbook unpacks to {part.file_size // 2**20} MB; keep only the part with "
+                        f"the step test",
+                    )
                 if part.filename.startswith("xl/worksheets/") and part.filename.endswith(".xml"):
                     with archive.open(part) as stream:
                         _check_extent(source, stream.read(_LARGEST_PART + 1))
@@ -126,4 +136,6 @@ def _check_extent(source: str, xml: bytes) -> None:
             column = column * 26 + letter - 64
         width, height = max(width, column), max(height, int(found.group(2)))
     if width * height > _MOST_CELLS:
-        raise RecordError(source, f"a sheet reaches over {height} rows and {width} columns; clear the cells outside the recording")
+        raise RecordError(
+            source, f"a sheet reaches over {height} rows and {width} columns; clear the cells outside the recording"
+        )

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from itertools import pairwise
 from typing import Literal
 
@@ -18,7 +18,7 @@ from loopfit.core.arrays import Array
 _MARGIN = 0.022  # of the axes' width: from the end of a line to its label
 _NEAR = (6.0, 14.0, 26.0, 42.0, 62.0)  # points from what a label names
 _DENSE = 4.0  # pixels between the points of a line that a label should not cover
-INK = "#262626"
+INK, STEP = "#262626", "#b4530a"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -40,6 +40,16 @@ class PointLabel:
     words: str
     colour: str = INK
     above: bool | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Panel:
+    """Axes with what is known of them while they are filled; `lines` are those that labels should not cover."""
+
+    axes: Axes
+    ends: list[EndLabel] = field(default_factory=list)
+    points: list[PointLabel] = field(default_factory=list)
+    lines: list[Line2D] = field(default_factory=list)
 
 
 def spread(wanted: Sequence[float], sizes: Sequence[float], low: float, high: float) -> list[float]:
@@ -80,9 +90,10 @@ def settle(axes: Axes, labels: Sequence[EndLabel], texts: Sequence[Text]) -> Non
     to_pixels = axes.transData.transform
     heights = [float(to_pixels((0.0, label.height))[1]) for label in labels]
     inside = [min(max(height, frame.y0), frame.y1) for height in heights]
+    nearly = [10.0 * round(height / 10.0) for height in inside]  # so that equal ends keep the order of the labels
     sizes = [text.get_window_extent().height + 3.0 for text in texts]
     for label, text, height, centre in zip(
-        labels, texts, inside, spread(inside, sizes, frame.y0, frame.y1), strict=True
+        labels, texts, inside, spread(nearly, sizes, frame.y0, frame.y1), strict=True
     ):
         share = (centre - frame.y0) / frame.height
         text.set_y(share)
@@ -124,7 +135,7 @@ def place(axes: Axes, labels: Sequence[PointLabel], lines: Sequence[Line2D]) -> 
         for number, (offset, across, along) in enumerate(_places(label.above)):
             text.set(position=offset, ha=across, va=along)
             box = text.get_window_extent().padded(3.0)
-            cost = 0.15 * number + _covered(points, box)
+            cost = 0.15 * number + 2.0 * _covered(points, box)
             cost += sum(1e4 for other in taken if box.overlaps(other))
             cost += 1e3 * _outside(box, frame)
             if best is None or cost < best[0]:

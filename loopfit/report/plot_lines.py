@@ -9,6 +9,7 @@ import numpy as np
 
 from loopfit.analysis.result import Analysis
 from loopfit.core.arrays import Array
+from loopfit.fit.curve import FittedCurve, curve_of
 
 _COLUMNS = 1000  # about the pixels of the axes' width in a png
 _RESTS = 3.0  # settling times in view: more rest tells nothing and makes the response narrow
@@ -32,10 +33,18 @@ def begins(analysis: Analysis) -> float:
     return analysis.window_s[0] if analysis.step is None else analysis.step.time_s
 
 
-def band_width(analysis: Analysis) -> float | None:
+def curve_in(analysis: Analysis, view: tuple[float, float]) -> FittedCurve | None:
+    """Return the model's response over the part of its window that is in view; None without a model."""
+    if analysis.model is None:
+        return None
+    window = (max(view[0], analysis.window_s[0]), min(view[1], analysis.window_s[1]))
+    return curve_of(analysis.fit, analysis.points, window)
+
+
+def band_width(analysis: Analysis, curve: FittedCurve) -> float | None:
     """Return the half-width of the settling band, measurement units; None without a final value."""
-    model, curve = analysis.model, analysis.curve
-    if model is None or curve is None or curve.final_value is None:
+    model = analysis.model
+    if model is None or curve.final_value is None:
         return None
     if analysis.step is None:
         change = float(curve.value[0]) - curve.final_value
@@ -54,17 +63,18 @@ def view_of(analysis: Analysis) -> tuple[float, float]:
     begin, (first, last) = begins(analysis), analysis.window_s
     end = last
     settling = None if analysis.response is None else analysis.response.settling_time_s
-    if settling is not None and math.isfinite(settling.value):
+    doubtful = not analysis.model.adequate or any(finding.severity == "warning" for finding in analysis.findings)
+    if settling is not None and math.isfinite(settling.value) and not doubtful:
         bound = settling.high if math.isfinite(settling.high) else settling.value
         enough = _RESTS * bound
         if enough < _WORTH_CUTTING * (last - begin):
             end = begin + enough
     span = end - begin
     moving = any(finding.code == "moving_before_step" for finding in analysis.findings)
+    if analysis.step is None:
+        return max(float(time[0]), begin - _BEFORE * span), end
     start = max(first, begin - (1.0 if moving else _BEFORE) * span)
-    margin = 0.0 if analysis.step is None else _AT_LEAST_BEFORE * span
-    beyond = min(float(time[-1]), end + _AT_LEAST_BEFORE * span) if end == last else end
-    return min(start, begin - margin), beyond
+    return min(start, begin - _AT_LEAST_BEFORE * span), end
 
 
 def in_view(time: Array, view: tuple[float, float]) -> slice:
@@ -102,7 +112,7 @@ def thinned(time: Array, values: Array, columns: int = _COLUMNS) -> tuple[Array,
     return np.insert(time_kept, where, np.nan), np.insert(values_kept, where, np.nan)
 
 
-def envelope_of(analysis: Analysis) -> Envelope | None:
+def envelope_of(analysis: Analysis, curve: FittedCurve) -> Envelope | None:
     """Return the envelope of an underdamped response; None where there is none to be seen.
 
     Notes
@@ -112,8 +122,8 @@ def envelope_of(analysis: Analysis) -> Envelope | None:
     the factor before the exponential is another: so it is always taken from the curve, as the length of the swing
     a cos(omega_d t) + b sin(omega_d t) there. A curve that is no such swing (drift) has no envelope.
     """
-    model, curve = analysis.model, analysis.curve
-    if model is None or curve is None or curve.final_value is None:
+    model = analysis.model
+    if model is None or curve.final_value is None:
         return None
     damping, frequency = model.damping_ratio, model.natural_frequency_rad_s
     if damping is None or frequency is None or not 0.0 < damping.value < _SWINGS_BELOW:

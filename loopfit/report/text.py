@@ -29,6 +29,8 @@ def page(analysis: Analysis) -> str:
         parts.append(_table(analysis))
     if analysis.model is not None:
         parts.append(_model_line(analysis.model))
+    if analysis.per_step:
+        parts.append(_per_step(analysis))
     if analysis.findings:
         ordered = sorted(analysis.findings, key=lambda finding: _ORDER.index(finding.severity))
         parts.append("Findings\n" + "\n".join(_wrapped(f.severity, f.text) for f in ordered))
@@ -182,6 +184,22 @@ def _table(analysis: Analysis) -> str:
         ("steady-state deviation", unit, None, observed.steady_state_deviation),
     )
     return "\n".join(rows)
+
+
+def _per_step(analysis: Analysis) -> str:
+    rows = [f"{'each step alone':<28}{'damping ratio':<26}{'gain':<26}lags and dead time, s"]
+    for row in analysis.per_step:
+        name = f"{row.step.time_s:>9.6g} s {_level(row.step.from_)} to {_level(row.step.to)}"
+        if row.refusal is not None:
+            rows.append(f"{name:<28}{row.refusal}")
+            continue
+        cells = [_seen(quantity) for quantity in (row.damping_ratio, row.gain, row.lag_plus_dead_time_s)]
+        rows.append(f"{name:<28}{cells[0]:<26}{cells[1]:<26}{cells[2]}")
+    return "\n".join(rows)
+
+
+def _level(value: float) -> str:
+    return f"{value:.5g}"
 
 
 def _observed_rows(analysis: Analysis) -> bool:
