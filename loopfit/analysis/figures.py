@@ -19,7 +19,7 @@ def model_of(fit: Fit, figures: Figures, verdict: Verdict, interval: float) -> M
     """Return the model with its intervals, regime and adequacy."""
     kind = _kind(fit, figures, interval)
     damping = None if kind in ("integrating", "dead_time") else figures["damping_ratio"]
-    damping = None if damping is None else _capped(damping)
+    damping = None if damping is None else capped(damping)
     target = fit.columns.target
     mean = float(target @ fit.columns.samples.root_count) / float(fit.columns.samples.rows)
     about_mean = target - mean * fit.columns.samples.root_count
@@ -75,7 +75,8 @@ def _lags(kind: Kind, slow: Quantity | None, fast: Quantity | None) -> tuple[Qua
     return (slow,) if kind in ("first_order", "integrating") else (slow, fast)
 
 
-def _capped(damping: Quantity) -> Quantity:
+def capped(damping: Quantity) -> Quantity:
+    """Return the damping ratio with its value at most 11: beyond it is a first-order lag."""
     value = min(damping.value, _MOST_DAMPED)
     return Quantity.spanning(value, min(damping.low, value), damping.high)
 

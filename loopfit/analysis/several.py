@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 
 from loopfit.analysis.assess import Assessment
+from loopfit.analysis.figures import capped
 from loopfit.analysis.result import StepFigures, StepUsed
 from loopfit.core.finding import Finding
 from loopfit.core.quantity import Quantity
@@ -24,6 +25,8 @@ def of_each(step: StepUsed, alone: Assessment) -> StepFigures:
     """Return the row of the per-step table."""
     errors = [finding.text for finding in alone.verdict.findings if finding.severity == "error"]
     figures = {name: None if errors else alone.figures[name] for name in (*_COMPARED, "dead_time_s")}
+    damping = figures["damping_ratio"]
+    figures["damping_ratio"] = None if damping is None else capped(damping)
     return StepFigures(step=step, refusal=errors[0] if errors else None, **figures)
 
 

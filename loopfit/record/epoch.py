@@ -28,10 +28,7 @@ def numeric_clock(values: Array, name: str, unit: str | None, cells: Sequence[st
     known = values[np.isfinite(values)]
     factor = seconds_per(unit)
     if factor is None and unit is None:
-        words = re.split(r"[\W_]+", name.lower())
-        factor = next(
-            (seconds_per(word) for word in reversed(words) if len(word) > 1 and seconds_per(word) is not None), None
-        )
+        factor = _factor_in(name)
     middle = float(np.median(known)) if len(known) else 0.0
     if 1.9e13 < middle < 2.2e13 and bool(np.all(known == np.floor(known))):  # 20260301115950
         compact = stamp_clock(
@@ -56,6 +53,13 @@ def numeric_clock(values: Array, name: str, unit: str | None, cells: Sequence[st
     text = f"no unit of time is stated for {name!r}: it is read as seconds"
     finding = Finding(code="time_unit_assumed", severity="note", text=text)
     return Clock(seconds=values, kind="seconds", of_day_s=None, weekday=None, findings=(finding,))
+
+
+def _factor_in(name: str) -> float | None:
+    """Return the seconds in the unit that ends a name, "time_s", or stands in it as a word, "millis"; None for neither."""
+    words = re.split(r"[\W_]+", name.lower())
+    known = [word for word in words if len(word) > 1] + (words[-1:] if len(words) > 1 else [])
+    return next((seconds_per(word) for word in reversed(known) if seconds_per(word) is not None), None)
 
 
 def _epoch(values: Array, name: str, per_second: int, cells: Sequence[str] | None) -> Clock:

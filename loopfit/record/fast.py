@@ -8,7 +8,7 @@ import numpy as np
 
 from loopfit.core.arrays import Array
 from loopfit.record.header import Header
-from loopfit.record.layout import Layout, split_line
+from loopfit.record.layout import Layout, cell_kind, split_line
 from loopfit.record.number import Marks, parse_number
 from loopfit.record.table import Column, Table, column_of, opening_findings, unclosed
 
@@ -62,7 +62,12 @@ def table_by_columns(
         columns.append(column)
         if numeric[place] and bool(empty.any()):
             empty &= np.zeros(rows, dtype=bool) if column.values is None else ~np.isfinite(column.values)
-    if bool(empty.any()):
+    first = next((column for column, flag in zip(columns, numeric, strict=True) if flag), None)
+    if (
+        bool(empty.any())
+        or first is None
+        or (first.cells is not None and cell_kind(first.cells[-1], layout.marks) == "text")
+    ):
         return None
     lines = np.arange(first_line, first_line + rows)
     findings = [] if closed else [unclosed(int(lines[-1]))]

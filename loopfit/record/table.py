@@ -98,6 +98,9 @@ def table_from_rows(
         ragged_tail = 0
         if cells and not closed:
             findings.append(unclosed(lines[-1]))
+    while cells and wanted and cell_kind(cells[-1][wanted[0]], layout.marks) == "text":
+        texts.append(lines.pop())  # "Average,21.3" below the data
+        cells.pop()
     columns = [column_of(place, header, column, layout) for place, column in enumerate(zip(*cells, strict=True))]
     keep = np.ones(len(cells), dtype=bool)
     for index in _rows_without_values(columns, wanted, len(cells)):
@@ -116,6 +119,7 @@ def table_from_rows(
         kept_before = np.cumsum(keep)
         restarts = [int(kept_before[index]) for index in restarts]
     placed = np.array(lines, dtype=np.int64)[keep]
+    texts.sort()
     findings += _row_findings(ragged, texts, repeats, width, placed)
     findings += opening_findings(header, layout, len(placed))
     return Table(

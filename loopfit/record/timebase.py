@@ -82,7 +82,7 @@ def time_base(table: Table, wanted: Column | None, interval_s: float | None, tak
     if named or claimed:
         return _numeric((named or claimed)[0], free, ())
     if numeric:
-        counters = [column for column in numeric if _counts_rows(column)]
+        counters = [column for column in numeric if _counts(column.values)]
         better = [column for column in numeric if column not in counters and _is_even(column.values)]
         if better:
             text = f"time is taken from {better[0].name!r} because it rises evenly; its name does not say so"

@@ -26,6 +26,7 @@ _OTHER = word_set(
     "lb/h N kN Nm N·m Nmm ohm Ω kΩ pH ppm ppb %RH %rF µS/cm mS/cm mg/l mg/L g/l counts count cnt cts inc digit "
     "digits bit "
     "bits LSB ticks -"
+    " Volt Volts Ampere Amps Celsius Percent Degrees Counts volt volts celsius"
 )
 UNITS = _OTHER | frozenset(SECONDS) | {name.capitalize() for name in SECONDS if len(name) > 2}
 _SUFFIX = word_set(

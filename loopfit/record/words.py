@@ -29,7 +29,7 @@ _STRONG = {
     ),
     "output": (
         "op out output co mv cv controller_output control_output control_signal stellgroesse stellwert "
-        "stellgrad stellsignal ausgang sortie commande salida mando u input eingang entrada entree "
+        "stellgrad stellsignal ausgang sortie commande stell salida mando u input eingang entrada entree "
         "manipulated manipulated_variable actuator pwm duty duty_cycle control actuation stellung lzout "
         "opening ouverture apertura yout"
     ),
@@ -58,7 +58,7 @@ _GERMAN = {"ä": "ae", "ö": "oe", "ü": "ue", "ß": "ss", "Ä": "Ae", "Ö": "Oe
 _COUNTERS = word_set(
     "index idx sample samples no nr num number count counter row record id item point scan seq sequence n i # lfd "
     "messung probe "
-    "numero muestra echantillon zeile ligne fila line nummer unnamed"
+    "numero muestra echantillon zeile ligne fila line nummer x unnamed"
 )
 
 

@@ -193,7 +193,7 @@ def _per_step(analysis: Analysis) -> str:
         if row.refusal is not None:
             rows.append(f"{name:<28}{row.refusal}")
             continue
-        cells = [_seen(quantity) for quantity in (row.damping_ratio, row.gain, row.lag_plus_dead_time_s)]
+        cells = ["" if q is None else in_words(q) for q in (row.damping_ratio, row.gain, row.lag_plus_dead_time_s)]
         rows.append(f"{name:<28}{cells[0]:<26}{cells[1]:<26}{cells[2]}")
     return "\n".join(rows)
 

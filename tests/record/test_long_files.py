@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import dataclasses
+import subprocess
+import sys
 from collections.abc import Callable
 from pathlib import Path
 
@@ -98,3 +100,13 @@ def test_end_without_a_line_break(cut: int, tmp_path: Path, monkeypatch: pytest.
     monkeypatch.setattr(long_text, "LONG", len(body) + 1)
     assert plain(record) == plain(read_record(path))
     assert {f.code for f in record.findings} & {"no_final_line_break", "last_line_cut"}
+
+
+def test_short_files_need_no_heavy_imports(tmp_path: Path) -> None:
+    path = write(tmp_path, "\n".join(lines()[:1000]) + "\n")
+    code = (
+        "import sys; from loopfit.record.read import read_record; read_record(sys.argv[1]); "
+        "print(sorted({'polars', 'scipy', 'pandas', 'python_calamine', 'matplotlib'} & set(sys.modules)))"
+    )
+    done = subprocess.run([sys.executable, "-c", code, str(path)], capture_output=True, text=True, check=True)
+    assert done.stdout.strip() == "[]"
