@@ -11,15 +11,17 @@ from functools import partial
 from numpy.typing import ArrayLike
 
 from loopfit.analysis.assess import assess
-from loopfit.analysis.circumstances import about_rows, around_the_step, other_inputs, standing_offset
+from loopfit.analysis.circumstances import about_rows, around_the_step, other_inputs, output_limits, standing_offset
 from loopfit.analysis.figures import model_of, response_of
 from loopfit.analysis.result import Analysis, ObservedFigures, StepFigures, StepUsed
 from loopfit.analysis.several import disagreements, of_each
+from loopfit.analysis.swinging import about_swings
 from loopfit.analysis.trace import StatedStep, prepare
 from loopfit.core.errors import UsageError
 from loopfit.core.finding import Finding
 from loopfit.core.quantity import Quantity
 from loopfit.figures.observed import observe
+from loopfit.fit.choose import change_of
 from loopfit.fit.estimate import Trace
 from loopfit.record.read import read_record, record_from_arrays
 from loopfit.record.record import Record
@@ -130,7 +132,14 @@ def analyze_record(
     grid = resolution(prepared.trace.values)
     floor = grid / math.sqrt(12.0) if noise < grid / 3.0 else 0.0  # undithered: sigma >= q / sqrt(12)
     noise = max(noise, floor)
-    one = partial(assess, noise=noise, noise_floor=floor, confidence=confidence, band=band)
+    one = partial(
+        assess,
+        noise=noise,
+        noise_floor=floor,
+        confidence=confidence,
+        band=band,
+        setpoint=prepared.step is not None and prepared.step.signal == "setpoint",
+    )
     best = one(prepared.trace, pushed=prepared.held_before)
     findings = [*record.findings, *prepared.findings]
     each: list[StepFigures] = []
@@ -151,8 +160,10 @@ def analyze_record(
     if model is not None:
         findings += around_the_step(trace, fit, figures, noise)
         findings += about_rows(trace, fit, noise)
+        findings += about_swings(trace, fit, noise, change_of(fit, trace))
         if prepared.step is not None:
             findings += other_inputs(record, trace, prepared.step)
+            findings += output_limits(record, trace, prepared.step)
             findings += standing_offset(observed, figures["gain"], prepared.step)
     return Analysis(
         record=record,

@@ -7,11 +7,14 @@ from dataclasses import dataclass
 from loopfit.analysis.judge import Figures, Verdict, judge
 from loopfit.core.finding import Finding
 from loopfit.fit.choose import change_of, choose, structured
-from loopfit.fit.estimate import Fit, Trace, quantities, refine, surface_of
+from loopfit.fit.estimate import Fit, Trace, fit_trace, quantities, refine, surface_of
 from loopfit.fit.figures_of import Points
-from loopfit.fit.set_aside import false_first_rows, without_rows
+from loopfit.fit.set_aside import Rows, false_first_rows, outliers, without_rows
+from loopfit.step.limits import rows_at_limit
 
 _REFITS = 3
+_ROWS_LEFT = 12
+_LISTED = 5
 _WORTH_A_LOOK = 0.02  # of the change left unexplained
 
 
@@ -31,7 +34,14 @@ class Assessment:
 
 
 def assess(
-    trace: Trace, *, noise: float, noise_floor: float, confidence: float, band: float, pushed: bool = False
+    trace: Trace,
+    *,
+    noise: float,
+    noise_floor: float,
+    confidence: float,
+    band: float,
+    pushed: bool = False,
+    setpoint: bool = False,
 ) -> Assessment:
     """Fit a trace, find its intervals, and judge it.
 
@@ -47,14 +57,26 @@ def assess(
         As fractions.
     pushed : bool
         Whether a record without a step begins at rest.
+    setpoint : bool
+        Whether the step is one of the setpoint.
     """
+    aside: list[Finding] = []
+    limited = rows_at_limit(trace.values)
+    if limited.size and trace.values.size - limited.size >= _ROWS_LEFT:
+        aside.append(_at_limit(trace, limited))
+        trace = without_rows(trace, limited)
     fit = choose(trace, noise, noise_floor=noise_floor)
-    aside: tuple[Finding, ...] = ()
     if trace.input is not None and structured(fit, noise) > _WORTH_A_LOOK * abs(change_of(fit, trace)):
-        count, fit = false_first_rows(trace, fit, noise_floor=noise_floor)
-        if count:
-            aside = (_set_aside(trace, count),)
-            trace = without_rows(trace, count)
+        rows = false_first_rows(trace, fit, noise_floor=noise_floor)
+        if rows.size:
+            aside.append(_false_first(trace, rows))
+            trace = without_rows(trace, rows)
+            fit = fit_trace(trace, fit.structure, noise_floor=noise_floor)
+    wild = outliers(trace, fit)
+    if wild.size:
+        aside.append(_outliers(trace, wild))
+        trace = without_rows(trace, wild)
+        fit = choose(trace, noise, noise_floor=noise_floor)
     surface = surface_of(fit, confidence=confidence, band=band)
     for _ in range(_REFITS):  # a walker can meet a better model than the search did
         if surface.better is None:
@@ -62,18 +84,41 @@ def assess(
         fit = refine(fit, surface.better)
         surface = surface_of(fit, confidence=confidence, band=band)
     figures = quantities(fit, surface, band)
-    verdict = judge(trace, fit, figures, noise, pushed=pushed)
-    return Assessment(trace=trace, fit=fit, points=surface.points, figures=figures, verdict=verdict, aside=aside)
+    verdict = judge(trace, fit, figures, noise, pushed=pushed, against_setpoint=setpoint)
+    return Assessment(trace=trace, fit=fit, points=surface.points, figures=figures, verdict=verdict, aside=tuple(aside))
 
 
-def _set_aside(trace: Trace, count: int) -> Finding:
-    rows = slice(trace.step_row, trace.step_row + count)
+def _at_limit(trace: Trace, rows: Rows) -> Finding:
+    times = trace.time[rows]
+    level = trace.values[rows[0]]
+    return Finding(
+        code="measurement_saturated",
+        severity="warning",
+        at_s=(float(times[0]), float(times[-1])),
+        text=f"The measurement lies flat at {level:g} for {rows.size} rows, from {times[0]:.6g} s on: it is at the end of its "
+        "range. Those rows were set aside; what the record shows of overshoot and peak is a lower bound.",
+    )
+
+
+def _false_first(trace: Trace, rows: Rows) -> Finding:
     values = ", ".join(f"{value:g}" for value in trace.values[rows])
-    which = f"first {count} rows" if count > 1 else "first row"
+    which = f"first {rows.size} rows" if rows.size > 1 else "first row"
     return Finding(
         code="false_first_rows",
         severity="warning",
         at_s=(float(trace.time[rows][0]), float(trace.time[rows][-1])),
         text=f"The {which} after the step ({values}) do not belong to the response and were set aside: the first "
         "samples after a switch are often false, and a fit would take them for ringing.",
+    )
+
+
+def _outliers(trace: Trace, rows: Rows) -> Finding:
+    times = trace.time[rows]
+    where = ", ".join(f"{value:.6g}" for value in times[:_LISTED]) + (", ..." if rows.size > _LISTED else "")
+    what = f"{rows.size} rows are" if rows.size > 1 else "One row is"
+    return Finding(
+        code="outliers",
+        severity="note",
+        at_s=(float(times[0]), float(times[-1])),
+        text=f"{what} far from all others (at {where} s) and set aside.",
     )

@@ -13,6 +13,7 @@ from loopfit.fit.choose import change_of, moves_before_step
 from loopfit.fit.estimate import Fit, Trace
 from loopfit.record.record import Record
 from loopfit.step.detect import find_steps
+from loopfit.step.limits import rows_at_limit, steepest_runs
 from loopfit.step.noise import resolution
 
 _ENOUGH = 0.8  # of the change must be in the record
@@ -132,6 +133,40 @@ def other_inputs(record: Record, trace: Trace, step: StepUsed) -> list[Finding]:
                 )
             )
     return findings
+
+
+def output_limits(record: Record, trace: Trace, step: StepUsed) -> list[Finding]:
+    """Say where the controller's output lay at a limit, or moved at its greatest slope, while the response ran."""
+    if step.signal != "setpoint" or record.output is None:
+        return []
+    inside = (record.time >= trace.begins) & (record.time <= trace.time[-1])
+    time, output = record.time[inside], record.output.values[inside]
+    clamped = rows_at_limit(output) if output.size > 1 else output[:0]
+    if clamped.size:
+        share = 100.0 * clamped.size / output.size
+        return [
+            Finding(
+                code="output_clamped",
+                severity="warning",
+                at_s=(float(time[clamped[0]]), float(time[clamped[-1]])),
+                text=f"The output lay at a limit for {clamped.size} rows ({share:.0f} % of the response, first at "
+                f"{time[clamped[0]]:.6g} s): the loop was open there, and the figures are partly those of the limit, not of the "
+                "settings; make a smaller step.",
+            )
+        ]
+    runs = steepest_runs(time, output) if output.size > 1 else []
+    if len(runs) > 1 or any(end - begin > 0.05 * output.size for begin, end in runs):
+        begin = runs[0][0]
+        return [
+            Finding(
+                code="output_rate_limited",
+                severity="warning",
+                at_s=(float(time[begin]), float(time[runs[-1][1]])),
+                text=f"The output moved at one greatest slope over {sum(e - b for b, e in runs)} rows, first at "
+                f"{time[begin]:.6g} s: its rate is limited, and the figures are partly those of that limit; make a smaller step.",
+            )
+        ]
+    return []
 
 
 def standing_offset(observed: ObservedFigures, model_gain: Quantity | None, step: StepUsed) -> list[Finding]:

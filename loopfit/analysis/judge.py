@@ -7,6 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from loopfit.analysis.swinging import limit_cycle
 from loopfit.core.finding import Finding
 from loopfit.core.quantity import Quantity
 from loopfit.fit.choose import change_of, structured
@@ -37,7 +38,7 @@ class Verdict:
         return any(finding.severity == "error" for finding in self.findings)
 
 
-def judge(trace: Trace, fit: Fit, figures: Figures, noise: float, *, pushed: bool) -> Verdict:
+def judge(trace: Trace, fit: Fit, figures: Figures, noise: float, *, pushed: bool, against_setpoint: bool) -> Verdict:
     """Return what to think of a fit.
 
     Parameters
@@ -52,12 +53,14 @@ def judge(trace: Trace, fit: Fit, figures: Figures, noise: float, *, pushed: boo
         Fast noise of a row, rms.
     pushed : bool
         Whether the measurement was at rest at first, with no step recorded.
+    against_setpoint : bool
+        Whether the step is one of the setpoint, which the measurement must follow.
     """
     change = change_of(fit, trace)
     share = structured(fit, noise) / abs(change) if change != 0 else math.inf
     findings = [
-        *_refusals(trace, fit, figures, share, change, pushed=pushed),
-        *_about_damping(trace, figures),
+        *_refusals(trace, fit, figures, share, change, noise, pushed=pushed, against_setpoint=against_setpoint),
+        *_about_damping(trace, fit, figures, noise),
         *_about_noise(fit, share),
     ]
     reasons = []
@@ -74,7 +77,17 @@ def judge(trace: Trace, fit: Fit, figures: Figures, noise: float, *, pushed: boo
     return Verdict(findings=tuple(findings), adequate=adequate, reasons=tuple(reasons))
 
 
-def _refusals(trace: Trace, fit: Fit, figures: Figures, share: float, change: float, *, pushed: bool) -> list[Finding]:
+def _refusals(
+    trace: Trace,
+    fit: Fit,
+    figures: Figures,
+    share: float,
+    change: float,
+    noise: float,
+    *,
+    pushed: bool,
+    against_setpoint: bool,
+) -> list[Finding]:
     gain = figures.get("gain")
     if trace.input is not None and gain is not None and gain.low <= 0.0 <= gain.high:
         return [
@@ -82,6 +95,14 @@ def _refusals(trace: Trace, fit: Fit, figures: Figures, share: float, change: fl
                 "response_too_small",
                 "The measurement does not answer the step clearly enough to tell even the sign of its gain; "
                 "make a larger step or record longer.",
+            )
+        ]
+    if against_setpoint and gain is not None and gain.high < 0.0:
+        return [
+            _error(
+                "wrong_sign",
+                "The measurement moves against the setpoint: the feedback has the wrong sign (check direct and reverse "
+                "action before the loop is closed again), or the wrong columns were taken.",
             )
         ]
     if trace.input is None and pushed and abs(float(trace.values[0]) - float(fit.linear[2])) < 0.1 * abs(change):
@@ -104,6 +125,9 @@ def _refusals(trace: Trace, fit: Fit, figures: Figures, share: float, change: fl
                 "does.",
             )
         ]
+    cycle = limit_cycle(trace, fit, noise) if share > _STRUCTURE_LIMIT else None
+    if cycle is not None:
+        return [cycle]
     if share > _STRUCTURE_REFUSED:
         return [
             _error(
@@ -115,7 +139,7 @@ def _refusals(trace: Trace, fit: Fit, figures: Figures, share: float, change: fl
     return []
 
 
-def _about_damping(trace: Trace, figures: Figures) -> list[Finding]:
+def _about_damping(trace: Trace, fit: Fit, figures: Figures, noise: float) -> list[Finding]:
     zeta, frequency = figures.get("damping_ratio"), figures.get("natural_frequency_rad_s")
     if zeta is None or frequency is None:
         return []
@@ -128,13 +152,16 @@ def _about_damping(trace: Trace, figures: Figures) -> list[Finding]:
         ]
     decay = -math.expm1(-zeta.value * frequency.value * trace.span) if math.isfinite(frequency.value) else 1.0
     if zeta.value < 0.5 and decay < _LEAST_DECAY:
+        cycle = limit_cycle(trace, fit, noise)
+        if cycle is not None:
+            return [cycle]
         need = -math.log(0.5) / (max(zeta.value, 1e-6) * frequency.value)
         longer = f"; record about {need:.3g} s" if zeta.low > 0 else ""
         return [
             _error(
                 "too_little_decay",
                 f"The swings fell by only {100 * max(decay, 0):.0f} % within the record: too little to tell the "
-                f"damping, and a limit cycle looks the same{longer}.",
+                f"damping{longer}.",
             )
         ]
     return []

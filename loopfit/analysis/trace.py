@@ -10,6 +10,7 @@ from loopfit.analysis.result import StepUsed
 from loopfit.core.arrays import Array
 from loopfit.core.errors import RecordError, UsageError
 from loopfit.core.finding import Finding
+from loopfit.figures.swings import find_swings
 from loopfit.fit.columns import Input
 from loopfit.fit.estimate import Trace
 from loopfit.record.record import Record
@@ -19,6 +20,7 @@ from loopfit.step.release import release_row
 
 _CHANGES_AT_MOST = 200
 _AFTER_AT_LEAST = 5
+_SWINGS = 3
 _BEFORE_AT_LEAST = 10
 _BEFORE_SHARE = 0.15
 
@@ -273,7 +275,7 @@ def _release(record: Record, column_stood_still: bool) -> Prepared:
             "nothing moves in this record: no step in the setpoint or the output, "
             "and the measurement stays where it is",
         )
-    if column_stood_still:
+    if column_stood_still and not _swings(record):
         raise RecordError(
             record.source,
             "no step in the "
@@ -287,7 +289,18 @@ def _release(record: Record, column_stood_still: bool) -> Prepared:
             + "; state where it began with --step-at, --step-from and --step-to",
         )
     trace = Trace(time=record.time[row:], values=y[row:], input=None, begins=float(record.time[row]), step_row=0)
-    text = "No setpoint or output column: taken as a release that returns to rest"
+    text = (
+        "No step in the columns: taken as a release that returns to rest"
+        if column_stood_still
+        else "No setpoint or output column: taken as a release that returns to rest"
+    )
     text += f" from {record.time[row]:g} s on." if row else " from the first row on."
     note = Finding(code="taken_as_release", severity="note", text=text)
     return Prepared(trace=trace, step=None, steps=(), findings=(note,), held_before=row > 0)
+
+
+def _swings(record: Record) -> bool:
+    """Tell whether the measurement swings about its last level, as after a disturbance."""
+    y = record.measurement.values
+    rest = float(np.median(y[-max(5, y.size // 5) :]))
+    return find_swings(record.time, y - rest, noise_rms(y)).heights.size >= _SWINGS

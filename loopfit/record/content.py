@@ -10,9 +10,17 @@ from numpy.typing import NDArray
 from loopfit.core.arrays import Array
 
 
+def known_of(values: Array) -> Array:
+    """Return the numbers among the values, without a copy when all are."""
+    finite = np.isfinite(values)
+    return values if finite.all() else values[finite]
+
+
 def is_constant(values: Array) -> bool:
     """Return whether all numbers of a column are equal."""
-    known = values[np.isfinite(values)]
+    if len(values) and np.isfinite(values[0]) and bool(np.any(values[:: max(1, len(values) // 1000)] > values[0])):
+        return False
+    known = known_of(values)
     return len(known) == 0 or bool(np.all(known == known[0]))
 
 
@@ -23,7 +31,7 @@ def changes_of(values: Array) -> NDArray[np.int64]:
 
 def is_stepped(values: Array) -> bool:
     """Return whether a column stands still but for a few changes: at most one row in twenty, or three rows."""
-    known = values[np.isfinite(values)]
+    known = known_of(values)
     if len(known) < 3 or is_constant(known):
         return False
     return len(changes_of(known)) <= max(3, 0.05 * len(known)) and len(changes_of(known)) < 0.5 * len(known)
@@ -31,7 +39,7 @@ def is_stepped(values: Array) -> bool:
 
 def jump_share(values: Array) -> float:
     """Return the largest change from one row to the next as a share of the range."""
-    known = values[np.isfinite(values)]
+    known = known_of(values)
     span = float(np.ptp(known)) if len(known) else 0.0
     return float(np.max(np.abs(np.diff(known)))) / span if span > 0 and len(known) > 1 else 0.0
 
@@ -42,7 +50,7 @@ def noise_of(values: Array) -> float:
     The median of absolute second differences is 0.6745 sqrt(6) sigma for white noise (from memory); it does not
     see slow motion.
     """
-    known = values[np.isfinite(values)]
+    known = known_of(values)
     if len(known) < 4:
         return 0.0
     sigma = float(np.median(np.abs(np.diff(known, 2)))) / (0.6745 * 6**0.5)

@@ -10,6 +10,7 @@ import numpy as np
 from loopfit.core.arrays import Array
 from loopfit.core.finding import Finding
 from loopfit.record.clock import Clock, stamp_clock
+from loopfit.record.content import known_of
 from loopfit.record.units import seconds_per
 
 # size of a time since 1970 (or 1601, 0001 for ticks of 100 ns), and its units in a second
@@ -25,7 +26,7 @@ _EPOCHS = (
 
 def numeric_clock(values: Array, name: str, unit: str | None, cells: Sequence[str] | None = None) -> Clock:
     """Return seconds from numbers, by the unit in the header or the words of the name, else by their size."""
-    known = values[np.isfinite(values)]
+    known = known_of(values)
     factor = seconds_per(unit)
     if factor is None and unit is None:
         factor = _factor_in(name)
@@ -56,7 +57,7 @@ def numeric_clock(values: Array, name: str, unit: str | None, cells: Sequence[st
 
 
 def _factor_in(name: str) -> float | None:
-    """Return the seconds in the unit that ends a name, "time_s", or stands in it as a word, "millis"; None for neither."""
+    """Return the seconds in the unit that ends a name, "time_s", or stands in it, "millis"; None for neither."""
     words = re.split(r"[\W_]+", name.lower())
     known = [word for word in words if len(word) > 1] + (words[-1:] if len(words) > 1 else [])
     return next((seconds_per(word) for word in reversed(known) if seconds_per(word) is not None), None)

@@ -35,15 +35,11 @@ def table_by_columns(
     text, and cells with units make this function return None; the text is then read again row by row.
     """
     closed = body.endswith(b"\n")
-    if (
-        layout.delimiter == " "
-        or layout.marks.thousands
-        or body.count(b'"') % 2
-        or (not closed and _is_doubtful(body, layout))
-    ):
+    quotes = body.count(b'"') if b'"' in body else 0
+    if layout.delimiter == " " or layout.marks.thousands or quotes % 2 or (not closed and _is_doubtful(body, layout)):
         return None
     padded = (layout.delimiter + " ").encode()
-    if b'"' not in body and padded in body[:10000]:
+    if not quotes and padded in body[:10000]:
         body = body.replace(padded, layout.delimiter.encode())
     rows = body.count(b"\n") + (not closed)
     stamps = _stamp_columns(body, layout, numeric)
@@ -60,14 +56,13 @@ def table_by_columns(
         if column is None:
             return None
         columns.append(column)
-        if numeric[place] and bool(empty.any()):
-            empty &= np.zeros(rows, dtype=bool) if column.values is None else ~np.isfinite(column.values)
+        if numeric[place]:
+            whole = column.values is None or column.cells is None
+            empty &= False if whole or column.values is None else ~np.isfinite(column.values)
     first = next((column for column, flag in zip(columns, numeric, strict=True) if flag), None)
-    if (
-        bool(empty.any())
-        or first is None
-        or (first.cells is not None and cell_kind(first.cells[-1], layout.marks) == "text")
-    ):
+    if first is None or bool(empty.any()):
+        return None
+    if first.cells is not None and cell_kind(first.cells[-1], layout.marks) == "text":
         return None
     lines = np.arange(first_line, first_line + rows)
     findings = [] if closed else [unclosed(int(lines[-1]))]
@@ -98,7 +93,7 @@ def _frame(body: bytes, layout: Layout, numbers: list[bool]) -> pl.DataFrame | N
 def _all_finite(frame: pl.DataFrame, numbers: list[bool]) -> bool:
     """Return whether every cell of the columns of numbers is a finite number."""
     columns = [series for series, flag in zip(frame, numbers, strict=True) if flag]
-    return all(not series.null_count() and bool(series.is_finite().all()) for series in columns)
+    return all(not series.null_count() and bool(np.isfinite(series.to_numpy()).all()) for series in columns)
 
 
 def _column(place: int, series: pl.Series, header: Header, layout: Layout, number: bool) -> Column | None:
@@ -106,9 +101,7 @@ def _column(place: int, series: pl.Series, header: Header, layout: Layout, numbe
     import polars as pl
 
     if series.dtype == pl.Float64:
-        values = series.to_numpy()
-        if not np.isfinite(values).all():
-            return None
+        values = series.to_numpy()  # all finite, or the frame would have been read as text
         return Column(number=place + 1, name=header.names[place], unit=header.units[place], values=values, cells=None)
     if series.null_count() == len(series):
         cells: list[str] = [""] * len(series)

@@ -94,8 +94,8 @@ def flag_columns(table: Table) -> list[Column]:
     """Return the columns of quality flags: named so, and good in more than three rows of ten."""
     found = []
     for column in table.columns:
-        good = _is_good(column)
-        if set(words_of(column.name)) & _QUALITY_WORDS and good is not None and float(good.mean()) > 0.3:
+        good = _is_good(column) if set(words_of(column.name)) & _QUALITY_WORDS else None
+        if good is not None and float(good.mean()) > 0.3:
             found.append(column)
     return found
 

@@ -195,7 +195,7 @@ def _record(
             raise RecordError(source, f"only {len(seconds)} usable rows; a step test needs at least 5")
         span = f"the record runs from {seconds[0]:.6g} to {seconds[-1]:.6g} s"
         raise RecordError(source, f"only {int(inside.sum())} rows between --from and --to; {span}")
-    kept = rows[inside]
+    kept = rows if inside.all() else rows[inside]
 
     def signal(column: Column | None) -> Signal | None:
         if column is None or column.values is None:
@@ -208,7 +208,7 @@ def _record(
     return Record(
         source=source,
         rows=total,
-        time=read_only(seconds[inside]),
+        time=read_only(seconds if inside.all() else seconds[inside]),
         time_name=time_name,
         measurement=measurement,
         setpoint=signal(roles.get("setpoint")),

@@ -45,10 +45,12 @@ def table_from_text(source: str, data: bytes) -> Table:
         note = f"{count} zero bytes left out, as a logger writes them when its power fails; rows may be missing there"
         findings.append(Finding(code="zero_bytes", severity="warning", text=note))
     if "\x1a" in text[-10:]:
+        data = b""
         text = text.replace("\x1a", "")
     if "\r" in text:
+        data = b""
         text = text.replace("\r\n", "\n").replace("\r", "\n")
-    table = _by_columns(source, text) if len(text) > LONG else None
+    table = _by_columns(source, text, None if findings else data) if len(text) > LONG else None
     if table is None:
         table = _by_rows(source, text)
     return replace(table, findings=(*findings, *table.findings))
@@ -92,12 +94,15 @@ def _check_marks(source: str, header: Header, layout: Layout, rows: Sequence[Row
         raise RecordError(source, reason, row=header.unfit[0])
 
 
-def _by_columns(source: str, text: str) -> Table | None:
-    """Return the table of a long text by the quick way, None when a row needs a closer look."""
+def _by_columns(source: str, text: str, data: bytes | None = None) -> Table | None:
+    """Return the table of a long text by the quick way, None when a row needs a closer look.
+
+    `data` are the bytes it came from; if they are the same text, they need not be made again.
+    """
     head = text[:_HEAD].split("\n")[:-1]
     places = [len(text) // 12 * part for part in range(1, 12)]
-    inside = [line for place in places for line in text[place : place + 2000].split("\n")[1:-1][:6]]
-    full = [line for line in [*head[:80], *inside] if line.strip()]
+    inside = [line for place in places for line in text[place : place + 2000].split("\n")[1:-1][:4]]
+    full = [line for line in [*head[:50], *inside] if line.strip()]
     if not head or not inside:
         return None
     try:
@@ -110,7 +115,8 @@ def _by_columns(source: str, text: str) -> Table | None:
         return None
     first_line = rows[header.first][0]
     start = sum(len(line) + 1 for line in head[: first_line - 1])
-    return table_by_columns(source, text[start:].encode(), header, layout, numeric, first_line)
+    body = data[start:] if data is not None and text.isascii() and len(data) == len(text) else text[start:].encode()
+    return table_by_columns(source, body, header, layout, numeric, first_line)
 
 
 def layout_of(source: str, lines: list[str]) -> tuple[Layout, list[bool]]:

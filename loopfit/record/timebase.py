@@ -11,6 +11,7 @@ from loopfit.core.arrays import Array
 from loopfit.core.errors import RecordError
 from loopfit.core.finding import Finding
 from loopfit.record.clock import Clock, UndecidedStampsError, stamp_clock
+from loopfit.record.content import known_of
 from loopfit.record.epoch import numeric_clock
 from loopfit.record.layout import STAMP
 from loopfit.record.table import Column, Table
@@ -195,7 +196,7 @@ def _is_rising(values: Array) -> bool:
     """Return whether the numbers never fall and rise in most rows or in bursts, NaN passed over."""
     if len(values) > 1 and values[-1] < values[0]:
         return False
-    known = values[np.isfinite(values)]
+    known = known_of(values)
     if len(known) < 2 or not known[-1] > known[0] or bool(np.any(known[:-1:97] > known[-1])):
         return False
     step = np.diff(known)
@@ -204,7 +205,7 @@ def _is_rising(values: Array) -> bool:
 
 def _claims_time(column: Column, values: Array) -> bool:
     """Return whether a column named for the time rises in half of its rows, or falls throughout (but for "T")."""
-    step = np.diff(values[np.isfinite(values)])
+    step = np.diff(known_of(values))
     falls = len(column.name) > 1 and bool(np.all(step < 0))
     return len(step) > 0 and (falls or float(np.mean(step > 0)) >= 0.5)
 
@@ -213,13 +214,13 @@ def _is_even(values: Array | None) -> bool:
     """Return whether the steps are alike: nine in ten within half of the median."""
     if values is None:
         return False
-    step = np.diff(values[np.isfinite(values)])
+    step = np.diff(known_of(values))
     usual = float(np.median(step))
     return usual > 0 and float(np.mean(np.abs(step - usual) <= 0.5 * usual)) >= 0.9
 
 
 def _is_whole(values: Array) -> bool:
-    known = values[np.isfinite(values)]
+    known = known_of(values)
     return len(known) > 0 and bool(np.all(known == np.round(known)))
 
 
@@ -227,7 +228,7 @@ def _counts(values: Array | None) -> bool:
     """Return whether the numbers count rows: whole, mostly one more each."""
     if values is None or not _is_whole(values):
         return False
-    step = np.diff(values[np.isfinite(values)])
+    step = np.diff(known_of(values))
     return len(step) > 0 and bool(np.all(step >= 0)) and float(np.mean(step == 1)) >= 0.9
 
 

@@ -9,7 +9,7 @@ import numpy as np
 from loopfit.analysis.result import Analysis
 from loopfit.fit.curve import FittedCurve
 from loopfit.report.plot_labels import INK, EndLabel, Panel, PointLabel
-from loopfit.report.plot_lines import band_width, begins, envelope_of
+from loopfit.report.plot_lines import band_width, begins, envelope_of, until
 from loopfit.report.plot_words import level
 from loopfit.report.text import in_words
 
@@ -29,13 +29,19 @@ def draw_model(panel: Panel, analysis: Analysis, curve: FittedCurve) -> None:
     panel.ends.append(EndLabel(height=at_end, words=f"model ({analysis.confidence_percent:g} % band)", colour=_FIT))
     if curve.final_value is None:
         return
-    strip = band_width(analysis, curve)
+    strip, end = band_width(analysis, curve), until(analysis)
+    alone = end == analysis.window_s[1]
+    share = 1.0 if alone else float((end - axes.get_xlim()[0]) / np.ptp(axes.get_xlim()))
     words = f"{'rest' if analysis.step is None else 'final'} value {level(analysis, curve, curve.final_value)}"
     if strip is not None:
-        axes.axhspan(curve.final_value - strip, curve.final_value + strip, color=_SETTLED, lw=0, zorder=0, label="band")
+        bounds = (curve.final_value - strip, curve.final_value + strip)
+        axes.axhspan(*bounds, xmax=share, color=_SETTLED, lw=0, zorder=0, label="band")
         words += f"\nshaded: ±{analysis.band_percent:g} %{_late(analysis)}"
-    axes.axhline(curve.final_value, color=INK, lw=0.7, ls=(0, (8, 2, 1, 2)), zorder=1, label="final value")
-    panel.ends.append(EndLabel(height=curve.final_value, words=words, colour=INK, dashes="-."))
+    axes.axhline(curve.final_value, xmax=share, color=INK, lw=0.7, ls=(0, (8, 2, 1, 2)), zorder=1, label="final value")
+    if alone:
+        panel.ends.append(EndLabel(height=curve.final_value, words=words, colour=INK, dashes="-."))
+    else:
+        panel.points.append(PointLabel(time=end, height=curve.final_value, words=words))
     envelope = envelope_of(analysis, curve)
     if envelope is None:
         return
@@ -53,9 +59,9 @@ def draw_model(panel: Panel, analysis: Analysis, curve: FittedCurve) -> None:
 
 def _late(analysis: Analysis) -> str:
     settling = None if analysis.response is None else analysis.response.settling_time_s
-    if settling is None or not analysis.window_s[1] < begins(analysis) + settling.value < math.inf:
+    if settling is None or not until(analysis) < begins(analysis) + settling.value < math.inf:
         return ""
-    return ", reached\nonly after the record"
+    return f", reached\nonly after the {'record' if until(analysis) == analysis.window_s[1] else 'next step'}"
 
 
 def draw_figures(panel: Panel, analysis: Analysis, curve: FittedCurve, view: tuple[float, float]) -> None:
@@ -78,7 +84,7 @@ def draw_figures(panel: Panel, analysis: Analysis, curve: FittedCurve, view: tup
     if response is None or final is None:
         return
     peak, overshoot = response.peak_time_s, response.overshoot_percent
-    if peak is not None and overshoot is not None and overshoot.value > 0.05 and begin + peak.value < curve.time[-1]:
+    if peak is not None and overshoot is not None and overshoot.value > 0.05 and begin + peak.value < until(analysis):
         at = begin + peak.value
         at, top = _peak(curve, at, at + _gradual(analysis), up=up)
         (line,) = panel.axes.plot(
@@ -91,14 +97,15 @@ def draw_figures(panel: Panel, analysis: Analysis, curve: FittedCurve, view: tup
     settling, half = response.settling_time_s, band_width(analysis, curve)
     if settling is None or half is None or not math.isfinite(settling.value):
         return
-    words = f"settled within ±{analysis.band_percent:g} % after {in_words(settling, 's')}"
+    narrow = "\n" if until(analysis) < analysis.window_s[1] else " "
+    words = f"settled within ±{analysis.band_percent:g} %{narrow}after {in_words(settling, 's')}"
     at = begin + settling.value
-    if at > view[1]:
+    if at > until(analysis):
         return
     height = final - math.copysign(max(half + 0.05 * reach, clear + 0.03 * reach), 1 if up else -1)
-    _bracket(panel, begin + settling.low, min(begin + settling.high, view[1]), height, "settling time")
+    _bracket(panel, begin + settling.low, min(begin + settling.high, until(analysis)), height, "settling time")
     panel.axes.plot([at, at], [final, height], color=INK, lw=0.9, marker="d", ms=4, markevery=[1], zorder=5)
-    panel.points.insert(0, PointLabel(time=at, height=height, words=words, above=not up))
+    panel.points.insert(1, PointLabel(time=at, height=height, words=words, above=not up))
 
 
 def _bracket(panel: Panel, start: float, end: float, height: float, name: str) -> None:

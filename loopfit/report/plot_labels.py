@@ -18,6 +18,7 @@ from loopfit.core.arrays import Array
 _MARGIN = 0.022  # of the axes' width: from the end of a line to its label
 _NEAR = (6.0, 14.0, 26.0, 42.0, 62.0)  # points from what a label names
 _DENSE = 4.0  # pixels between the points of a line that a label should not cover
+_WRONG_SIDE = 40.0  # as bad as covering twenty points of a line
 INK, STEP = "#262626", "#b4530a"
 
 
@@ -135,7 +136,9 @@ def place(axes: Axes, labels: Sequence[PointLabel], lines: Sequence[Line2D]) -> 
         for number, (offset, across, along) in enumerate(_places(label.above)):
             text.set(position=offset, ha=across, va=along)
             box = text.get_window_extent().padded(3.0)
-            cost = 0.15 * number + 2.0 * _covered(points, box)
+            cost = 0.3 * number + 2.0 * _covered(points, box)
+            if label.above is not None and (offset[1] > 0) is not label.above:
+                cost += _WRONG_SIDE
             cost += sum(1e4 for other in taken if box.overlaps(other))
             cost += 1e3 * _outside(box, frame)
             if best is None or cost < best[0]:

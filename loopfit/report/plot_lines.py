@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -33,12 +33,25 @@ def begins(analysis: Analysis) -> float:
     return analysis.window_s[0] if analysis.step is None else analysis.step.time_s
 
 
+def until(analysis: Analysis) -> float:
+    """Return when the response to the step ends, s: at the next step of a record with several, else with the record."""
+    later = [step.time_s for step in analysis.steps if begins(analysis) < step.time_s <= analysis.window_s[1]]
+    return min(later, default=analysis.window_s[1])
+
+
 def curve_in(analysis: Analysis, view: tuple[float, float]) -> FittedCurve | None:
-    """Return the model's response over the part of its window that is in view; None without a model."""
+    """Return the model's response over the part of its window that is in view; None without a model.
+
+    Its final value is where the step leads that the figures are of, not the steps that follow it.
+    """
     if analysis.model is None:
         return None
     window = (max(view[0], analysis.window_s[0]), min(view[1], analysis.window_s[1]))
-    return curve_of(analysis.fit, analysis.points, window)
+    curve = curve_of(analysis.fit, analysis.points, window)
+    later = [step.size for step in analysis.steps if until(analysis) <= step.time_s <= analysis.window_s[1]]
+    if curve.final_value is None or analysis.model.gain is None or not later:
+        return curve
+    return replace(curve, final_value=curve.final_value - analysis.model.gain.value * sum(later))
 
 
 def band_width(analysis: Analysis, curve: FittedCurve) -> float | None:
@@ -64,7 +77,8 @@ def view_of(analysis: Analysis) -> tuple[float, float]:
     end = last
     settling = None if analysis.response is None else analysis.response.settling_time_s
     doubtful = not analysis.model.adequate or any(finding.severity == "warning" for finding in analysis.findings)
-    if settling is not None and math.isfinite(settling.value) and not doubtful:
+    alone = until(analysis) == last
+    if settling is not None and math.isfinite(settling.value) and alone and not doubtful:
         bound = settling.high if math.isfinite(settling.high) else settling.value
         enough = _RESTS * bound
         if enough < _WORTH_CUTTING * (last - begin):
@@ -134,7 +148,7 @@ def envelope_of(analysis: Analysis, curve: FittedCurve) -> Envelope | None:
             start = max(start, finding.at_s[1])
     if model.dead_time_s is not None and analysis.step is not None:
         start += model.dead_time_s.value
-    after = np.flatnonzero(curve.time >= start)
+    after = np.flatnonzero((curve.time >= start) & (curve.time <= until(analysis)))
     if after.size < 8:
         return None
     since = curve.time[after] - start

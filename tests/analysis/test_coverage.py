@@ -8,7 +8,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 import pytest
-from simulation import Truth, true_figures, unit_response
+from simulated_records import Truth, true_figures, unit_response
 
 import loopfit
 

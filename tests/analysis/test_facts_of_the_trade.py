@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from simulation import Truth, integrated, unit_response
+from simulated_records import Truth, integrated, unit_response
 
 import loopfit
 from loopfit.core.arrays import Array

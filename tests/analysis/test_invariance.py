@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 from hypothesis import HealthCheck, example, given, settings
 from hypothesis import strategies as st
-from simulation import Truth, unit_response
+from simulated_records import Truth, unit_response
 
 import loopfit
 from loopfit.analysis.result import Analysis

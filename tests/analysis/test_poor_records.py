@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 import pytest
-from simulation import Truth, unit_response
+from simulated_records import Truth, unit_response
 
 import loopfit
 from loopfit.core.errors import LoopfitError, RecordError, UsageError

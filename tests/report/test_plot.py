@@ -272,12 +272,17 @@ def test_refused_record_is_shown_with_its_step() -> None:
 def test_findings_are_numbered_where_they_are() -> None:
     analysis = analysed("gradual")
     drawn = drawn_of("gradual")
-    (finding,) = [finding for finding in analysis.findings if finding.at_s is not None]
-    assert "1 gradual\u00a0change" in labels(drawn).replace("1\u00a0", "1 ")
+    places = sorted((finding.at_s, finding.code) for finding in analysis.findings if finding.at_s is not None)
+    assert places
+    for number, (_, code) in enumerate(places, start=1):
+        assert f"{number} {code.replace('_', ' ')}" in labels(drawn).replace("\u00a0", " ")
     spans = [
         xy(mark)[0].tolist() for mark in drawn.axes[0].lines if mark.get_marker() == "|" and not mark.get_clip_on()
     ]
-    assert spans == [list(finding.at_s or ())]
+    assert spans == [list(at) for at, _ in places]
+    assert [text.get_text() for text in words(drawn) if text.get_color() == "white"] == [
+        str(number) for number in range(1, len(places) + 1)
+    ]
 
 
 def test_output_has_its_own_panel_and_the_setpoint_only_where_it_fits() -> None:
@@ -354,7 +359,7 @@ def test_file_that_cannot_be_written_is_told(tmp_path: Path, path: str) -> None:
 
 
 HEADS = {
-    "dollars": "time (s),price $x$ and $y,set $r$",
+    "dollars": r"time (s),price $\nosuch{$ here,set $r$",
     "letters": "Zeit [s],Füllstand Behälter [mm],Sollwert [mm]",
     "no such letters": "time (s),測定値,設定値",
     "long": f"time (s),{'very long measurement ' * 6}(mm/s),setpoint (mm/s)",

@@ -61,7 +61,10 @@ def test_derivatives(chart: Chart, rungs: tuple[int, ...], kind: str) -> None:
             numeric = (45 * (moved(1) - moved(-1)) - 9 * (moved(2) - moved(-2)) + (moved(3) - moved(-3))) / (60 * h)
             # rounding: eps / h times values of up to 1e3 (root of the count times a ramp); truncation h^6 / 140
             scale = 1.0 + np.max(np.abs(numeric))
-            assert np.max(np.abs(slopes[0, coordinate] - numeric)[:, clear]) < 1e-9 * scale, coordinate
+            # the derivatives of bins leave out that of the midpoint's correction, (row interval / time scale)^2 / 24
+            # times a third derivative of up to 1 / r^2, 14 and 40 times the first
+            left_out = 2.0 * (model.samples.row_interval / chart.scale(theta[None])[0]) ** 2
+            assert np.max(np.abs(slopes[0, coordinate] - numeric)[:, clear]) < (1e-9 + left_out) * scale, coordinate
 
 
 @pytest.mark.parametrize("rungs", [(1,), (1, 0), (2,)])

@@ -1,0 +1,82 @@
+"""The swings of an oscillation about rest: where they turn, how far, how long each lasts."""
+
+from __future__ import annotations
+
+import itertools
+from dataclasses import dataclass
+
+import numpy as np
+
+from loopfit.core.arrays import Array
+
+_CLEAR = 4.0  # noise levels a swing must reach
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Swings:
+    """Successive swings.
+
+    `turns` and `heights` (k,): instants and heights of the turning points, heights positive; `passes` (k + 1,):
+    instants at which the motion passes rest around them, s.
+    """
+
+    turns: Array
+    heights: Array
+    passes: Array
+
+    @property
+    def half_periods(self) -> Array:
+        """Duration of each swing, s."""
+        return np.diff(self.passes)
+
+
+def find_swings(time: Array, departure: Array, noise: float) -> Swings:
+    """Return the swings of a motion about rest.
+
+    Passages of rest count once the motion has been clear of the noise on both sides; each is interpolated
+    between the rows around it.
+
+    Parameters
+    ----------
+    time : (n,) array
+        Rising, s.
+    departure : (n,) array
+        Measurement minus its rest value.
+    noise : float
+        Fast noise of a row, rms.
+    """
+    clear = np.flatnonzero(np.abs(departure) > _CLEAR * noise)
+    empty = np.zeros(0)
+    if clear.size < 2:
+        return Swings(turns=empty, heights=empty, passes=empty)
+    sides = np.sign(departure[clear])
+    changes = np.flatnonzero(sides[1:] != sides[:-1])
+    passes = []
+    for i in changes:
+        a, b = int(clear[i]), int(clear[i + 1])
+        t, y = time[a : b + 1], departure[a : b + 1]
+        slope = np.polynomial.polynomial.polyfit(y / np.ptp(y), t - t[0], 1)
+        passes.append(float(np.clip(t[0] + slope[0], t[0], t[-1])))
+    turns, heights = [], []
+    for begin, end in itertools.pairwise(passes):
+        inside = np.flatnonzero((time >= begin) & (time <= end))
+        if inside.size == 0:
+            return Swings(turns=empty, heights=empty, passes=empty)
+        top, when = _turning_point(time[inside], np.abs(departure[inside]))
+        heights.append(top)
+        turns.append(when)
+    return Swings(turns=np.array(turns), heights=np.array(heights), passes=np.array(passes))
+
+
+def _turning_point(t: Array, y: Array) -> tuple[float, float]:
+    """Return height and instant of the top, by a parabola through the rows around it."""
+    near = np.flatnonzero(y > 0.7 * y.max())
+    if near.size < 4:
+        top = int(np.argmax(y))
+        return float(y[top]), float(t[top])
+    x = t[near] - t[near].mean()
+    c0, c1, c2 = np.polynomial.polynomial.polyfit(x, y[near], 2)
+    if c2 >= 0:
+        return float(y.max()), float(t[int(np.argmax(y))])
+    at = float(np.clip(-0.5 * c1 / c2, x[0], x[-1]))
+    return float(c0 + c1 * at + c2 * at * at), float(at + t[near].mean())
