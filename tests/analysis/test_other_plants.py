@@ -112,4 +112,4 @@ def test_oscillation_that_hardly_decays_is_refused(zeta: float) -> None:
     motion = integrated(lambda _, x: [x[1], 2.0 - x[0] - 2 * zeta * x[1]], BEGIN, [0.0, 0.0], TIME)[0] + NOISE
     analysis = loopfit.analyze(time=TIME, measurement=motion, output=OUTPUT)
     assert analysis.model is None
-    assert "too_little_decay" in [finding.code for finding in analysis.findings]
+    assert {"too_little_decay", "limit_cycle"} & {finding.code for finding in analysis.findings}

@@ -192,17 +192,18 @@ def test_time_in_any_unit(unit: float) -> None:
 
 
 @pytest.mark.xfail(strict=True, raises=AssertionError, reason="60 coarse bins cannot show 40 swings")
-@pytest.mark.parametrize("rows", [250, 1000])
-def test_long_ringing_is_found(rows: int) -> None:
-    """40 swings in the record, 6 or 25 rows each, noise 0.1 %; zeta 0.02 (0.5 % was the widest interval elsewhere)."""
-    time = np.linspace(-2.0, 250.0, rows)
-    row = int(np.searchsorted(time, 0.0))
-    clean = unit_response(Truth(gain=1.0, zeta=0.02, omega=1.0), time - time[row])
-    noise = 1e-3 * np.random.default_rng(1).standard_normal(rows)
-    output = np.where(np.arange(rows) < row, 0.0, 1.0)
-    model = loopfit.analyze(time=time, measurement=clean + noise, output=output).model
-    assert model is not None
-    assert model.damping_ratio.value == pytest.approx(0.02, rel=0.005)
+def test_long_ringing_is_found() -> None:
+    """40 swings in the record, 6 to 50 rows each, noise 0.1 %; zeta 0.02 (0.5 % was the widest interval elsewhere)."""
+    found = []
+    for rows in (250, 320, 400, 500, 600, 800, 1000, 1300, 2000):
+        time = np.linspace(-2.0, 250.0, rows)
+        row = int(np.searchsorted(time, 0.0))
+        clean = unit_response(Truth(gain=1.0, zeta=0.02, omega=1.0), time - time[row])
+        noise = 1e-3 * np.random.default_rng(1).standard_normal(rows)
+        output = np.where(np.arange(rows) < row, 0.0, 1.0)
+        model = loopfit.analyze(time=time, measurement=clean + noise, output=output).model
+        found.append(np.nan if model is None else model.damping_ratio.value)
+    assert found == pytest.approx([0.02] * len(found), rel=0.005)
 
 
 @pytest.mark.xfail(strict=True, raises=AssertionError, reason="walkers of the gain are held back by flat directions")
