@@ -134,6 +134,13 @@ class Analysis:
         return texts[0] if texts else "no model could be given"
 
     @property
+    def settles_in_record(self) -> bool:
+        """Whether the settling time lies within the rows used."""
+        settling = None if self.response is None else self.response.settling_time_s
+        begin = self.window_s[0] if self.fit.columns.input is None else float(self.fit.columns.input.times[-1])
+        return settling is not None and begin + settling.value <= self.window_s[1]
+
+    @property
     def curve(self) -> FittedCurve | None:
         """The fitted response over the rows used, with the band of all models that the record allows."""
         return None if self.model is None else curve_of(self.fit, self.points, self.window_s)

@@ -21,7 +21,7 @@ from loopfit.report.plot_figures import draw_figures, draw_model
 from loopfit.report.plot_labels import INK, STEP, EndLabel, Panel, PointLabel, end_labels, marks, place, settle
 from loopfit.report.plot_lines import begins, curve_in, in_view, thinned, view_of
 from loopfit.report.plot_words import FONT, axis_words, below, located, readable, title
-from loopfit.report.text import _step_words, _stepped_signal
+from loopfit.report.text import step_words, stepped_signal
 
 _RECORD, _LONG_RECORD, _OUTPUT = INK, "#9c9c9c", "#5c5c5c"  # a long noisy record is an area: lighter
 _METADATA = {".png": {"Software": None}, ".svg": {"Date": None}, ".pdf": {"CreationDate": None}}
@@ -104,7 +104,9 @@ def _drawn(analysis: Analysis) -> Figure:
     for panel, role in zip(panels[1:], roles, strict=True):
         _lower(panel, analysis, role, view)
     if analysis.step is not None:
-        words = readable(_step_words(analysis.step, _stepped_signal(analysis)), analysis.step.signal)
+        words = readable(
+            step_words(analysis.step, stepped_signal(analysis), analysis.record.sample_interval_s), analysis.step.signal
+        )
         where = panels[1 + roles.index(analysis.step.signal)] if analysis.step.signal in roles else main
         low, high = where.axes.get_ylim()
         upwards = where is not main or analysis.step.size * _direction(analysis) > 0

@@ -64,9 +64,9 @@ def answer(analysis: Analysis) -> str:
         if response.overshoot_percent is not None and math.isfinite(response.overshoot_percent.value):
             second.append(_overshoot_words(response.overshoot_percent))
         if response.settling_time_s is not None and math.isfinite(response.settling_time_s.value):
-            second.append(
-                f"settled within ±{analysis.band_percent:g} % after {in_words(response.settling_time_s, 's')}"
-            )
+            after = in_words(response.settling_time_s, "s")
+            settled = "settled" if analysis.settles_in_record else "would settle, after the end of the record,"
+            second.append(f"{settled} within ±{analysis.band_percent:g} % after {after}")
     text = "; ".join(second)
     return first + ("\n" + text[0].upper() + text[1:] + "." if text else "")
 
@@ -104,32 +104,36 @@ def _record(analysis: Analysis) -> str:
         )
     )
     if analysis.step is not None:
-        lines.append(f"step         {_step_words(analysis.step, _stepped_signal(analysis))}")
+        lines.append(f"step         {step_words(analysis.step, stepped_signal(analysis), record.sample_interval_s)}")
     else:
         lines.append("step         none: a release, returning to rest")
     return "\n".join(lines)
 
 
-def _stepped_signal(analysis: Analysis) -> Signal | None:
+def stepped_signal(analysis: Analysis) -> Signal | None:
+    """Return the column that was stepped; None for a release or a stated step without a column."""
     if analysis.step is None:
         return None
     return analysis.record.setpoint if analysis.step.signal == "setpoint" else analysis.record.output
 
 
-def _step_words(step: StepUsed, signal: Signal | None) -> str:
+def step_words(step: StepUsed, signal: Signal | None, interval_s: float) -> str:
+    """Return "setpoint 40 to 50 degC at 60 s", digits as the levels and the sampling deserve."""
     unit = f" {signal.unit}" if signal is not None and signal.unit else ""
     places = max(0, decimals_for(0.0, step.size))
     levels = [
         f"{value:.{min(places, 6)}f}".rstrip("0").rstrip(".") if places else f"{value:.0f}"
         for value in (step.from_, step.to)
     ]
-    return f"{step.signal} {levels[0]} to {levels[1]}{unit} at {step.time_s:.6g} s"
+    at = number(step.time_s, min(max(decimals_for(interval_s, 0.0), 0), 9))
+    at = at.rstrip("0").rstrip(".") if "." in at else at
+    return f"{step.signal} {levels[0]} to {levels[1]}{unit} at {at} s"
 
 
 def _table(analysis: Analysis) -> str:
     model, response, observed = analysis.model, analysis.response, analysis.observed
     unit = analysis.record.measurement.unit or ""
-    stepped = _stepped_signal(analysis)
+    stepped = stepped_signal(analysis)
     per = f"{unit or '-'}/{stepped.unit}" if stepped is not None and stepped.unit and stepped.unit != unit else ""
     confidence = f"{analysis.confidence_percent:g} % interval"
     head = f"{'':{_NAME}}{'':{_UNIT}}{'model':>{_VALUE}}  {confidence:<{_RANGE}}record shows"
