@@ -26,7 +26,7 @@ def around_the_step(trace: Trace, fit: Fit, figures: dict[str, Quantity | None],
     """Return what the rows before the step and the end of the record do to the numbers."""
     findings = []
     end = float(trace.time[-1])
-    if trace.input is not None and moves_before_step(trace, noise):
+    if fit.structure.moving_start or (trace.input is not None and moves_before_step(trace, noise)):
         allowed = fit.structure.moving_start or fit.structure.drift
         findings.append(
             Finding(

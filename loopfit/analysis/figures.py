@@ -77,7 +77,9 @@ def _lags(kind: Kind, slow: Quantity | None, fast: Quantity | None) -> tuple[Qua
 
 def capped(damping: Quantity) -> Quantity:
     """Return the damping ratio with its value at most 11: beyond it is a first-order lag."""
-    value = min(damping.value, _MOST_DAMPED)
+    if damping.value > _MOST_DAMPED:
+        return Quantity(_MOST_DAMPED, min(damping.low, _MOST_DAMPED), math.inf)
+    value = damping.value
     return Quantity.spanning(value, min(damping.low, value), damping.high)
 
 

@@ -113,6 +113,16 @@ def _refusals(
                 "a step nor a release; start at the moment it is let go with --from, or record the input.",
             )
         ]
+    interval = float(np.median(np.diff(trace.time)))
+    T, r = (float(value[0]) for value in fit.columns.chart.lags(fit.theta[None]))
+    if trace.input is None and T * max(1.0, math.sqrt(r)) < 0.5 * interval:
+        return [
+            _error(
+                "too_quick",
+                f"The measurement changes within one row ({interval:.3g} s): there is no return to rest to be seen; "
+                "log faster, or record the step's own column.",
+            )
+        ]
     target = fit.columns.target
     total = float(np.sum((target - target.mean()) ** 2))
     explained = 1.0 - fit.sse / total if total > 0 else 0.0

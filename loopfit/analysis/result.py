@@ -103,7 +103,7 @@ class StepFigures:
     refusal: str | None
 
 
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False, repr=False)
 class Analysis:
     """The result for one record. `model` is None when it was refused; the findings say why.
 
@@ -124,6 +124,10 @@ class Analysis:
     points: Points
     band_percent: float
     confidence_percent: float
+
+    def __repr__(self) -> str:
+        damping = None if self.model is None else self.model.damping_ratio
+        return f"<Analysis of {self.record.source}: {self.refusal or damping or (self.model and self.model.kind)}>"
 
     @property
     def refusal(self) -> str | None:

@@ -21,6 +21,8 @@ from loopfit.step.release import release_row
 _CHANGES_AT_MOST = 200
 _AFTER_AT_LEAST = 5
 _SWINGS = 3
+_SPAN_S = (1e-9, 1e12)
+_LARGEST = 1e30
 _BEFORE_AT_LEAST = 10
 _BEFORE_SHARE = 0.15
 
@@ -67,6 +69,7 @@ def prepare(record: Record, *, number: int | None, stated: StatedStep | None) ->
     RecordError
         If there is no such step, or too little of the record after it.
     """
+    _check_scale(record)
     if np.ptp(record.measurement.values) == 0:
         raise RecordError(
             record.source,
@@ -90,6 +93,26 @@ def prepare(record: Record, *, number: int | None, stated: StatedStep | None) ->
     if number is None and len(found.steps) > 1:
         return _all_of(record, found)
     return _one_of(record, found, number or 1)
+
+
+def _check_scale(record: Record) -> None:
+    """Refuse numbers so large, small or fast that floating point would spoil the answer."""
+    if not _SPAN_S[0] <= record.duration_s <= _SPAN_S[1]:
+        raise RecordError(
+            record.source,
+            f"the record spans {record.duration_s:.3g} s, which no loop does; state the unit of time in the header, or --interval",
+        )
+    for role in ("measurement", "setpoint", "output"):
+        signal = getattr(record, role)
+        if signal is None:
+            continue
+        largest, travel = float(np.max(np.abs(signal.values))), float(np.ptp(signal.values))
+        if largest > _LARGEST or 0 < travel < 1.0 / _LARGEST:
+            raise RecordError(
+                record.source,
+                f"the {role} reaches {largest:.3g} over a range of {travel:.3g}: rescale it",
+                column=signal.name,
+            )
 
 
 def _stepped(record: Record) -> tuple[StepsFound | None, bool]:
@@ -171,7 +194,7 @@ def _rows_of(record: Record, found: StepsFound, number: int) -> tuple[int, int]:
 
 
 def _between(record: Record, found: StepsFound, step: Step, begin: int, end: int) -> Trace:
-    inside = (found.rows > begin) & (found.rows < end)
+    inside = found.rows < end  # earlier steps too: their tails run on
     rows, sizes = found.rows[inside], found.sizes[inside]
     if rows.size > _CHANGES_AT_MOST:
         rows, sizes = _thinned(rows, sizes)

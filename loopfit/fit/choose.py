@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from dataclasses import replace
 
 import numpy as np
 
@@ -14,6 +13,8 @@ _HALVED = 0.5  # a richer model must at least halve the structured residual
 _EVIDENCE = 10.0  # difference of the information criterion that counts as very strong (Kass & Raftery 1995)
 _BEYOND = 2.0  # time constants longer than this many spans: the record may be an integration
 _REST_ROWS = 8
+_WANDERS = 3.0
+_WANDER_SHARE = 0.02
 
 
 def choose(trace: Trace, noise: float, *, noise_floor: float) -> Fit:
@@ -34,15 +35,21 @@ def choose(trace: Trace, noise: float, *, noise_floor: float) -> Fit:
     if start.moving_start:  # a drift is considered only where the rows before the step show movement
         rival = fit_trace(trace, Structure(drift=True), noise_floor=noise_floor)
         best = min(best, rival, key=criterion)
-    if _may_integrate(best, trace) and not best.structure.drift:
+    if _far_beyond(best, trace) and not best.structure.drift:
         rival = fit_trace(trace, Structure(rungs=(2,), first_order=True), noise_floor=noise_floor)
         if criterion(rival) <= criterion(best) + 2.0:
             return rival
-    if best.colour * math.sqrt(best.columns.target.size) < _STRUCTURED:
-        return best
-    rival = fit_trace(trace, replace(best.structure, rungs=(1, 0)), noise_floor=noise_floor)
-    clearly = criterion(rival) < criterion(best) - _EVIDENCE
-    return rival if clearly and structured(rival, noise) < _HALVED * structured(best, noise) else best
+    if start.moving_start or best.colour * math.sqrt(best.columns.target.size) < _STRUCTURED:
+        return best  # a zero would follow a tail that is slower than the plant
+    rivals = [Structure(rungs=(1, 0))]
+    if wanders_before_step(trace, noise, abs(change_of(best, trace))):
+        rivals.insert(0, Structure(moving_start=True))
+    for structure in rivals:
+        rival = fit_trace(trace, structure, noise_floor=noise_floor)
+        clearly = criterion(rival) < criterion(best) - _EVIDENCE
+        if clearly and structured(rival, noise) < _HALVED * structured(best, noise) and not _far_beyond(rival, trace):
+            return rival
+    return best
 
 
 def criterion(fit: Fit) -> float:
@@ -97,6 +104,19 @@ def moves_before_step(trace: Trace, noise: float) -> bool:
     return abs(slope) > 5.0 * error and travelled > 0.03 * float(np.ptp(trace.values))
 
 
-def _may_integrate(fit: Fit, trace: Trace) -> bool:
+def wanders_before_step(trace: Trace, noise: float, change: float) -> bool:
+    """Tell whether the rows before the step hold a movement, without a trend, that fast noise does not explain."""
+    rows = trace.step_row
+    if rows < _REST_ROWS:
+        return False
+    moved = float(np.std(trace.values[:rows]))
+    return moved > max(_WANDERS * noise, _WANDER_SHARE * change)
+
+
+def _far_beyond(fit: Fit, trace: Trace) -> bool:
+    """Tell whether a model's lags or zero are so long that the record cannot hold them."""
     T, _ = fit.columns.chart.lags(fit.theta[None])
-    return bool(T[0] > _BEYOND * trace.span)
+    longest = float(T[0])
+    if fit.structure.rungs == (1, 0) and fit.linear[0] != 0:
+        longest = max(longest, abs(float(fit.columns.chart.scale(fit.theta[None])[0] * fit.linear[1] / fit.linear[0])))
+    return longest > _BEYOND * trace.span

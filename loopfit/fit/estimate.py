@@ -13,13 +13,15 @@ from loopfit.fit.columns import Columns, Input
 from loopfit.fit.figures_of import figures_of, quantile_of_f
 from loopfit.fit.samples import BINS_AT_LEAST, gather, is_even
 from loopfit.fit.separable import Minimum, minimise, solve_linear
-from loopfit.fit.start import scan
+from loopfit.fit.start import main_frequency, scan
 from loopfit.fit.surface import Surface, walk
 from loopfit.model.chart import LAGS, SWING, Chart
 
 _COARSE_BINS = 60
+_BINS_PER_CYCLE = 8
 _BIN_SHARE = 0.15  # of 1 / omega_n
 _LIGHT_DAMPING = 0.1
+_EXACT = 1e-12  # share of the squares left over that is rounding
 _FIRST_ORDER_R = 0.01  # below this the bins follow T, not omega_n
 
 
@@ -93,8 +95,10 @@ def fit_trace(trace: Trace, structure: Structure, *, noise_floor: float = 0.0) -
     """
     even = is_even(trace.time)
     free = np.array([True, not structure.first_order, trace.input is not None])
-    coarse = _columns(trace, structure, LAGS, math.inf, even, _COARSE_BINS)
-    starts = scan(coarse, trace.span, release=trace.input is None)
+    main = main_frequency(trace.time, trace.values)
+    cycles = 0.0 if main is None else main * (trace.time[-1] - trace.time[0]) / (2.0 * math.pi)
+    coarse = _columns(trace, structure, LAGS, math.inf, even, max(_COARSE_BINS, int(_BINS_PER_CYCLE * cycles)))
+    starts = scan(coarse, trace.span, main, release=trace.input is None)
     if structure.first_order:
         starts[:, 1] = LAGS.lowest[1]
     found = _search(coarse, starts, free, thin=True, tolerance=1e-3, rounds=30)
@@ -125,6 +129,7 @@ def _finish(
     degrees = max(n - int(free.sum()) - solved.linear.shape[1], 1)
     sse = float(solved.sse[0])
     scale = float(np.max(np.abs(columns.target))) if n else 0.0
+    settled = settled or sse <= _EXACT * float(columns.target @ columns.target)
     variance = max(sse / degrees, noise_floor**2, (1e-13 * scale) ** 2, 1e-300)
     colour = _neighbour_correlation(solved.residual[0])
     inflation = 1.0

@@ -67,7 +67,7 @@ def figures_of(columns: Columns, points: Points, band: float) -> dict[str, Array
         "damping_ratio": zeta,
         "natural_frequency_rad_s": frequency,
         "damped_frequency_rad_s": damped,
-        "damped_period_s": 2.0 * np.pi / damped,
+        "damped_period_s": 2.0 * np.pi / np.where(damped > 0, damped, np.nan),
         "dead_time_s": dead,
         "slow_time_constant_s": T * 0.5 * (1.0 + root),
         "fast_time_constant_s": 2.0 * T * r / (1.0 + root),
@@ -76,7 +76,7 @@ def figures_of(columns: Columns, points: Points, band: float) -> dict[str, Array
     growing = zeta <= 0
     decay = np.where(growing, np.nan, unit_step.decay_ratio(r))
     if columns.input is None:
-        ratio = np.divide(points.linear[:, 1], points.linear[:, 0])
+        ratio = _push(points)
         settle = T * rest.release_settling_time(r, band, ratio)
         out |= {
             "decay_ratio": decay,
@@ -88,7 +88,7 @@ def figures_of(columns: Columns, points: Points, band: float) -> dict[str, Array
     out["gain"] = points.linear[:, columns.rungs.index(1)] if 1 in columns.rungs else points.linear[:, 0]
     kappa: Array | float = 0.0
     if columns.rungs == (1, 0):
-        kappa = np.divide(points.linear[:, 1], points.linear[:, 0])
+        kappa = _push(points)
         out["zero_s"] = kappa * (T if chart.by_lags else 1.0 / frequency)
         kappa = out["zero_s"] / T
     if 1 not in columns.rungs:
@@ -102,6 +102,14 @@ def figures_of(columns: Columns, points: Points, band: float) -> dict[str, Array
         "decay_ratio": decay,
     }
     return out
+
+
+def _push(points: Points) -> Array:
+    """Return the push of a release over its displacement, within what the figures can hold."""
+    displacement = points.linear[:, 0]
+    tiny = np.where(np.abs(displacement) < 1e-200, 1e-200, displacement)
+    ratio: Array = np.clip(np.clip(points.linear[:, 1], -1e90, 1e90) / tiny, -1e12, 1e12)
+    return ratio
 
 
 def quantile_of_f(confidence: float, degrees: int) -> float:
@@ -120,7 +128,7 @@ def finite_ends(values: Array) -> tuple[float, float]:
 def rest_crossings(columns: Columns, points: Points, band: float) -> Quantity | None:
     """Return how often a release crosses its rest value by a swing larger than the band."""
     _, r = columns.chart.lags(points.theta)
-    ratio = np.divide(points.linear[:, 1], points.linear[:, 0])
+    ratio = _push(points)
     counts = rest.release_crossings(r, ratio, band)
     low, high = finite_ends(counts)
     if math.isnan(float(counts[0])):

@@ -93,7 +93,7 @@ def gather(
     span = float(time[-1] - time[0])
     bins = min(max(span / width, fewest), _BINS_AT_MOST)
     per_bin = int(n / bins)
-    few = n <= (_POINTS_AT_MOST if even else _UNEVEN_POINTS_AT_MOST) and fewest >= BINS_AT_LEAST
+    few = n <= (_POINTS_AT_MOST if even else _UNEVEN_POINTS_AT_MOST) and fewest == BINS_AT_LEAST
     if few or per_bin < 2:
         return rows_as_samples(time, values)
     if even:

@@ -51,7 +51,7 @@ def solve_linear(columns: Array, target: Array) -> Solved:
     """
     basis, triangle = np.linalg.qr(np.swapaxes(columns, 1, 2))
     diagonal = np.abs(np.diagonal(triangle, axis1=1, axis2=2))
-    lost = diagonal <= 1e-13 * np.max(diagonal, axis=1, keepdims=True)
+    lost = diagonal <= 1e-13 * np.linalg.norm(triangle, axis=1)  # each against its own length: units do not matter
     if lost.any():
         basis = np.where(lost[:, None, :], 0.0, basis)
         triangle = np.where(lost[:, None, :], 0.0, triangle)
@@ -125,7 +125,7 @@ def minimise(
         step = np.linalg.solve(lifted, gradient[:, :, None])[:, :, 0]
         if caps is not None:
             limit = caps(theta)
-            step = step * np.minimum(1.0, np.min(limit / np.maximum(np.abs(step), _TINY), axis=1))[:, None]
+            step = step / np.maximum(1.0, np.max(np.abs(step) / limit, axis=1))[:, None]
         trial = np.maximum(theta + step, lowest)
         step = trial - theta
         promised = 2.0 * np.einsum("bp,bp->b", step, gradient) - np.einsum("bp,bpq,bq->b", step, normal, step)

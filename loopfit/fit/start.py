@@ -14,9 +14,10 @@ _SLOWNESS = np.geomspace(0.006, 0.5, 11)  # 1 / omega_n as a share of the span a
 _DEAD_TIMES = (0.0, 0.8, 2.5)  # in units of 1 / omega_n
 _KEPT = 6
 _APART = 0.6
+_PERIODOGRAM_ROWS = 4096
 
 
-def scan(columns: Columns, span: float, *, release: bool) -> Array:
+def scan(columns: Columns, span: float, main: float | None, *, release: bool) -> Array:
     """Return the best starts (B, 3) that differ from each other, in the columns' chart.
 
     Parameters
@@ -25,11 +26,12 @@ def scan(columns: Columns, span: float, *, release: bool) -> Array:
         The model on thinned samples.
     span : float
         Time from the step to the end of the record, s.
+    main : float or None
+        The record's main frequency, rad/s.
     release : bool
         Whether there is no input, and so no dead time.
     """
     slow = span * _SLOWNESS
-    main = main_frequency(columns)
     if main is not None:
         near = np.array([0.85, 0.93, 1.0, 1.08, 1.18]) / main
         slow = np.concatenate([slow, near])
@@ -43,17 +45,20 @@ def scan(columns: Columns, span: float, *, release: bool) -> Array:
     return _apart(theta, sse, span)
 
 
-def main_frequency(columns: Columns) -> float | None:
-    """Return the angular frequency at the peak of the periodogram of the thinned record, rad/s.
+def main_frequency(time: Array, values: Array) -> float | None:
+    """Return the angular frequency at the peak of the periodogram of a record, rad/s.
 
     Long ringing has a narrow valley in frequency that a coarse grid can miss. None when the peak lies
     at the lowest frequencies, where the grid is fine enough.
+
+    Parameters
+    ----------
+    time, values : (n,) arrays
+        Rising times, s; measurement.
     """
-    samples = columns.samples
-    values = samples.values
-    n = values.size
-    even = np.linspace(samples.centres[0], samples.centres[-1], n)
-    trace = np.interp(even, samples.centres, values)
+    n = min(time.size, _PERIODOGRAM_ROWS)
+    even = np.linspace(time[0], time[-1], n)
+    trace = np.interp(even, time, values)
     ramp = np.linspace(-1.0, 1.0, n)
     trace = trace - trace.mean()
     trace = trace - ramp * (trace @ ramp) / (ramp @ ramp)

@@ -219,6 +219,8 @@ def _record(
 
 
 def _one_array(role: str, values: ArrayLike) -> Array:
+    if np.iscomplexobj(values):
+        raise RecordError("arrays", f"the {role} holds complex numbers; give real ones")
     try:
         array: Array = np.asarray(values, dtype=np.float64)
     except (TypeError, ValueError):

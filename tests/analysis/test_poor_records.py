@@ -86,11 +86,7 @@ def test_wrong_use_is_named(name: str) -> None:
     assert "\n" not in str(caught.value)
 
 
-# seeds on which a warning of numpy escapes
-WARNS = pytest.mark.xfail(strict=True, raises=RuntimeWarning, reason="a division by zero or an overflow is not caught")
-
-
-@pytest.mark.parametrize("seed", [0, 1, pytest.param(2, marks=WARNS), 3, 4, 5, pytest.param(6, marks=WARNS), 7])
+@pytest.mark.parametrize("seed", range(8))
 def test_noise_alone_gives_no_model(seed: int) -> None:
     noise = np.random.default_rng(seed).standard_normal(ROWS)
     for arguments in ({"time": TIME, "measurement": noise, "output": OUTPUT}, {"time": TIME, "measurement": noise}):
@@ -134,12 +130,9 @@ def test_step_that_is_back_in_the_second_row() -> None:
 
 
 UNITS = [1e-12, 1e-6, 1e6, 1e12]
-EXTREME = pytest.mark.xfail(strict=True, reason="squares overflow, or a column counts as empty beside another")
 
 
-@pytest.mark.parametrize(
-    "unit", [*UNITS, *(pytest.param(unit, marks=EXTREME) for unit in (1e-300, 1e-30, 1e30, 1e160, 1e300))]
-)
+@pytest.mark.parametrize("unit", [*UNITS, 1e-300, 1e-30, 1e30, 1e160, 1e300])
 def test_output_in_any_unit(unit: float) -> None:
     """The unit of the output changes nothing but the gain; else the record is refused in one line."""
     plain = loopfit.analyze(**GOOD).model
@@ -157,9 +150,7 @@ def test_output_in_any_unit(unit: float) -> None:
             assert getattr(found, end) == pytest.approx(getattr(wanted, end), rel=0, abs=1e-3 * width)
 
 
-@pytest.mark.parametrize(
-    "unit", [*UNITS, 1e-30, *(pytest.param(unit, marks=EXTREME) for unit in (1e-300, 1e-160, 1e30, 1e160, 1e300))]
-)
+@pytest.mark.parametrize("unit", [*UNITS, 1e-30, 1e-300, 1e-160, 1e30, 1e160, 1e300])
 def test_measurement_in_any_unit(unit: float) -> None:
     plain = loopfit.analyze(**GOOD).model
     assert plain is not None
@@ -174,9 +165,7 @@ def test_measurement_in_any_unit(unit: float) -> None:
         assert getattr(model.damping_ratio, end) == pytest.approx(wanted, rel=0, abs=1e-3 * width)
 
 
-@pytest.mark.parametrize(
-    "unit", [1e-12, 1e-6, 1e6, *(pytest.param(unit, marks=EXTREME) for unit in (1e-300, 1e-30, 1e30, 1e300))]
-)
+@pytest.mark.parametrize("unit", [1e-12, 1e-6, 1e6, 1e-300, 1e-30, 1e30, 1e300])
 def test_time_in_any_unit(unit: float) -> None:
     plain = loopfit.analyze(**GOOD).model
     assert plain is not None
@@ -191,7 +180,6 @@ def test_time_in_any_unit(unit: float) -> None:
         assert getattr(model.damping_ratio, end) == pytest.approx(wanted, rel=0, abs=1e-3 * width)
 
 
-@pytest.mark.xfail(strict=True, raises=AssertionError, reason="60 coarse bins cannot show 40 swings")
 def test_long_ringing_is_found() -> None:
     """40 swings in the record, 6 to 50 rows each, noise 0.1 %; zeta 0.02 (0.5 % was the widest interval elsewhere)."""
     found = []
@@ -206,7 +194,6 @@ def test_long_ringing_is_found() -> None:
     assert found == pytest.approx([0.02] * len(found), rel=0.005)
 
 
-@pytest.mark.xfail(strict=True, raises=AssertionError, reason="walkers of the gain are held back by flat directions")
 def test_gain_of_pure_dead_time_has_an_honest_interval() -> None:
     """Mean of the rows after against the rows before, noise 0.01: the gain is known to 1.96 x 0.01 sqrt(1/n + 1/m)."""
     delayed = np.where(np.arange(ROWS) < STEP_ROW + 5, 0.0, 1.0)

@@ -232,7 +232,6 @@ def test_text_of_a_refused_record(silent: Path) -> None:
     refused(run(silent), "silent.csv")
 
 
-@pytest.mark.xfail(strict=True, reason="numpy's warnings reach standard error")
 def test_one_line_in_a_process_of_its_own(tmp_path: Path) -> None:
     """As a person runs it: warnings of libraries would show here."""
     noise = np.random.default_rng(2).standard_normal(200)

@@ -1,0 +1,139 @@
+"""Where each walker aims: the gradient of its own figure."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from loopfit.core.arrays import Array
+from loopfit.figures import unit_step
+from loopfit.fit.columns import Columns
+from loopfit.fit.separable import solve_linear
+
+_NUDGE = 1e-3
+
+
+class Walkers:
+    """Pairs of walkers, one pair a figure, and the gradients they follow."""
+
+    def __init__(self, columns: Columns, theta: Array, free: np.ndarray, band: float) -> None:
+        self.columns, self.free, self.band = columns, free, band
+        _, r = columns.chart.lags(theta[None])
+        driven = columns.input is not None and 1 in columns.rungs
+        names = ["damping", "frequency"] if free[1] else ["frequency"]
+        names += ["gain", "dead", "rise", "delay", "settle", "envelope", "lag and dead"] if driven else ["envelope"]
+        if columns.input is not None and not driven:
+            names += ["gain", "dead", "lag and dead"]
+        if columns.rungs == (1, 0):
+            names += ["zero"]
+        if r[0] > 0.26:
+            names += ["peak", "damped"] if free[2] else ["damped"]
+        elif r[0] < 0.24 and free[1]:
+            names += ["slow", "fast"]
+        self.names = names
+        self.count = 2 * len(names)
+        self.sign = np.tile([1.0, -1.0], len(names))
+        self.linear_count = columns.moving_count + columns.fixed.shape[0]
+        self.held = np.zeros(self.count, dtype=bool)  # gain walkers keep the gain they have walked to
+        self.held_column = 0
+        if "gain" in names:
+            self.held[2 * names.index("gain") :][:2] = True
+
+    def resolve(self, matrix: Array, linear: Array) -> tuple[Array, Array, Array]:
+        """Return linear parameters, residuals and sums of squares, each walker's own constraint kept."""
+        solved = solve_linear(matrix, self.columns.target)
+        if not self.held.any():
+            return solved.linear, solved.residual, solved.sse
+        rows = np.flatnonzero(self.held)
+        k = self.held_column
+        inverse = np.linalg.inv(solved.triangle[rows])
+        covariance = inverse @ np.swapaxes(inverse, 1, 2)
+        shift = (linear[rows, k] - solved.linear[rows, k]) / covariance[:, k, k]
+        out, residual, sse = solved.linear.copy(), solved.residual.copy(), solved.sse.copy()
+        out[rows] += covariance[:, :, k] * shift[:, None]
+        residual[rows] = self.columns.target - (out[rows, None, :] @ matrix[rows])[:, 0, :]
+        sse[rows] = np.einsum("bn,bn->b", residual[rows], residual[rows])
+        return out, residual, sse
+
+    def aims(self, theta: Array, linear: Array) -> Array:
+        """Return the gradient (W, 3 + q) of each walker's figure, signed."""
+        chart = self.columns.chart
+        out = np.zeros((self.count, 3 + self.linear_count))
+        T, r = chart.lags(theta)
+        by_r, T_by = self._conversions(theta, r)
+        rho = _UnitTimes(r, self.names, self.band)
+        for i, name in enumerate(self.names):
+            rows = slice(2 * i, 2 * i + 2)
+            if name == "damping":
+                out[rows, 1] = -1.0 if chart.by_lags else 1.0
+            elif name == "frequency":
+                out[rows, 0] = -1.0 if chart.by_lags else 1.0
+                out[rows, 1] = -0.5 * by_r[rows] / r[rows] if chart.by_lags else 0.0
+            elif name == "gain":
+                out[rows, 3 + self.held_column] = 1.0
+            elif name == "dead":
+                out[rows, 2] = 1.0
+            elif name == "zero":
+                scale = chart.scale(theta[rows])
+                out[rows, 4] = scale / linear[rows, 0]
+                out[rows, 3] = -scale * linear[rows, 1] / linear[rows, 0] ** 2
+                out[rows, 0] = chart.scale_sign * scale * linear[rows, 1] / linear[rows, 0]
+            else:
+                value, slope = rho.of(name, rows)
+                # a time T rho(r) (+ dead time): gradient by the product rule
+                out[rows, 0] = T[rows] * value * (1.0 if chart.by_lags else -1.0)
+                out[rows, 1] = T[rows] * (slope * by_r[rows] + value * T_by[rows])
+                out[rows, 2] = 0.0 if name in ("rise", "damped", "slow", "fast") else 1.0
+        out[:, :3] *= self.free
+        signed: Array = out * self.sign[:, None]
+        return signed
+
+    def _conversions(self, theta: Array, r: Array) -> tuple[Array, Array]:
+        """Return dr and dlog T in the second coordinate."""
+        chart = self.columns.chart
+        if chart.by_lags:
+            return chart.shape_slope(r), np.zeros_like(r)
+        zeta = np.maximum(theta[:, 1], 1e-4)
+        return -0.5 / zeta**3, 1.0 / zeta
+
+
+class _UnitTimes:
+    """Times in units of T as functions of r, with slopes by small differences, for the walkers' aims."""
+
+    def __init__(self, r: Array, names: list[str], band: float) -> None:
+        self.band = band
+        nudges = 1.0 + _NUDGE * np.array([-1.0, 0.0, 1.0])[:, None]
+        self.spread = np.maximum(r, 1e-5)[None, :] * nudges
+        levels = {"rise": (0.1, 0.9), "delay": (0.5,), "settle": (1.0 - band,)}
+        wanted = [(i, level) for i, name in enumerate(names) for level in levels.get(name, ())]
+        if wanted:  # all crossings in one call
+            pairs = np.stack([self.spread[:, 2 * i : 2 * i + 2] for i, _ in wanted])
+            times = unit_step.crossing_time(pairs, np.array([level for _, level in wanted])[:, None, None])
+            self.crossings = {(names[i], level): time for (i, level), time in zip(wanted, times, strict=True)}
+
+    def of(self, name: str, rows: slice) -> tuple[Array, Array]:
+        """Return value and slope in r for the walkers in these rows."""
+        r = self.spread[:, rows]
+        low, middle, high = self._value(name, r)
+        return middle, (high - low) / (r[2] - r[0])
+
+    def _value(self, name: str, r: Array) -> Array:
+        root = np.sqrt(np.maximum(1.0 - 4.0 * r, 1e-6))
+        value: Array
+        match name:
+            case "rise":
+                value = self.crossings[name, 0.9] - self.crossings[name, 0.1]
+            case "delay":
+                value = self.crossings[name, 0.5]
+            case "settle":
+                value = self.crossings[name, 1.0 - self.band]
+            case "envelope":
+                value = 2.0 * r * np.log(1.0 / self.band)
+            case "peak" | "damped":
+                value = 2.0 * np.pi * r / np.sqrt(np.maximum(4.0 * r - 1.0, 1e-3))
+            case "slow":
+                value = 0.5 * (1.0 + root)
+            case "fast":
+                value = 0.5 * (1.0 - root)
+            case _:  # lag and dead time together
+                value = np.ones_like(r)
+        return value
