@@ -7,6 +7,7 @@ import numpy as np
 from loopfit.core.arrays import Array
 
 _FLAT = 1e-9
+_FELT = 1e-200
 _CAPS = (0.8, 1.2)
 
 
@@ -56,14 +57,15 @@ def _step_to_surface(
 ) -> Array:
     """Solve for the extreme of a linear figure on a quadratic surface, some coordinates held at a given move."""
     size = b.shape[1]
-    kept = ~held
+    stiffness = np.diagonal(H, axis1=1, axis2=2)
+    kept = ~held & (stiffness > _FELT)  # a column that vanished has no say
     pull = b - (H @ move[:, :, None])[:, :, 0]
     b_free, c = np.where(kept, pull, 0.0), np.where(kept, aims, 0.0)
     pairs = kept[:, :, None] & kept[:, None, :]
     # scaled to a unit diagonal, so that the units of the parameters do not matter
-    scale = np.where(kept, 1.0 / np.sqrt(np.maximum(np.diagonal(H, axis1=1, axis2=2), 1e-300)), 1.0)
+    scale = np.where(kept, 1.0 / np.sqrt(np.maximum(stiffness, _FELT)), 1.0)
     inner = np.where(pairs, H * scale[:, :, None] * scale[:, None, :], 0.0)
-    inner = inner + np.where(held, 1.0, 1e-13)[:, :, None] * np.eye(size)
+    inner = inner + np.where(kept, 1e-13, 1.0)[:, :, None] * np.eye(size)
     both = np.linalg.solve(inner, np.stack([b_free * scale, c * scale], axis=2)) * scale[:, :, None]
     to_bottom, along = both[:, :, 0], both[:, :, 1]
     bottom = rise - 2.0 * np.einsum("bp,bp->b", b, move) + np.einsum("bp,bp->b", move, b - pull)
