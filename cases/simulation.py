@@ -52,9 +52,7 @@ class Controller:
         """Return the integral part (%) that holds `output` with measurement and setpoint at `level`."""
         return output - self.gain * (self.setpoint_weight - 1) * level
 
-    def scan(
-        self, setpoint: float, measurement: float, integral: float, scan_s: float
-    ) -> tuple[float, float]:
+    def scan(self, setpoint: float, measurement: float, integral: float, scan_s: float) -> tuple[float, float]:
         """Return the output (%) and the new integral part (%)."""
         more = integral + self.gain * (setpoint - measurement) * scan_s / self.integral_time_s
         wanted = self.gain * (self.setpoint_weight * setpoint - measurement) + more
