@@ -7,13 +7,14 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from loopfit.analysis.analyze import analyze
+    from loopfit.analysis.interchange import to_control
     from loopfit.analysis.result import Analysis
     from loopfit.core.errors import LoopfitError, RecordError, UsageError
     from loopfit.core.finding import Finding
     from loopfit.core.quantity import Quantity
 
 __version__ = "0.1.0"
-__all__ = ["Analysis", "Finding", "LoopfitError", "Quantity", "RecordError", "UsageError", "analyze"]
+__all__ = ["Analysis", "Finding", "LoopfitError", "Quantity", "RecordError", "UsageError", "analyze", "to_control"]
 
 _HOMES = {
     "Analysis": "loopfit.analysis.result",
@@ -23,6 +24,7 @@ _HOMES = {
     "RecordError": "loopfit.core.errors",
     "UsageError": "loopfit.core.errors",
     "analyze": "loopfit.analysis.analyze",
+    "to_control": "loopfit.analysis.interchange",
 }
 
 

@@ -13,10 +13,11 @@ from numpy.typing import ArrayLike
 from loopfit.analysis.assess import assess
 from loopfit.analysis.circumstances import about_rows, around_the_step, other_inputs, output_limits, standing_offset
 from loopfit.analysis.figures import model_of, response_of
+from loopfit.analysis.prepared import StatedStep
 from loopfit.analysis.result import Analysis, ObservedFigures, StepFigures, StepUsed
 from loopfit.analysis.several import disagreements, of_each
 from loopfit.analysis.swinging import about_swings
-from loopfit.analysis.trace import StatedStep, prepare
+from loopfit.analysis.trace import prepare
 from loopfit.core.errors import UsageError
 from loopfit.core.finding import Finding
 from loopfit.core.quantity import Quantity

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, fields
-from typing import TYPE_CHECKING, Any, Literal
+from typing import Any, Literal
 
 from loopfit.core.finding import Finding
 from loopfit.core.plain import plain, to_json
@@ -12,9 +12,6 @@ from loopfit.fit.curve import FittedCurve, curve_of
 from loopfit.fit.estimate import Fit
 from loopfit.fit.figures_of import Points
 from loopfit.record.record import Record
-
-if TYPE_CHECKING:
-    from control import TransferFunction
 
 Kind = Literal["second_order", "first_order", "second_order_zero", "integrating", "dead_time"]
 
@@ -194,12 +191,6 @@ class Analysis:
         }
         out: dict[str, Any] = plain(document)
         return out
-
-    def to_control(self, *, pade_order: int | None = None) -> TransferFunction:
-        """Return the model as a python-control transfer function; see `loopfit.analysis.interchange`."""
-        from loopfit.analysis.interchange import to_control
-
-        return to_control(self, pade_order=pade_order)
 
     def to_json(self) -> str:
         """Return the JSON document."""

@@ -2,54 +2,24 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-
 import numpy as np
 
+from loopfit.analysis.prepared import AFTER_AT_LEAST, Prepared, StatedStep
 from loopfit.analysis.result import StepUsed
+from loopfit.analysis.stepless import release, stated_step
 from loopfit.core.arrays import Array
-from loopfit.core.errors import RecordError, UsageError
+from loopfit.core.errors import RecordError
 from loopfit.core.finding import Finding
-from loopfit.figures.swings import find_swings
 from loopfit.fit.columns import Input
 from loopfit.fit.estimate import Trace
 from loopfit.record.record import Record
 from loopfit.step.detect import Step, Stepped, StepsFound, find_steps
-from loopfit.step.noise import noise_rms
-from loopfit.step.release import release_row
 
 _CHANGES_AT_MOST = 200
-_AFTER_AT_LEAST = 5
-_SWINGS = 3
 _SPAN_S = (1e-9, 1e12)
 _LARGEST = 1e30
 _BEFORE_AT_LEAST = 10
 _BEFORE_SHARE = 0.15
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class StatedStep:
-    """A step that the user states: instant, s on the file's clock, and levels."""
-
-    at_s: float
-    from_: float
-    to: float
-
-
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class Prepared:
-    """What the estimator gets, and what is known about the step.
-
-    `held_before`: a record without a step begins with the measurement at rest. `separate`: where several steps
-    are taken together, each one with the trace of its own.
-    """
-
-    trace: Trace
-    step: StepUsed | None
-    steps: tuple[StepUsed, ...]
-    findings: tuple[Finding, ...]
-    held_before: bool = False
-    separate: tuple[tuple[StepUsed, Trace], ...] = ()
 
 
 def prepare(record: Record, *, number: int | None, stated: StatedStep | None) -> Prepared:
@@ -78,7 +48,7 @@ def prepare(record: Record, *, number: int | None, stated: StatedStep | None) ->
             column=record.measurement.name,
         )
     if stated is not None:
-        return _stated(record, stated)
+        return stated_step(record, stated)
     found, other = _stepped(record)
     if found is None or not found.steps:
         if number is not None:
@@ -89,7 +59,7 @@ def prepare(record: Record, *, number: int | None, stated: StatedStep | None) ->
                 "the output moves all the time and no setpoint was recorded, so no step can be told; "
                 "name the setpoint column with --setpoint, or state the step with --step-at, --step-from and --step-to",
             )
-        return _release(record, other)
+        return release(record, column_stood_still=other)
     if number is None and len(found.steps) > 1:
         return _all_of(record, found)
     return _one_of(record, found, number or 1)
@@ -144,7 +114,7 @@ def _one_of(record: Record, found: StepsFound, number: int) -> Prepared:
         )
     step = found.steps[number - 1]
     begin, end = _rows_of(record, found, number)
-    if end - step.row < _AFTER_AT_LEAST:
+    if end - step.row < AFTER_AT_LEAST:
         raise RecordError(
             record.source,
             f"only {end - step.row} rows follow the step at {step.time_s:g} s; "
@@ -163,7 +133,7 @@ def _all_of(record: Record, found: StepsFound) -> Prepared:
     usable = []
     for number, step in enumerate(found.steps, start=1):
         begin, end = _rows_of(record, found, number)
-        if end - step.row >= _AFTER_AT_LEAST:
+        if end - step.row >= AFTER_AT_LEAST:
             usable.append((step, _between(record, found, step, begin, end)))
     if len(usable) < 2:
         number = found.steps.index(usable[0][0]) + 1 if usable else 1
@@ -232,7 +202,7 @@ def _about_steps(record: Record, found: StepsFound, number: int | None) -> tuple
             )
         )
     last = found.steps[-1]
-    if count > 1 and record.time.size - last.row < _AFTER_AT_LEAST:
+    if count > 1 and record.time.size - last.row < AFTER_AT_LEAST:
         findings.append(
             Finding(
                 code="step_at_end",
@@ -256,74 +226,3 @@ def _about_steps(record: Record, found: StepsFound, number: int | None) -> tuple
         if step.last_row > step.row
     ]
     return tuple(findings)
-
-
-def _stated(record: Record, stated: StatedStep) -> Prepared:
-    if stated.from_ == stated.to:
-        raise UsageError("--step-from and --step-to are the same: that is no step")
-    row = int(np.searchsorted(record.time, stated.at_s - 1e-9 * max(1.0, abs(stated.at_s))))
-    if record.time.size - row < _AFTER_AT_LEAST:
-        raise RecordError(
-            record.source,
-            f"fewer than {_AFTER_AT_LEAST} rows follow the stated step at {stated.at_s:g} s; "
-            f"the record runs from {record.time[0]:g} to {record.time[-1]:g} s",
-        )
-    y = record.measurement.values
-    tail = max(3, y.size // 20)
-    noise = noise_rms(y)
-    reaches = abs(float(np.mean(y[-tail:])) - stated.to) <= 0.02 * abs(stated.to - stated.from_) + 2.0 * noise
-    signal: Stepped = "setpoint" if reaches and record.output is None else "output"
-    step = StepUsed(signal=signal, time_s=stated.at_s, from_=stated.from_, to=stated.to)
-    trace = Trace(
-        time=record.time,
-        values=y,
-        begins=stated.at_s,
-        step_row=row,
-        input=Input(times=np.array([stated.at_s]), sizes=np.array([step.size])),
-    )
-    note = Finding(
-        code="stated_step",
-        severity="note",
-        text=f"The step was stated by the user and is taken as one of the {signal}; columns were not used for it.",
-    )
-    return Prepared(trace=trace, step=step, steps=(step,), findings=(note,))
-
-
-def _release(record: Record, column_stood_still: bool) -> Prepared:
-    y = record.measurement.values
-    row = release_row(y, noise_rms(y))
-    if y.size - row < 2 * _AFTER_AT_LEAST:
-        raise RecordError(
-            record.source,
-            "nothing moves in this record: no step in the setpoint or the output, "
-            "and the measurement stays where it is",
-        )
-    if column_stood_still and not _swings(record):
-        raise RecordError(
-            record.source,
-            "no step in the "
-            + (
-                "setpoint or the output"
-                if record.setpoint and record.output
-                else "setpoint"
-                if record.setpoint
-                else "output"
-            )
-            + "; state where it began with --step-at, --step-from and --step-to",
-        )
-    trace = Trace(time=record.time[row:], values=y[row:], input=None, begins=float(record.time[row]), step_row=0)
-    text = (
-        "No step in the columns: taken as a release that returns to rest"
-        if column_stood_still
-        else "No setpoint or output column: taken as a release that returns to rest"
-    )
-    text += f" from {record.time[row]:g} s on." if row else " from the first row on."
-    note = Finding(code="taken_as_release", severity="note", text=text)
-    return Prepared(trace=trace, step=None, steps=(), findings=(note,), held_before=row > 0)
-
-
-def _swings(record: Record) -> bool:
-    """Tell whether the measurement swings about its last level, as after a disturbance."""
-    y = record.measurement.values
-    rest = float(np.median(y[-max(5, y.size // 5) :]))
-    return find_swings(record.time, y - rest, noise_rms(y)).heights.size >= _SWINGS

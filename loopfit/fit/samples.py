@@ -111,27 +111,19 @@ def gather(
     if even:
         interval = span / (n - 1)
         nodes = np.append(time[0] + (starts - 0.5) * interval, time[-1] + 0.5 * interval)
-        return Samples(
-            nodes=nodes,
-            centres=centres,
-            values=means,
-            root_count=np.sqrt(count),
-            binned=True,
-            touching=True,
-            row_interval=interval,
-            rows=n,
-        )
-    # Unevenly spaced rows: the interval with the same mean time and the same spread of times.
-    spread = np.add.reduceat((time - np.repeat(centres, ends - starts)) ** 2, starts) / count
-    half = np.sqrt(3.0 * spread) + 1e-6 * span / n
-    nodes = np.concatenate([centres - half, centres + half])
+    else:
+        # unevenly spaced rows: the interval with the same mean time and the same spread of times
+        interval = 0.0
+        spread = np.add.reduceat((time - np.repeat(centres, ends - starts)) ** 2, starts) / count
+        half = np.sqrt(3.0 * spread) + 1e-6 * span / n
+        nodes = np.concatenate([centres - half, centres + half])
     return Samples(
         nodes=nodes,
         centres=centres,
         values=means,
         root_count=np.sqrt(count),
         binned=True,
-        touching=False,
-        row_interval=0.0,
+        touching=even,
+        row_interval=interval,
         rows=n,
     )

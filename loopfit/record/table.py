@@ -79,10 +79,7 @@ def table_from_rows(
             if len(row) < width and not any(numeric[len(row) :]):
                 row = row + [""] * (width - len(row))
             if len(row) != width:
-                is_text = (
-                    is_comment(row[0]) or sum(cell_kind(cell, layout.marks) in ("number", "stamp") for cell in row) < 1
-                )
-                (texts if is_text else ragged).append(line)
+                (texts if _is_text(row, wanted, layout) else ragged).append(line)
                 continue
         lines.append(line)
         cells.append(row)
@@ -132,6 +129,14 @@ def table_from_rows(
         set_aside=len(ragged) + ragged_tail,
         findings=tuple(findings),
     )
+
+
+def _is_text(row: list[str], wanted: Sequence[int], layout: Layout) -> bool:
+    """Return whether a row of another width is a line of text: a comment, no number in it, or a word for its time."""
+    begins = row[wanted[0]] if wanted and wanted[0] < len(row) else row[0]
+    if is_comment(row[0]) or (begins[:1].isalpha() and cell_kind(begins, layout.marks) == "text"):
+        return True
+    return all(cell_kind(cell, layout.marks) not in ("number", "stamp") for cell in row)
 
 
 def opening_findings(header: Header, layout: Layout, rows: int) -> list[Finding]:

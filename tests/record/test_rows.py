@@ -82,10 +82,13 @@ def test_last_line_without_a_break_is_kept_and_named(tmp_path: Path) -> None:
 
 
 def test_text_below_and_between(tmp_path: Path) -> None:
-    record = read_record(write(tmp_path, joined([*LINES[:20], "# pump started", *LINES[20:], "End", "Rows: 40"])))
+    body = joined([*LINES[:20], "# pump started", *LINES[20:], "End", "Rows: 40", "Rows,40"])
+    record = read_record(write(tmp_path, body))
     np.testing.assert_array_equal(record.time, TIME)
+    assert record.rows == ROWS
     assert "line 21" in finding(record, "text_between_rows")
-    assert "lines 43, 44" in finding(record, "footer")
+    assert "lines 43, 44, 45" in finding(record, "footer")
+    assert "ragged_rows" not in {found.code for found in record.findings}
 
 
 def test_repeated_header_with_the_clock_going_on(tmp_path: Path) -> None:
