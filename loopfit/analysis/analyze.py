@@ -161,7 +161,7 @@ def analyze_record(
     if model is not None:
         findings += around_the_step(trace, fit, figures, noise)
         findings += about_rows(trace, fit, noise)
-        findings += about_swings(trace, fit, noise, change_of(fit, trace))
+        findings += about_swings(trace, best.plain, noise, change_of(best.plain, trace))
         if prepared.step is not None:
             findings += other_inputs(record, trace, prepared.step)
             findings += output_limits(record, trace, prepared.step)

@@ -7,8 +7,9 @@ from dataclasses import dataclass
 from loopfit.analysis.judge import Figures, Verdict, judge
 from loopfit.core.finding import Finding
 from loopfit.fit.choose import change_of, choose, structured
-from loopfit.fit.estimate import Fit, Trace, fit_trace, quantities, refine, surface_of
+from loopfit.fit.estimate import Fit, Trace, fit_trace
 from loopfit.fit.figures_of import Points
+from loopfit.fit.intervals import quantities, refine, surface_of, whitened
 from loopfit.fit.set_aside import Rows, false_first_rows, outliers, without_rows
 from loopfit.step.limits import rows_at_limit
 
@@ -22,10 +23,12 @@ _WORTH_A_LOOK = 0.02  # of the change left unexplained
 class Assessment:
     """A fitted trace: its model, all models it allows, the figures with intervals, and what to think of them.
 
-    `trace` lacks the rows that were set aside; `aside` says which.
+    `plain` is the fit that takes the noise for white, by which the misfit is judged. `trace` lacks the rows that
+    were set aside; `aside` says which.
     """
 
     trace: Trace
+    plain: Fit
     fit: Fit
     points: Points
     figures: Figures
@@ -77,6 +80,8 @@ def assess(
         aside.append(_outliers(trace, wild))
         trace = without_rows(trace, wild)
         fit = choose(trace, noise, noise_floor=noise_floor)
+    plain = fit  # least squares explains most; what it leaves is judged, not what the coloured noise may swallow
+    fit = whitened(fit, trace, noise_floor=noise_floor)
     surface = surface_of(fit, confidence=confidence, band=band)
     for _ in range(_REFITS):  # a walker can meet a better model than the search did
         if surface.better is None:
@@ -84,8 +89,10 @@ def assess(
         fit = refine(fit, surface.better)
         surface = surface_of(fit, confidence=confidence, band=band)
     figures = quantities(fit, surface, band)
-    verdict = judge(trace, fit, figures, noise, pushed=pushed, against_setpoint=setpoint)
-    return Assessment(trace=trace, fit=fit, points=surface.points, figures=figures, verdict=verdict, aside=tuple(aside))
+    verdict = judge(trace, plain, figures, noise, pushed=pushed, against_setpoint=setpoint)
+    return Assessment(
+        trace=trace, plain=plain, fit=fit, points=surface.points, figures=figures, verdict=verdict, aside=tuple(aside)
+    )
 
 
 def _at_limit(trace: Trace, rows: Rows) -> Finding:

@@ -178,7 +178,7 @@ def _about_damping(trace: Trace, fit: Fit, figures: Figures, noise: float) -> li
 
 
 def _about_noise(fit: Fit, share: float) -> list[Finding]:
-    if fit.inflation <= 1.0 or fit.colour < _COLOURED:
+    if fit.colour < _COLOURED:
         return []
     if share > _STRUCTURE_SEEN and fit.colour > _SHAPED:
         return [
@@ -194,8 +194,8 @@ def _about_noise(fit: Fit, share: float) -> list[Finding]:
         Finding(
             code="coloured_noise",
             severity="note",
-            text=f"Neighbouring residuals are alike (correlation {fit.colour:.2f}); the intervals are widened "
-            f"{math.sqrt(fit.inflation):.1f} times for it.",
+            text=f"Neighbouring residuals are alike (correlation {fit.colour:.2f}): the noise is taken as coloured, "
+            "and the intervals allow for it.",
         )
     ]
 

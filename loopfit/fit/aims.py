@@ -45,7 +45,7 @@ class Walkers:
             return solved.linear, solved.residual, solved.sse
         rows = np.flatnonzero(self.held)
         k = self.held_column
-        inverse = np.linalg.inv(solved.triangle[rows])
+        inverse = np.clip(np.linalg.inv(solved.triangle[rows]), -1e100, 1e100)
         covariance = inverse @ np.swapaxes(inverse, 1, 2)
         shift = (linear[rows, k] - solved.linear[rows, k]) / covariance[:, k, k]
         out, residual, sse = solved.linear.copy(), solved.residual.copy(), solved.sse.copy()

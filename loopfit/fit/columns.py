@@ -13,6 +13,7 @@ from functools import cached_property
 import numpy as np
 
 from loopfit.core.arrays import Array
+from loopfit.fit.colour import Whitener
 from loopfit.fit.samples import Samples
 from loopfit.model.chart import Chart
 from loopfit.model.shape import ladder, ladder_by_shape
@@ -42,11 +43,13 @@ class Columns:
     rungs: tuple[int, ...]
     free_from: float | None = None
     drift: bool = False
+    whitener: Whitener | None = None
 
     @cached_property
     def target(self) -> Array:
-        """Measurement (n,) as weighed."""
-        return self.samples.values * self.samples.root_count
+        """Measurement (n,) as weighed (and whitened)."""
+        weighed = self.samples.values * self.samples.root_count
+        return weighed if self.whitener is None else self.whitener(weighed)
 
     @cached_property
     def fixed(self) -> Array:
@@ -79,10 +82,13 @@ class Columns:
         fixed = np.broadcast_to(self.fixed, (theta.shape[0], *self.fixed.shape))
         weight = self.samples.root_count
         columns = np.concatenate([*(block[0] * weight for block in blocks), fixed], axis=1)
+        if self.whitener is not None:
+            columns = self.whitener(columns)
         if not derivatives:
             return columns, columns[:, :0]
-        slopes = [block[1] for block in blocks]
-        return columns, (slopes[0] if len(slopes) == 1 else np.concatenate(slopes, axis=2)) * weight
+        parts = [block[1] for block in blocks]
+        slopes = (parts[0] if len(parts) == 1 else np.concatenate(parts, axis=2)) * weight
+        return columns, slopes if self.whitener is None else self.whitener(slopes)
 
     def _driven(self, theta: Array, scale: Array, shape: Array, derivatives: bool) -> tuple[Array, Array]:
         assert self.input is not None

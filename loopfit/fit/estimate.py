@@ -8,13 +8,11 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from loopfit.core.arrays import Array
-from loopfit.core.quantity import Quantity
+from loopfit.fit.colour import Whitener
 from loopfit.fit.columns import Columns, Input
-from loopfit.fit.figures_of import figures_of, quantile_of_f
 from loopfit.fit.samples import BINS_AT_LEAST, gather, is_even
-from loopfit.fit.separable import Minimum, minimise, solve_linear
+from loopfit.fit.separable import Flags, Minimum, minimise, solve_linear
 from loopfit.fit.start import main_frequency, scan
-from loopfit.fit.surface import Surface, walk
 from loopfit.model.chart import LAGS, SWING, Chart
 
 _COARSE_BINS = 60
@@ -67,8 +65,9 @@ class Trace:
 class Fit:
     """A fitted model: its columns, coordinates, linear parameters, and the noise left over.
 
-    `variance` is the noise power of one row; `colour` the correlation of neighbouring residuals;
-    `inflation` the factor by which colour widens the variance of slow shapes.
+    `sse` is the sum of squares of the rows as weighed; `variance` the noise power of one row (of the innovations,
+    where a `whitener` is given); `colour` the correlation of neighbouring residuals; `inflation` the factor by which
+    colour widens the variance of slow shapes where no whitener could be had.
     """
 
     structure: Structure
@@ -81,6 +80,22 @@ class Fit:
     colour: float
     inflation: float
     settled: bool
+    whitener: Whitener | None = None
+
+    @property
+    def working(self) -> Columns:
+        """The columns as the likelihood sees them: whitened."""
+        return self.columns if self.whitener is None else replace(self.columns, whitener=self.whitener)
+
+    @property
+    def free(self) -> Flags:
+        """Coordinates that are part of the model (3,)."""
+        return free_coordinates(self.structure, self.columns.input is not None)
+
+
+def free_coordinates(structure: Structure, driven: bool) -> Flags:
+    """Return which coordinates are part of a model (3,): scale, shape, dead time."""
+    return np.array([True, not structure.first_order, driven])
 
 
 def fit_trace(trace: Trace, structure: Structure, *, noise_floor: float = 0.0) -> Fit:
@@ -94,14 +109,12 @@ def fit_trace(trace: Trace, structure: Structure, *, noise_floor: float = 0.0) -
         Least noise of a row that the record's resolution allows, measurement units.
     """
     even = is_even(trace.time)
-    free = np.array([True, not structure.first_order, trace.input is not None])
-    main = main_frequency(trace.time, trace.values)
-    cycles = 0.0 if main is None else main * (trace.time[-1] - trace.time[0]) / (2.0 * math.pi)
-    coarse = _columns(trace, structure, LAGS, math.inf, even, max(_COARSE_BINS, int(_BINS_PER_CYCLE * cycles)))
+    free = free_coordinates(structure, trace.input is not None)
+    coarse, main = coarse_columns(trace, structure)
     starts = scan(coarse, trace.span, main, release=trace.input is None)
     if structure.first_order:
         starts[:, 1] = LAGS.lowest[1]
-    found = _search(coarse, starts, free, thin=True, tolerance=1e-3, rounds=30)
+    found = search(coarse, starts, free, thin=True, tolerance=1e-3, rounds=30)
     order = np.argsort(found.sse)
     theta = found.theta[order[: 2 if found.sse.size > 1 else 1]]
     chart = LAGS
@@ -109,7 +122,7 @@ def fit_trace(trace: Trace, structure: Structure, *, noise_floor: float = 0.0) -
     for _ in range(3):
         width = _bin_width(chart, theta[:1])
         columns = _columns(trace, structure, chart, width, even)
-        found = _search(columns, theta, free, tolerance=1e-7, rounds=60)
+        found = search(columns, theta, free, tolerance=1e-7, rounds=60)
         best = int(np.argmin(found.sse))
         theta = found.theta[best : best + 1]
         if chart is LAGS and not structure.first_order and chart.damping(theta)[0] < _LIGHT_DAMPING:
@@ -121,8 +134,16 @@ def fit_trace(trace: Trace, structure: Structure, *, noise_floor: float = 0.0) -
     return _finish(columns, theta[0], structure, free, noise_floor, settled=bool(found.settled[best]))
 
 
+def coarse_columns(trace: Trace, structure: Structure) -> tuple[Columns, float | None]:
+    """Return the model on few bins, for the first search, and the record's main frequency, rad/s."""
+    main = main_frequency(trace.time, trace.values)
+    cycles = 0.0 if main is None else main * (trace.time[-1] - trace.time[0]) / (2.0 * math.pi)
+    bins = max(_COARSE_BINS, int(_BINS_PER_CYCLE * cycles))
+    return _columns(trace, structure, LAGS, math.inf, is_even(trace.time), bins), main
+
+
 def _finish(
-    columns: Columns, theta: Array, structure: Structure, free: np.ndarray, noise_floor: float, *, settled: bool
+    columns: Columns, theta: Array, structure: Structure, free: Flags, noise_floor: float, *, settled: bool
 ) -> Fit:
     solved = solve_linear(columns.evaluate(theta[None], derivatives=False)[0], columns.target)
     n = columns.target.size
@@ -148,60 +169,6 @@ def _finish(
         inflation=inflation,
         settled=settled,
     )
-
-
-def surface_of(fit: Fit, *, confidence: float, band: float) -> Surface:
-    """Return the likelihood-ratio surface of a fit at a confidence (a fraction)."""
-    free = np.array([True, not fit.structure.first_order, fit.columns.input is not None])
-    degrees = max(int(fit.degrees / fit.inflation), 4)
-    return walk(
-        fit.columns,
-        fit.theta,
-        free=free,
-        threshold=quantile_of_f(confidence, degrees),
-        variance=fit.variance * fit.inflation,
-        band=band,
-    )
-
-
-def refine(fit: Fit, better: Array) -> Fit:
-    """Return the fit restarted from a better point that a walker met, with its noise estimate kept."""
-    free = np.array([True, not fit.structure.first_order, fit.columns.input is not None])
-    found = _search(fit.columns, better[None], free, tolerance=1e-7, rounds=60)
-    if found.sse[0] >= fit.sse:
-        return fit
-    solved = solve_linear(fit.columns.evaluate(found.theta, derivatives=False)[0], fit.columns.target)
-    return replace(
-        fit,
-        theta=found.theta[0],
-        linear=solved.linear[0],
-        sse=float(found.sse[0]),
-        variance=min(fit.variance, max(float(found.sse[0]) / fit.degrees, 1e-300)),
-    )
-
-
-def quantities(fit: Fit, surface: Surface, band: float) -> dict[str, Quantity | None]:
-    """Return every figure with its interval; None where the figure does not exist at the optimum."""
-    table = figures_of(fit.columns, surface.points, band)
-    out: dict[str, Quantity | None] = {}
-    for name, values in table.items():
-        value = float(values[0])
-        if np.isnan(value):
-            out[name] = None
-            continue
-        there = values[~np.isnan(values)]
-        low, high = float(there.min()), float(there.max())
-        if there.size < values.size:  # the figure ceases to exist inside the surface
-            if name in ("peak_time_s", "damped_period_s"):
-                high = np.inf
-            elif name in ("damped_frequency_rad_s", "decay_ratio"):
-                low = 0.0
-        if name == "damping_ratio" and surface.open_damping:
-            high = np.inf
-        if name == "natural_frequency_rad_s" and surface.open_damping:
-            high = np.inf
-        out[name] = Quantity.spanning(value, low, high)
-    return out
 
 
 def _columns(
@@ -234,9 +201,10 @@ def _to_swing(theta: Array, trace: Trace) -> Array:
     return np.concatenate([start, flat])
 
 
-def _search(
-    columns: Columns, starts: Array, free: np.ndarray, *, thin: bool = False, tolerance: float, rounds: int
+def search(
+    columns: Columns, starts: Array, free: Flags, *, thin: bool = False, tolerance: float, rounds: int
 ) -> Minimum:
+    """Return where the starts lead, with steps as long as the chart allows."""
     chart = columns.chart
 
     def caps(theta: Array) -> Array:

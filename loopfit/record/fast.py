@@ -9,7 +9,7 @@ import numpy as np
 from loopfit.core.arrays import Array
 from loopfit.record.header import Header
 from loopfit.record.layout import Layout, cell_kind, split_line
-from loopfit.record.number import Marks, parse_number
+from loopfit.record.number import Marks, parse_number, thousands_in
 from loopfit.record.table import Column, Table, column_of, opening_findings, unclosed
 
 if TYPE_CHECKING:
@@ -114,7 +114,7 @@ def _column(place: int, series: pl.Series, header: Header, layout: Layout, numbe
 
 
 def _numbers(text: pl.Series, marks: Marks) -> Array | None:
-    """Return the numbers of a column of text, NaN where a cell is none; None when a cell carries a unit."""
+    """Return the numbers of a column of text, NaN where a cell is none; None when one has a unit or thousands."""
     import polars as pl
 
     plain = text
@@ -123,7 +123,7 @@ def _numbers(text: pl.Series, marks: Marks) -> Array | None:
     values = np.array(plain.cast(pl.Float64, strict=False).to_numpy())
     for place in np.flatnonzero(~np.isfinite(values)):
         parsed = parse_number(text[int(place)], marks)
-        if parsed is not None and parsed[1]:
+        if (parsed is not None and parsed[1]) or thousands_in(text[int(place)], marks.decimal):
             return None
         values[place] = np.nan if parsed is None or not np.isfinite(parsed[0]) else parsed[0]
     return values

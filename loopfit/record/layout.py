@@ -6,10 +6,10 @@ import csv
 import re
 from collections import Counter
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import pairwise
 
-from loopfit.record.number import Marks, is_bad_word, parse_number, thousands_suspected
+from loopfit.record.number import Marks, is_bad_word, parse_number, thousands_in, thousands_suspected
 
 _DELIMITERS = ("\t", ";", "|", ",", " ")  # in order of trust: a blank or a comma may also be part of a cell
 _MARKS = (
@@ -155,6 +155,20 @@ def numeric_columns(rows: Sequence[list[str]], layout: Layout) -> list[bool]:
         good = sum(kind in ("number", "stamp") for kind in kinds)
         numeric.append(2 * full >= len(kinds) and good >= 0.6 * full)
     return numeric
+
+
+def with_thousands(layout: Layout, rows: Sequence[Row], numeric: Sequence[bool]) -> Layout:
+    """Return the layout with the mark between thousands that only some rows need: 998.5, 1,002.5."""
+    if layout.marks.thousands:
+        return layout
+    wanted = [place for place, flag in enumerate(numeric) if flag]
+    for _, cells in rows:
+        for place in wanted:
+            if place < len(cells):
+                mark = thousands_in(cells[place], layout.marks.decimal)
+                if mark and not (mark == " " and layout.delimiter == " "):
+                    return replace(layout, marks=Marks(layout.marks.decimal, mark))
+    return layout
 
 
 def _settle(layout: Layout, split: Sequence[list[str]]) -> Layout:

@@ -105,6 +105,22 @@ def column_of_numbers(cells: Sequence[str], marks: Marks) -> tuple[Array, str | 
     return values, unit or None
 
 
+_BOTH_MARKS = {
+    decimal: re.compile(
+        rf"[+\-\u2212]?[1-9]\d{{0,2}}(?:([{others}])\d{{3}})(?:\1\d{{3}})*{re.escape(decimal)}\d+", re.ASCII
+    )
+    for decimal, others in ((".", ",' \u00a0\u202f\u2009"), (",", ".' \u00a0\u202f\u2009"))
+}
+
+
+def thousands_in(cell: str, decimal: str) -> str | None:
+    """Return the mark between thousands of a number that shows a decimal mark behind it, as in 1,002.5."""
+    if len(cell) < 7 or decimal not in cell:
+        return None
+    found = _BOTH_MARKS[decimal].fullmatch(cell)
+    return None if found is None else " " if found.group(1) in _BLANKS else found.group(1)
+
+
 def thousands_suspected(cells: Sequence[str], mark: str) -> bool:
     """Return whether every such mark in a column stands before exactly three digits, and some cells have none.
 

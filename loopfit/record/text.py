@@ -11,7 +11,7 @@ from loopfit.core.finding import Finding
 from loopfit.record.encoding import decode
 from loopfit.record.fast import table_by_columns
 from loopfit.record.header import Header, find_header, is_comment
-from loopfit.record.layout import Layout, Row, find_layout, numeric_columns, rows_of
+from loopfit.record.layout import Layout, Row, find_layout, numeric_columns, rows_of, with_thousands
 from loopfit.record.table import Table, table_from_rows
 from loopfit.record.wording import count_of
 
@@ -76,6 +76,7 @@ def _by_rows(source: str, text: str) -> Table:
             source, f"{len(lines)} rows of {layout.width} columns are too many; keep only the part with the step test"
         )
     rows = list(rows_of(lines, layout.delimiter))
+    layout = with_thousands(layout, rows, numeric)
     header = find_header(rows, layout, numeric, lines)
     _check_marks(source, header, layout, rows)
     return table_from_rows(source, rows, header, layout, numeric, closed=closed)

@@ -12,7 +12,7 @@ from dataclasses import replace
 from loopfit.core.errors import RecordError
 from loopfit.core.finding import Finding
 from loopfit.record.header import find_header
-from loopfit.record.layout import Row, layout_of_cells, numeric_columns
+from loopfit.record.layout import Row, layout_of_cells, numeric_columns, with_thousands
 from loopfit.record.table import Table, table_from_rows
 from loopfit.record.wording import names_text
 
@@ -69,6 +69,7 @@ def _table(source: str, rows: Sequence[Row]) -> Table:
             source, "no rows of numbers found; a recording has one row per time, with a column for each signal"
         )
     numeric = numeric_columns(sample, layout)
+    layout = with_thousands(layout, rows, numeric)
     header = find_header(rows, layout, numeric, ())
     return table_from_rows(source, rows, header, layout, numeric)
 

@@ -155,6 +155,18 @@ def test_marks_between_thousands(delimiter: str, first: str, second: str, values
     assert record.time.tolist() == [i * 0.5 for i in range(20)]
 
 
+def test_marks_between_thousands_in_a_few_rows_only(tmp_path: Path) -> None:
+    values = [998.0 + 4.5 * (i in (71, 72)) for i in range(400)]
+    for form, delimiter, mark in (("{:,.2f}", "\t", ","), ('"{:,.2f}"', ",", ","), ("{:,.2f}", ";", "'")):
+        cells = [form.format(value).replace(",", mark) for value in values]
+        lines = "".join(f"{i}{delimiter}{cell}{delimiter}1000.5\n" for i, cell in enumerate(cells))
+        record = read_record(write(tmp_path, delimiter.join(("Time (s)", "PV", "SP")) + "\n" + lines))
+        assert record.measurement.values.tolist() == values
+    lines = "".join(f"{i}\t{'12,345' if i == 50 else 12.345}\t1\n" for i in range(400))
+    record = read_record(write(tmp_path, "Time (s)\tPV\tSP\n" + lines))  # one wrong decimal mark is no thousand
+    assert len(record.time) == 399
+
+
 def test_three_decimals_are_not_thousands(tmp_path: Path) -> None:
     lines = "".join(f"{i};1.{i:03d};{'0' if i < 5 else '1.250'}\n" for i in range(20))
     record = read_record(write(tmp_path, "Time (s);PV;SP\n" + lines))

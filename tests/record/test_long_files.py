@@ -62,6 +62,7 @@ CASES: dict[str, tuple[Callable[[], list[str]], bool]] = {
     "text line": (lambda: [*lines()[:20000], "a,b,c", *lines()[20000:]], False),
     "header again": (lambda: [*lines()[:20000], lines()[0], *lines()[20000:]], False),
     "one number in quotes": (lambda: edited(20000, '199.99,"5.0",40.0'), True),
+    "thousands in one row": (lambda: edited(20000, '199.99,"1,005.0",40.0'), False),
     "unit in a cell": (lambda: edited(20000, "199.99,5.0 V,40.0"), False),
     "blanks": (lambda: lines("  "), False),
 }
