@@ -18,7 +18,7 @@ from loopfit.analysis.result import Analysis, ObservedFigures, StepFigures, Step
 from loopfit.analysis.several import disagreements, of_each
 from loopfit.analysis.swinging import about_swings
 from loopfit.analysis.trace import prepare
-from loopfit.core.errors import UsageError
+from loopfit.core.errors import RecordError, UsageError
 from loopfit.core.finding import Finding
 from loopfit.core.quantity import Quantity
 from loopfit.figures.observed import observe
@@ -88,11 +88,20 @@ def analyze(
     if step is not None and step < 1:
         raise UsageError(f"steps are counted from 1, not {step}")
     stated = _stated(step_at_s, step_from, step_to)
+    if step is not None and stated is not None:
+        raise UsageError("a stated step leaves no choice: give --step or --step-at, not both")
+    arrays = (time, measurement, setpoint, output)
     if source is not None:
-        if measurement is not None:
+        if any(array is not None for array in arrays):
             raise UsageError("give a file or arrays, not both")
+        if str(source).lower().endswith(".toml"):
+            raise RecordError(
+                str(source), "this is a case, not a record, and cases cannot be analysed yet; give the record"
+            )
         record = read_record(source, columns=columns, interval_s=interval_s, window_s=window_s)
     elif measurement is not None:
+        if columns:
+            raise UsageError("columns= is for a file; give each array its own argument")
         record = record_from_arrays(
             time=time,
             measurement=measurement,

@@ -7,11 +7,13 @@ from dataclasses import dataclass
 from loopfit.analysis.judge import Figures, Verdict, judge
 from loopfit.core.finding import Finding
 from loopfit.fit.choose import change_of, choose, structured
+from loopfit.fit.doubt import doubted_response
 from loopfit.fit.estimate import Fit, Trace, fit_trace
 from loopfit.fit.figures_of import Points
 from loopfit.fit.intervals import quantities, refine, surface_of, whitened
 from loopfit.fit.set_aside import Rows, false_first_rows, outliers, without_rows
 from loopfit.step.limits import rows_at_limit
+from loopfit.step.noise import resolution
 
 _REFITS = 3
 _ROWS_LEFT = 12
@@ -75,7 +77,7 @@ def assess(
             aside.append(_false_first(trace, rows))
             trace = without_rows(trace, rows)
             fit = fit_trace(trace, fit.structure, noise_floor=noise_floor)
-    wild = outliers(trace, fit)
+    wild = outliers(trace, fit, resolution(trace.values))
     if wild.size:
         aside.append(_outliers(trace, wild))
         trace = without_rows(trace, wild)
@@ -89,9 +91,23 @@ def assess(
         fit = refine(fit, surface.better)
         surface = surface_of(fit, confidence=confidence, band=band)
     figures = quantities(fit, surface, band)
+    doubted = doubted_response(plain, trace, figures, confidence=confidence, band=band)
+    if doubted is not None:
+        figures |= doubted
+        aside.append(_beyond_second_order())
     verdict = judge(trace, plain, figures, noise, pushed=pushed, against_setpoint=setpoint)
     return Assessment(
         trace=trace, plain=plain, fit=fit, points=surface.points, figures=figures, verdict=verdict, aside=tuple(aside)
+    )
+
+
+def _beyond_second_order() -> Finding:
+    return Finding(
+        code="beyond_second_order",
+        severity="note",
+        text="A model with a third lag and a zero explains the record clearly better than the second order: overshoot, rise, "
+        "delay, peak and settling time carry that doubt in their intervals; damping ratio and frequency are those of the "
+        "second-order equivalent.",
     )
 
 
@@ -114,7 +130,7 @@ def _false_first(trace: Trace, rows: Rows) -> Finding:
         code="false_first_rows",
         severity="warning",
         at_s=(float(trace.time[rows][0]), float(trace.time[rows][-1])),
-        text=f"The {which} after the step ({values}) do not belong to the response and were set aside: the first "
+        text=f"The {which} after the step ({values}) {'do' if rows.size > 1 else 'does'} not belong to the response, set aside: the first "
         "samples after a switch are often false, and a fit would take them for ringing.",
     )
 

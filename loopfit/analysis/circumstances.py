@@ -41,7 +41,7 @@ def around_the_step(trace: Trace, fit: Fit, figures: dict[str, Quantity | None],
                 ),
             )
         )
-    if fit.structure.rungs == (2,):
+    if fit.structure.rungs == (2,) and _held_away(trace):
         findings.append(
             Finding(
                 code="still_ramping",
@@ -68,6 +68,14 @@ def around_the_step(trace: Trace, fit: Fit, figures: dict[str, Quantity | None],
         text = f"The measurement has not settled when the record ends; {longer} to see it settle."
         findings.append(Finding(code="not_settled", severity="warning", at_s=(end, end), text=text))
     return findings
+
+
+def _held_away(trace: Trace) -> bool:
+    """Tell whether the input ends away from where it began: after a pulse an integrating plant stands still."""
+    if trace.input is None:
+        return False
+    level = np.cumsum(trace.input.sizes)
+    return bool(abs(level[-1]) > 0.02 * np.max(np.abs(level)))
 
 
 def _reached(fit: Fit, trace: Trace) -> float | None:
@@ -97,7 +105,8 @@ def about_rows(trace: Trace, fit: Fit, noise: float) -> list[Finding]:
     T, r = (float(value[0]) for value in fit.columns.chart.lags(fit.theta[None]))
     quickest = T * (math.sqrt(r) if r > 0.05 else 1.0)
     interval = float(np.median(np.diff(trace.time)))
-    if interval > 0.5 * quickest:
+    # quicker still is no more than a dead time to this record, and no sampling was asked for by an integrator's lag
+    if 0.5 * interval < quickest < 2.0 * interval and fit.structure.rungs != (2,):
         findings.append(
             Finding(
                 code="slow_sampling",
@@ -139,7 +148,9 @@ def output_limits(record: Record, trace: Trace, step: StepUsed) -> list[Finding]
     """Say where the controller's output lay at a limit, or moved at its greatest slope, while the response ran."""
     if step.signal != "setpoint" or record.output is None:
         return []
-    inside = (record.time >= trace.begins) & (record.time <= trace.time[-1])
+    # one row before the step too: a clamp often begins with the step's own row
+    first = max(int(np.searchsorted(record.time, trace.begins)) - 1, 0)
+    inside = (np.arange(record.time.size) >= first) & (record.time <= trace.time[-1])
     time, output = record.time[inside], record.output.values[inside]
     clamped = rows_at_limit(output) if output.size > 1 else output[:0]
     if clamped.size:

@@ -10,6 +10,7 @@ import numpy as np
 from loopfit.analysis.swinging import limit_cycle
 from loopfit.core.finding import Finding
 from loopfit.core.quantity import Quantity
+from loopfit.figures.swings import find_swings
 from loopfit.fit.choose import change_of, structured
 from loopfit.fit.estimate import Fit, Trace
 
@@ -19,6 +20,7 @@ _STRUCTURE_REFUSED = 0.25
 _COLOURED = 0.5
 _SHAPED = 0.8
 _LEAST_EXPLAINED = 0.5
+_GROWING_SWINGS = 4
 _LEAST_DECAY = 0.2  # of the amplitude, within the record
 
 Figures = dict[str, Quantity | None]
@@ -58,6 +60,9 @@ def judge(trace: Trace, fit: Fit, figures: Figures, noise: float, *, pushed: boo
     """
     change = change_of(fit, trace)
     share = structured(fit, noise) / abs(change) if change != 0 else math.inf
+    growing = _growing(trace, fit, figures, noise)
+    if growing is not None:
+        return Verdict(findings=(growing,), adequate=False, reasons=(growing.text,))
     findings = [
         *_refusals(trace, fit, figures, share, change, noise, pushed=pushed, against_setpoint=against_setpoint),
         *_about_damping(trace, fit, figures, noise),
@@ -149,17 +154,28 @@ def _refusals(
     return []
 
 
+def _growing(trace: Trace, fit: Fit, figures: Figures, noise: float) -> Finding | None:
+    """Return the finding of an oscillation that grows, by the model or by the heights of its swings."""
+    zeta = figures.get("damping_ratio")
+    after = trace.time >= trace.last_change
+    departure = trace.values[after] - float(np.mean(trace.values[after]))
+    swings = find_swings(trace.time[after], departure, noise)
+    heights = swings.heights
+    rising = heights.size >= _GROWING_SWINGS and bool(
+        np.mean(np.diff(heights) > 0) > 0.8 and heights[-1] > 1.5 * heights[0] and heights[-1] > 8.0 * noise
+    )
+    if not rising and (zeta is None or zeta.high >= 0.0):
+        return None
+    return _error(
+        "growing_oscillation",
+        "The oscillation grows: the loop is unstable; go to manual and lower the gain before any further test.",
+    )
+
+
 def _about_damping(trace: Trace, fit: Fit, figures: Figures, noise: float) -> list[Finding]:
     zeta, frequency = figures.get("damping_ratio"), figures.get("natural_frequency_rad_s")
     if zeta is None or frequency is None:
         return []
-    if zeta.high < 0.0:
-        return [
-            _error(
-                "growing_oscillation",
-                "The oscillation grows: the loop is unstable; go to manual and lower the gain before any further test.",
-            )
-        ]
     decay = -math.expm1(-zeta.value * frequency.value * trace.span) if math.isfinite(frequency.value) else 1.0
     if zeta.value < 0.5 and decay < _LEAST_DECAY:
         cycle = limit_cycle(trace, fit, noise)

@@ -17,6 +17,7 @@ from loopfit.step.noise import noise_rms
 from loopfit.step.release import release_row
 
 _SWINGS = 3
+_AT_LEVEL = 0.02
 
 
 def stated_step(record: Record, stated: StatedStep) -> Prepared:
@@ -31,10 +32,7 @@ def stated_step(record: Record, stated: StatedStep) -> Prepared:
             f"the record runs from {record.time[0]:g} to {record.time[-1]:g} s",
         )
     y = record.measurement.values
-    tail = max(3, y.size // 20)
-    noise = noise_rms(y)
-    reaches = abs(float(np.mean(y[-tail:])) - stated.to) <= 0.02 * abs(stated.to - stated.from_) + 2.0 * noise
-    signal: Stepped = "setpoint" if reaches and record.output is None else "output"
+    signal = _stated_signal(record, stated, row)
     step = StepUsed(signal=signal, time_s=stated.at_s, from_=stated.from_, to=stated.to)
     trace = Trace(
         time=record.time,
@@ -49,6 +47,21 @@ def stated_step(record: Record, stated: StatedStep) -> Prepared:
         text=f"The step was stated by the user and is taken as one of the {signal}; columns were not used for it.",
     )
     return Prepared(trace=trace, step=step, steps=(step,), findings=(note,))
+
+
+def _stated_signal(record: Record, stated: StatedStep, row: int) -> Stepped:
+    """Return which signal a stated step is of: the column at that level after it, else what the measurement does."""
+    size = abs(stated.to - stated.from_)
+    for role in ("setpoint", "output"):
+        signal = record.setpoint if role == "setpoint" else record.output
+        if signal is not None and abs(float(np.median(signal.values[row:])) - stated.to) <= _AT_LEVEL * size:
+            return "setpoint" if role == "setpoint" else "output"
+    if record.setpoint is not None and record.output is None:
+        return "setpoint"
+    y = record.measurement.values
+    end = float(np.mean(y[-max(3, y.size // 20) :]))
+    reaches = abs(end - stated.to) <= _AT_LEVEL * size + 2.0 * noise_rms(y)
+    return "setpoint" if reaches and record.output is None else "output"
 
 
 def release(record: Record, *, column_stood_still: bool) -> Prepared:

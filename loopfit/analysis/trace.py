@@ -20,6 +20,7 @@ _SPAN_S = (1e-9, 1e12)
 _LARGEST = 1e30
 _BEFORE_AT_LEAST = 10
 _BEFORE_SHARE = 0.15
+_STEPS_AT_MOST = 12  # more steps tell little more, and take long
 
 
 def prepare(record: Record, *, number: int | None, stated: StatedStep | None) -> Prepared:
@@ -56,8 +57,10 @@ def prepare(record: Record, *, number: int | None, stated: StatedStep | None) ->
         if found is not None and found.always_moving:
             raise RecordError(
                 record.source,
-                "the output moves all the time and no setpoint was recorded, so no step can be told; "
-                "name the setpoint column with --setpoint, or state the step with --step-at, --step-from and --step-to",
+                "the output moves all the time and "
+                + ("the setpoint does not step here" if record.setpoint is not None else "no setpoint was recorded")
+                + ", so no step can be told; choose another part with --from and --to, name the setpoint column with "
+                "--setpoint, or state the step with --step-at, --step-from and --step-to",
             )
         return release(record, column_stood_still=other)
     if number is None and len(found.steps) > 1:
@@ -130,8 +133,10 @@ def _one_of(record: Record, found: StepsFound, number: int) -> Prepared:
 
 def _all_of(record: Record, found: StepsFound) -> Prepared:
     """Return the trace of all steps together, and that of each one alone."""
-    usable = []
+    usable: list[tuple[Step, Trace]] = []
     for number, step in enumerate(found.steps, start=1):
+        if len(usable) == _STEPS_AT_MOST:
+            break
         begin, end = _rows_of(record, found, number)
         if end - step.row >= AFTER_AT_LEAST:
             usable.append((step, _between(record, found, step, begin, end)))
@@ -140,11 +145,16 @@ def _all_of(record: Record, found: StepsFound) -> Prepared:
         return _one_of(record, found, number)
     first = usable[0][0]
     used = [step for step, _ in usable]
+    last = found.steps.index(used[-1]) + 1
+    findings = _about_steps(record, found, None)
+    if last < len(found.steps) and len(used) == _STEPS_AT_MOST:
+        text = f"The record holds {len(found.steps)} steps; the first {_STEPS_AT_MOST} are used."
+        findings = (*findings, Finding(code="first_steps_used", severity="note", text=text))
     return Prepared(
-        trace=_between(record, found, first, 0, record.time.size),
+        trace=_between(record, found, first, 0, _rows_of(record, found, last)[1]),
         step=_used(first, used=True),
         steps=tuple(_used(step, used=step in used) for step in found.steps),
-        findings=_about_steps(record, found, None),
+        findings=findings,
         separate=tuple((_used(step, used=True), trace) for step, trace in usable),
     )
 

@@ -50,22 +50,28 @@ def false_first_rows(trace: Trace, fit: Fit, *, noise_floor: float) -> Rows:
         if rival.sse / rest.time.size > _FALLS_TO * fit.sse / trace.time.size:
             continue
         away = np.abs(row_residuals(trace, rival)[rows]) / np.sqrt(rival.variance)
-        if np.all(away > _APART):
+        next_level = float(np.median(trace.values[rows[-1] + 1 : rows[-1] + 4]))
+        beyond = np.abs(trace.values[rows] - next_level) / np.sqrt(rival.variance)  # not simply where it stays
+        if np.all(away > _APART) and np.all(beyond > _APART):
             return rows
     return np.zeros(0, dtype=np.intp)
 
 
-def outliers(trace: Trace, fit: Fit) -> Rows:
+def outliers(trace: Trace, fit: Fit, grid: float) -> Rows:
     """Return isolated rows far from the model and from their neighbours; none when they are many.
 
-    The spread is the median absolute residual (Hampel 1974), which a few wild rows do not move.
+    The spread is the median absolute residual (Hampel 1974), which a few wild rows do not move. `grid` is the
+    measurement's resolution, or 0. The rows of the steps themselves are never called wild.
     """
     rest = row_residuals(trace, fit)
     spread = float(np.median(np.abs(rest - np.median(rest)))) / 0.6745
     local = rest.copy()
     local[1:-1] -= 0.5 * (rest[:-2] + rest[2:])  # a smooth misfit is no outlier
-    least = max(_OUTLIER * spread, _OUTLIER_SHARE * float(np.ptp(trace.values)))
+    least = max(_OUTLIER * spread, _OUTLIER_SHARE * float(np.ptp(trace.values)), 2.5 * grid)
     far = (np.abs(rest) > least) & (np.abs(local) > 0.5 * np.abs(rest))
+    if trace.input is not None:
+        at = np.searchsorted(trace.time, trace.input.times)
+        far[np.clip(np.concatenate([at - 1, at, at + 1]), 0, far.size - 1)] = False
     rows = np.flatnonzero(far)
     if rows.size == 0 or rows.size > max(1.0, _OUTLIERS_AT_MOST * rest.size):
         return np.zeros(0, dtype=np.intp)

@@ -24,6 +24,7 @@ _STAMP = re.compile(
     r"(?:([+-]?\d{1,4}):(\d{2})(?::(\d{2}))?(?:[.,:](\d{1,9}))?\s*([aApP]\.?[mM]\.?)?)?\s*(Z|UTC|GMT|[+-]\d{2}:?\d{2})?\s*",
     re.ASCII | re.IGNORECASE,
 )
+_DAY_NS = 86400 * 10**9
 _MICROSECOND = timedelta(microseconds=1)
 _STAMP_WORDS = re.compile(_STAMP.pattern, re.IGNORECASE)
 
@@ -163,11 +164,14 @@ def _dates(groups: _Groups, name: str) -> Clock | None:
     elapsed = {key: [None if t is None else t - _first(value) for t in value] for key, value in readings.items()}
     if len({tuple(value) for value in elapsed.values()}) > 1:
         rising = {key: value for key, value in elapsed.items() if _rises(value)}
-        if len({tuple(value) for value in rising.values()}) == 1:
-            order = next(iter(rising))
+        within = {key: value for key, value in rising.items() if _longest_wait(value) < _DAY_NS}
+        one = rising if len({tuple(value) for value in rising.values()}) == 1 else within
+        if len({tuple(value) for value in one.values()}) == 1:
+            order = next(iter(one))
             ticks = readings[order]
             start = _first(ticks)
-            text = f"the dates of {name!r} are read {order}: the other order would make the clock run back"
+            why = "make the clock run back" if one is rising else "leave days without a row"
+            text = f"the dates of {name!r} are read {order}: the other order would {why}"
             findings.append(Finding(code="date_order", severity="note", text=text))
         else:
             both = " or ".join(elapsed)
@@ -176,6 +180,9 @@ def _dates(groups: _Groups, name: str) -> Clock | None:
                 f"{both}, with different elapsed times; write them as 2026-03-01"
             )
     elif len(readings) > 1:
+        # the change of summer time is known by its Sunday: of two readings take the one on which there may be one
+        ticks = next((value for value in readings.values() if _weekday(value[-1]) == 6), ticks)
+        start = _first(ticks)
         text = (
             f"whether the dates of {name!r} are {' or '.join(readings)} cannot be told; the times between rows do "
             f"not depend on it"
@@ -183,12 +190,10 @@ def _dates(groups: _Groups, name: str) -> Clock | None:
         findings.append(Finding(code="date_order", severity="note", text=text))
     seconds = np.array([np.nan if tick is None else (tick - start) / 1e9 for tick in ticks])
     zoned = any(group is not None and group[9] is not None for group in groups)
-    of_day = None if zoned else np.array([np.nan if tick is None else (tick % (86400 * 10**9)) / 1e9 for tick in ticks])
+    of_day = None if zoned else np.array([np.nan if tick is None else (tick % _DAY_NS) / 1e9 for tick in ticks])
     weekday = None
     if not zoned:
-        weekday = np.array(
-            [np.nan if tick is None else (tick // (86400 * 10**9) + 6) % 7 for tick in ticks]
-        )  # day 1 was a Monday
+        weekday = np.array([_weekday(tick) for tick in ticks])
     return Clock(seconds=seconds, kind="date", of_day_s=of_day, weekday=weekday, findings=tuple(findings))
 
 
@@ -200,6 +205,15 @@ def _rises(ticks: Sequence[int | None]) -> bool:
     known = [tick for tick in ticks if tick is not None]
     pairs = list(pairwise(known))
     return all(b >= a for a, b in pairs) or all(b <= a for a, b in pairs)
+
+
+def _weekday(tick: int | None) -> float:
+    """Return 0 for a Monday to 6 for a Sunday; day 1 was a Monday."""
+    return float("nan") if tick is None else float((tick // _DAY_NS + 6) % 7)
+
+
+def _longest_wait(ticks: Sequence[int | None]) -> int:
+    return max((abs(b - a) for a, b in pairwise(tick for tick in ticks if tick is not None)), default=0)
 
 
 def _ticks(groups: _Groups, order: tuple[int, int, int]) -> list[int | None] | None:
@@ -229,5 +243,5 @@ def _ticks(groups: _Groups, order: tuple[int, int, int]) -> list[int | None] | N
         shift = 0
         if zone[:1] in ("+", "-") and zone:
             shift = (int(zone[1:3]) * 60 + int(zone[-2:])) * 60 * 10**9 * (-1 if zone[0] == "-" else 1)
-        ticks.append(days[key] * 86400 * 10**9 + of_day - shift)
+        ticks.append(days[key] * _DAY_NS + of_day - shift)
     return ticks

@@ -30,7 +30,7 @@ def numeric_clock(values: Array, name: str, unit: str | None, cells: Sequence[st
     factor = seconds_per(unit)
     if factor is None and unit is None:
         factor = _factor_in(name)
-    middle = float(np.median(known)) if len(known) else 0.0
+    middle = float(np.median(known[:: max(1, len(known) // 1000)])) if len(known) else 0.0
     if 1.9e13 < middle < 2.2e13 and bool(np.all(known == np.floor(known))):  # 20260301115950
         compact = stamp_clock(
             [f"{int(v):014d}"[:8] + "T" + f"{int(v):014d}"[8:] if np.isfinite(v) else "" for v in values], name

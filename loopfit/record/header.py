@@ -7,6 +7,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 from loopfit.record.layout import Layout, Row, cell_kind, split_line
+from loopfit.record.stated import interval_in
 from loopfit.record.units import is_unit, split_unit
 
 _COMMENT = re.compile(r"^\s*(?:#+|//+|%+(?=\s|[A-Za-z])|!+(?=\s))\s*")
@@ -54,9 +55,13 @@ def find_header(rows: Sequence[Row], layout: Layout, numeric: Sequence[bool], li
     names: list[str] | None = None
     units: list[str | None] = [None] * width
     used = 0
+
+    def whole(line: int, cells: list[str]) -> str:
+        return lines[line - 1] if line <= len(lines) else "\t".join(cells).strip()
+
     for line, cells in reversed(above):
-        fitted = _fit(cells, lines[line - 1] if line <= len(lines) else "", width, layout.delimiter in " \t")
-        if fitted is None:
+        fitted = _fit(cells, whole(line, cells), width, layout.delimiter in " \t")
+        if fitted is None or interval_in(whole(line, cells)) is not None:
             break
         if names is None and used == 0 and _are_units(fitted):
             units = [cell.strip("()[]{}<> ") or None for cell in fitted]
@@ -71,7 +76,7 @@ def find_header(rows: Sequence[Row], layout: Layout, numeric: Sequence[bool], li
             break
         else:
             break
-    preamble = tuple(lines[line - 1] for line, _ in above[: len(above) - used] if line <= len(lines))
+    preamble = tuple(whole(line, cells) for line, cells in above[: len(above) - used])
     cells_above = tuple(above[-used][1]) if used else ()
     named = names is not None
     plain = [f"column {place + 1}" for place in range(width)]

@@ -3,6 +3,9 @@
 from __future__ import annotations
 
 import io
+import os
+from collections.abc import Iterator
+from contextlib import contextmanager
 
 import numpy as np
 
@@ -24,16 +27,18 @@ def table_from_parquet(source: str, data: bytes) -> Table:
     import polars as pl
 
     try:
-        schema = pl.read_parquet_schema(io.BytesIO(data))
-        height = pl.scan_parquet(io.BytesIO(data)).select(pl.len()).collect().item()
+        with _without_panic_messages():
+            schema = pl.read_parquet_schema(io.BytesIO(data))
+            height = pl.scan_parquet(io.BytesIO(data)).select(pl.len()).collect().item()
         if height * max(len(schema), 1) * 8 > _MOST_BYTES:
             raise RecordError(
                 source, f"{height} rows of {len(schema)} columns are too many; keep only the part with the step test"
             )
-        frame = pl.read_parquet(io.BytesIO(data))
+        with _without_panic_messages():
+            frame = pl.read_parquet(io.BytesIO(data))
     except RecordError:
         raise
-    except (pl.exceptions.PolarsError, OSError, ValueError) as problem:
+    except (pl.exceptions.PolarsError, pl.exceptions.PanicException, OSError, ValueError) as problem:
         reason = " ".join(str(problem).split())[:80]
         raise RecordError(source, f"the Parquet file cannot be read ({reason})") from None
     columns = []
@@ -72,3 +77,20 @@ def table_from_parquet(source: str, data: bytes) -> Table:
         set_aside=0,
         findings=(),
     )
+
+
+@contextmanager
+def _without_panic_messages() -> Iterator[None]:
+    """Keep the reader's threads, which write of their panics past Python, off standard error."""
+    try:
+        kept, nowhere = os.dup(2), os.open(os.devnull, os.O_WRONLY)
+    except OSError:  # there is no standard error
+        yield
+        return
+    os.dup2(nowhere, 2)
+    try:
+        yield
+    finally:
+        os.dup2(kept, 2)
+        os.close(kept)
+        os.close(nowhere)

@@ -14,7 +14,7 @@ from loopfit.core.finding import Finding
 from loopfit.record.checks import check_count, check_interval, check_roles, check_window, usable_rows
 from loopfit.record.longform import wide_from_long, without_flagged
 from loopfit.record.record import Record, Signal
-from loopfit.record.rising import rising
+from loopfit.record.rising import rising, spacing
 from loopfit.record.roles import assign_roles
 from loopfit.record.source import read_table
 from loopfit.record.table import Column, Table
@@ -121,7 +121,8 @@ def record_from_arrays(
     columns = {
         role: Column(number=0, name=role, unit=None, values=values, cells=None) for role, values in signals.items()
     }
-    return _record("arrays", count, signals["time"], None, columns, [], [], np.arange(count), window_s)
+    findings = spacing("time", signals["time"], np.arange(1, count + 1), word="row")
+    return _record("arrays", count, signals["time"], None, columns, [], findings, np.arange(count), window_s)
 
 
 def record_from_table(

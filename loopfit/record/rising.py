@@ -69,7 +69,7 @@ def rising(
         seconds = _summer_time(seconds, of_day, weekday, lines[rows], findings)
     seconds, rows = _longest_run(source, name, seconds, rows, lines, restarts, findings)
     seconds, rows = _one_stamp_a_row(name, seconds, rows, lines, same_as_before, findings)
-    _spacing(name, seconds, rows, lines, findings)
+    findings += spacing(name, seconds, lines[rows])
     return Timeline(seconds=seconds, rows=rows, findings=tuple(findings))
 
 
@@ -233,30 +233,46 @@ def _spread(name: str, seconds: Array, findings: list[Finding]) -> Array:
     return spread
 
 
-def _spacing(
-    name: str, seconds: Array, rows: NDArray[np.int64], lines: NDArray[np.int64], findings: list[Finding]
-) -> None:
-    """Name gaps, or uneven sampling when there are too many of them to be gaps."""
+def spacing(name: str, seconds: Array, lines: NDArray[np.int64], word: str = "line") -> list[Finding]:
+    """Return what there is to say of gaps, or of uneven sampling when there are too many of them to be gaps.
+
+    `lines` (n,) are the places of the rows, called `word`.
+    """
     if len(seconds) < 5:
-        return
+        return []
     step = np.diff(seconds)
     usual = float(np.median(step))
+    missing = _missing(name, step, usual, lines, word)
     gaps = np.flatnonzero(step > _GAP * usual)
     if len(gaps) == 0:
-        return
+        return missing
     if len(gaps) > 0.05 * len(step):
         text = f"the rows are unevenly spaced in time ({step.min():.3g} to {step.max():.3g} s, median {usual:.3g} s)"
-        findings.append(Finding(code="uneven_sampling", severity="note", text=text))
-        return
+        return [Finding(code="uneven_sampling", severity="note", text=text)]
     worst = int(gaps[np.argmax(step[gaps])])
-    places = [int(lines[rows[gap + 1]]) for gap in gaps]
+    places = [int(lines[gap + 1]) for gap in gaps]
     text = (
-        f"{count_of(len(gaps), 'gap')} in {name!r} (before {lines_text(places)}), the longest {step[worst]:.4g} s "
-        f"against a usual "
-        f"{usual:.4g} s; what happened in a gap is not in the figures"
+        f"{count_of(len(gaps), 'gap')} in {name!r} (before {lines_text(places, word=word)}), the longest "
+        f"{step[worst]:.4g} s against a usual {usual:.4g} s; what happened in a gap is not in the figures"
     )
     at = (float(seconds[worst]), float(seconds[worst + 1]))
-    findings.append(Finding(code="gaps", severity="warning", text=text, at_s=at))
+    return [Finding(code="gaps", severity="warning", text=text, at_s=at), *missing]
+
+
+def _missing(name: str, step: Array, usual: float, lines: NDArray[np.int64], word: str) -> list[Finding]:
+    """Return a note of single rows that an otherwise even clock lacks, but for those left out already."""
+    if not float(step.max()) > 1.75 * usual or float(np.quantile(np.abs(step - usual), 0.9)) > 0.05 * usual:
+        return []
+    apart = np.abs(np.diff(lines))
+    lost = np.flatnonzero((step > 1.75 * usual) & (step <= _GAP * usual) & (apart <= np.median(apart)))
+    if len(lost) == 0 or len(lost) > 0.05 * len(step):
+        return []
+    places = lines_text([int(lines[place + 1]) for place in lost], word=word)
+    text = (
+        f"rows seem to be missing before {places}: {name!r} is even but for {step[lost].max():.4g} s there instead of "
+        f"{usual:.4g} s; a step in between would be seen late"
+    )
+    return [Finding(code="missing_rows", severity="note", text=text)]
 
 
 def _shown(value: float) -> str:

@@ -100,6 +100,19 @@ def _by_columns(source: str, text: str, data: bytes | None = None) -> Table | No
 
     `data` are the bytes it came from; if they are the same text, they need not be made again.
     """
+    found = recognised(source, text)
+    if found is None:
+        return None
+    layout, numeric, header, first_line, start = found
+    body = data[start:] if data is not None and text.isascii() and len(data) == len(text) else text[start:].encode()
+    return table_by_columns(source, body, header, layout, numeric, first_line)
+
+
+def recognised(source: str, text: str) -> tuple[Layout, list[bool], Header, int, int] | None:
+    """Return layout, numeric columns, header, first line and first character of the data, from parts of a long text.
+
+    None when the parts do not tell, so that every line must have its say.
+    """
     head = text[:_HEAD].split("\n")[:-1]
     places = [len(text) // 12 * part for part in range(1, 12)]
     inside = [line for place in places for line in text[place : place + 2000].split("\n")[1:-1][:4]]
@@ -108,16 +121,14 @@ def _by_columns(source: str, text: str, data: bytes | None = None) -> Table | No
         return None
     try:
         layout, numeric = layout_of(source, full)
-    except RecordError:  # let every line have its say
+    except RecordError:
         return None
     rows = list(rows_of(head[:400], layout.delimiter))
     header = find_header(rows, layout, numeric, head)
     if header.first >= len(rows) or header.unfit is not None:
         return None
     first_line = rows[header.first][0]
-    start = sum(len(line) + 1 for line in head[: first_line - 1])
-    body = data[start:] if data is not None and text.isascii() and len(data) == len(text) else text[start:].encode()
-    return table_by_columns(source, body, header, layout, numeric, first_line)
+    return layout, numeric, header, first_line, sum(len(line) + 1 for line in head[: first_line - 1])
 
 
 def layout_of(source: str, lines: list[str]) -> tuple[Layout, list[bool]]:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -14,6 +14,7 @@ from loopfit.record.clock import Clock, UndecidedStampsError, stamp_clock
 from loopfit.record.content import known_of
 from loopfit.record.epoch import numeric_clock
 from loopfit.record.layout import STAMP
+from loopfit.record.stated import intervals_in
 from loopfit.record.table import Column, Table
 from loopfit.record.units import seconds_per
 from loopfit.record.wording import names_text
@@ -88,17 +89,38 @@ def time_base(table: Table, wanted: Column | None, interval_s: float | None, tak
         if better:
             text = f"time is taken from {better[0].name!r} because it rises evenly; its name does not say so"
             return _numeric(better[0], free, (Finding(code="time_by_content", severity="note", text=text),))
+        if counters and (stated := intervals_in(table.preamble)):
+            return _stated(table, counters[0], stated, free)
         if counters:
             reason = (
                 f"{names_text([counters[0].name])} only counts the rows; give --interval SECONDS (or --time "
                 f"{counters[0].number} if it is in seconds)"
             )
             raise RecordError(source, reason)
+    if stated := intervals_in(table.preamble):
+        return _stated(table, None, stated, free)
     reason = (
         f"no column of times among {names_text([column.name for column in table.columns])}; give --interval "
         f"SECONDS, or --time COL"
     )
     raise RecordError(source, reason)
+
+
+def _stated(
+    table: Table, counter: Column | None, stated: Sequence[tuple[float, str]], free: Sequence[Column]
+) -> TimeBase:
+    """Return the clock of the interval that the lines above the data state."""
+    interval, line = stated[0]
+    if len(stated) > 1:
+        both = " and ".join(f"{value:g}" for value, _ in stated[:3])
+        raise RecordError(
+            table.source, f"the lines above the data state {both} s between rows; give --interval SECONDS"
+        )
+    base = _even(table, counter, interval, free)
+    shown = " ".join(line.split())[:60]
+    what = "the count of rows" if counter is None else f"the count in {counter.name!r}"
+    text = f"there is no column of times; the file states {shown!r}, so time is {what} times {interval:g} s"
+    return replace(base, findings=(Finding(code="interval_stated", severity="note", text=text),))
 
 
 def _even(table: Table, wanted: Column | None, interval_s: float, free: Sequence[Column]) -> TimeBase:
@@ -128,9 +150,8 @@ def _numeric(column: Column, free: Sequence[Column], findings: tuple[Finding, ..
     assert column.values is not None
     clock = numeric_clock(column.values, column.name, column.unit, column.cells)
     used = frozenset({column.number})
-    return TimeBase(
-        clock=clock, name=column.name, used=used, set_aside=_other_times(free), findings=(*findings, *clock.findings)
-    )
+    aside = _other_times([other for other in free if other is not column])
+    return TimeBase(clock=clock, name=column.name, used=used, set_aside=aside, findings=(*findings, *clock.findings))
 
 
 def clock_of(source: str, column: Column) -> Clock | None:

@@ -15,10 +15,10 @@ def count_of(count: int, word: str) -> str:
     return f"{count} {word}" + ("" if count == 1 else "s")
 
 
-def lines_text(lines: Sequence[int], shown: int = 3) -> str:
+def lines_text(lines: Sequence[int], shown: int = 3, word: str = "line") -> str:
     """Return "line 12" or "lines 12, 13, 20, ..."."""
     listed = ", ".join(str(int(line)) for line in lines[:shown])
-    return f"line{'' if len(lines) == 1 else 's'} {listed}" + (", ..." if len(lines) > shown else "")
+    return f"{word}{'' if len(lines) == 1 else 's'} {listed}" + (", ..." if len(lines) > shown else "")
 
 
 def names_text(names: Sequence[str], shown: int = 8) -> str:

@@ -6,6 +6,7 @@ import datetime as dt
 import io
 import re
 import zipfile
+import zlib
 from collections.abc import Sequence
 from dataclasses import replace
 
@@ -121,7 +122,15 @@ def _check_size(source: str, data: bytes) -> None:
                 if part.filename.startswith("xl/worksheets/") and part.filename.endswith(".xml"):
                     with archive.open(part) as stream:
                         _check_extent(source, stream.read(_LARGEST_PART + 1))
-    except (zipfile.BadZipFile, OSError, EOFError, NotImplementedError, RuntimeError, ValueError) as problem:
+    except (
+        zipfile.BadZipFile,
+        zlib.error,
+        OSError,
+        EOFError,
+        NotImplementedError,
+        RuntimeError,
+        ValueError,
+    ) as problem:
         if isinstance(problem, RecordError):
             raise
         raise RecordError(source, "the workbook is damaged; save it again, or as .csv") from None

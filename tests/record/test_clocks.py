@@ -105,11 +105,21 @@ def test_date_and_time_in_two_columns(tmp_path: Path) -> None:
     assert record.time_name == "Datum Uhrzeit"
 
 
-def test_past_midnight(tmp_path: Path) -> None:
+@pytest.mark.parametrize("form", ["%H:%M:%S.%f", "%I:%M:%S.%f %p"])
+def test_past_midnight(form: str, tmp_path: Path) -> None:
     late = datetime(2026, 1, 1, 23, 59, 50)
-    record = read(tmp_path, [(late + timedelta(seconds=0.5 * i)).strftime("%H:%M:%S.%f") for i in range(COUNT)])
+    record = read(tmp_path, [(late + timedelta(seconds=0.5 * i)).strftime(form) for i in range(COUNT)])
     np.testing.assert_array_equal(record.time, SECONDS)
     assert "past_midnight" in codes(record)
+
+
+@pytest.mark.parametrize("form", ["%d/%m/%Y %H:%M:%S.%f", "%m/%d/%Y %H:%M:%S.%f"])
+def test_dates_past_midnight_tell_day_from_month(form: str, tmp_path: Path) -> None:
+    """3 to 4 April, or 4 March to 4 April with a month between two rows."""
+    late = datetime(2026, 4, 3, 23, 59, 50)
+    record = read(tmp_path, [(late + timedelta(seconds=0.5 * i)).strftime(form) for i in range(COUNT)])
+    np.testing.assert_array_equal(record.time, SECONDS)
+    assert "date_order" in codes(record)
 
 
 def test_order_of_day_and_month(tmp_path: Path) -> None:
@@ -134,24 +144,41 @@ def test_hours_and_minutes_or_minutes_and_seconds(tmp_path: Path) -> None:
     np.testing.assert_array_equal(read(tmp_path, stamps, "Time (mm:ss)").time, np.arange(COUNT) * 1.0)
 
 
-def test_summer_time(tmp_path: Path) -> None:
-    back = datetime(2026, 10, 25, 2, 59, 50)  # the last Sunday of October
-    record = read(
-        tmp_path, [(back + timedelta(seconds=0.5 * i - (3600 if i >= 20 else 0))).isoformat() for i in range(COUNT)]
-    )
+CHANGES = [  # local time jumps in the night to Sunday: dates and hours of the laws of 2026, common knowledge
+    ("Berlin, autumn", datetime(2026, 10, 25, 3), -1),
+    ("Berlin, spring", datetime(2026, 3, 29, 2), 1),
+    ("London, autumn", datetime(2026, 10, 25, 2), -1),
+    ("London, spring", datetime(2026, 3, 29, 1), 1),
+    ("New York, autumn", datetime(2026, 11, 1, 2), -1),
+    ("New York, spring", datetime(2026, 3, 8, 2), 1),
+]
+
+
+@pytest.mark.parametrize(("instant", "hours"), [change[1:] for change in CHANGES], ids=[c[0] for c in CHANGES])
+@pytest.mark.parametrize("form", ["%Y-%m-%d %H:%M:%S.%f", "%d.%m.%Y %H:%M:%S.%f", "%m/%d/%Y %I:%M:%S.%f %p"])
+def test_summer_time(instant: datetime, hours: int, form: str, tmp_path: Path) -> None:
+    begin = instant - timedelta(seconds=10)
+    walls = [begin + timedelta(seconds=0.5 * i + (3600 * hours if i >= 20 else 0)) for i in range(COUNT)]
+    record = read(tmp_path, [wall.strftime(form) for wall in walls])
     np.testing.assert_array_equal(record.time, SECONDS)
     assert "summer_time" in codes(record)
-    ahead = datetime(2026, 3, 29, 1, 59, 50)
-    record = read(
-        tmp_path, [(ahead + timedelta(seconds=0.5 * i + (3600 if i >= 20 else 0))).isoformat() for i in range(COUNT)]
-    )
-    np.testing.assert_array_equal(record.time, SECONDS)
+    assert "line 22" in next(f.text for f in record.findings if f.code == "summer_time")
+
+
+def test_an_hour_back_in_the_week_is_refused(tmp_path: Path) -> None:
     midweek = datetime(2026, 10, 28, 2, 59, 50)
+    walls = [midweek + timedelta(seconds=0.5 * i - (3600 if i >= 20 else 0)) for i in range(COUNT)]
     with pytest.raises(RecordError, match=r"row 22.*runs back"):
-        read(
-            tmp_path,
-            [(midweek + timedelta(seconds=0.5 * i - (3600 if i >= 20 else 0))).isoformat() for i in range(COUNT)],
-        )
+        read(tmp_path, [wall.isoformat() for wall in walls])
+
+
+def test_stamps_with_a_zone_need_no_correction(tmp_path: Path) -> None:
+    begin = datetime(2026, 10, 25, 2, 59, 50)
+    walls = [begin + timedelta(seconds=0.5 * i - (3600 if i >= 20 else 0)) for i in range(COUNT)]
+    stamps = [wall.isoformat() + ("+01:00" if i >= 20 else "+02:00") for i, wall in enumerate(walls)]
+    record = read(tmp_path, stamps)
+    np.testing.assert_array_equal(record.time, SECONDS)
+    assert record.findings == ()
 
 
 def test_newest_first(tmp_path: Path) -> None:
@@ -202,6 +229,16 @@ def test_gaps_and_jitter(tmp_path: Path) -> None:
     assert record.findings == ()
     times = np.cumsum(rng.exponential(1, COUNT))
     assert "uneven_sampling" in codes(read(tmp_path, [f"{t:.3f}" for t in times], "Time (s)"))
+
+
+def test_single_missing_rows_of_an_even_clock(tmp_path: Path) -> None:
+    stamps = [f"{0.5 * i + 0.5 * (i > 30):.1f}" for i in range(COUNT)]
+    record = read(tmp_path, stamps, "Time (s)")
+    (finding,) = record.findings
+    assert (finding.code, finding.severity) == ("missing_rows", "note")
+    assert "before line 33" in finding.text
+    bad = [f"{0.5 * i:.1f}" if i != 30 else "---" for i in range(COUNT)]  # left out, and said so already
+    assert codes(read(tmp_path, bad, "Time (s)")) == {"bad_cells"}
 
 
 def test_counters(tmp_path: Path) -> None:

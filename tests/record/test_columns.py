@@ -51,6 +51,24 @@ HEADERS = [
     ("t,a,b,c", "osm", "c", "b", "a"),
     ("t,a", "m", "a", None, None),
     ("t,Temperature 2,Temperature 1,Heater 1,Heater 2", "mlvs", "Temperature 1", None, "Heater 1"),
+    *(
+        (",".join(["t", *(names[kind] for kind in kinds)]), kinds, names["m"], names["s"], names["o"])
+        for kinds in ("mso", "smo", "osm")
+        for names in (
+            {"m": "Füllstand Ist (mm)", "s": "Füllstand Soll (mm)", "o": "Ventil (%)"},
+            {"m": "Regelgröße", "s": "Führungsgröße", "o": "Stellgröße"},
+            {"m": "Istposition", "s": "Sollposition", "o": "Stellsignal"},
+            {"m": "Température mesurée (°C)", "s": "Consigne température (°C)", "o": "Puissance chauffe (%)"},
+            {"m": "Grandeur réglée", "s": "Consigne", "o": "Commande"},
+            {"m": "Pression", "s": "Consigne pression", "o": "Sortie régulateur"},
+            {"m": "Presión (bar)", "s": "Punto de consigna (bar)", "o": "Válvula (%)"},
+            {"m": "Nivel real", "s": "Nivel deseado", "o": "Salida del controlador (%)"},
+            {"m": "Valor medido", "s": "Referencia", "o": "Señal de mando"},
+            {"m": "belt speed measurement", "s": "belt speed setpoint", "o": "drive output"},
+            {"m": "Actual Value", "s": "Set Value", "o": "Manipulated Variable"},
+            {"m": "Flow (l/min)", "s": "Flow SP (l/min)", "o": "Valve position (%)"},
+        )
+    ),
 ]
 
 
