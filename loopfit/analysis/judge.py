@@ -60,7 +60,7 @@ def judge(trace: Trace, fit: Fit, figures: Figures, noise: float, *, pushed: boo
     """
     change = change_of(fit, trace)
     share = structured(fit, noise) / abs(change) if change != 0 else math.inf
-    growing = _growing(trace, fit, figures, noise)
+    growing = _growing(trace, figures, noise)
     if growing is not None:
         return Verdict(findings=(growing,), adequate=False, reasons=(growing.text,))
     findings = [
@@ -154,7 +154,7 @@ def _refusals(
     return []
 
 
-def _growing(trace: Trace, fit: Fit, figures: Figures, noise: float) -> Finding | None:
+def _growing(trace: Trace, figures: Figures, noise: float) -> Finding | None:
     """Return the finding of an oscillation that grows, by the model or by the heights of its swings."""
     zeta = figures.get("damping_ratio")
     after = trace.time >= trace.last_change

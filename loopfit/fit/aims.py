@@ -7,7 +7,8 @@ import numpy as np
 from loopfit.core.arrays import Array
 from loopfit.figures import unit_step
 from loopfit.fit.columns import Columns
-from loopfit.fit.separable import solve_linear
+from loopfit.fit.figures_of import Points, figures_of
+from loopfit.fit.separable import Solved, solve_linear
 
 _NUDGE = 1e-3
 
@@ -23,8 +24,18 @@ class Walkers:
         names += ["gain", "dead", "rise", "delay", "settle", "envelope", "lag and dead"] if driven else ["envelope"]
         if columns.input is not None and not driven:
             names += ["gain", "dead", "lag and dead"]
+        self.by_difference: dict[str, str] = {}
         if columns.rungs == (1, 0):
-            names += ["zero"]
+            names += ["zero", "overshoot"]
+            self.by_difference = {
+                "rise": "rise_time_s",
+                "delay": "delay_time_s",
+                "settle": "settling_time_s",
+                "overshoot": "overshoot_percent",
+                "peak": "peak_time_s",
+            }
+            if r[0] <= 0.26:
+                names += ["peak"]
         if r[0] > 0.26:
             names += ["peak", "damped"] if free[2] else ["damped"]
         elif r[0] < 0.24 and free[1]:
@@ -35,14 +46,18 @@ class Walkers:
         self.linear_count = columns.moving_count + columns.fixed.shape[0]
         self.held = np.zeros(self.count, dtype=bool)  # gain walkers keep the gain they have walked to
         self.held_column = 0
+        # figures that a zero moves depend on its linear parameter: those walkers keep what they have walked to
+        self.kept = np.repeat([name in self.by_difference or name == "zero" for name in names], 2)
         if "gain" in names:
             self.held[2 * names.index("gain") :][:2] = True
 
     def resolve(self, matrix: Array, linear: Array) -> tuple[Array, Array, Array]:
         """Return linear parameters, residuals and sums of squares, each walker's own constraint kept."""
         solved = solve_linear(matrix, self.columns.target)
-        if not self.held.any():
+        if not (self.held.any() or self.kept.any()):
             return solved.linear, solved.residual, solved.sse
+        if self.kept.any():
+            solved = self._keep(matrix, linear, solved)
         rows = np.flatnonzero(self.held)
         k = self.held_column
         inverse = np.clip(np.linalg.inv(solved.triangle[rows]), -1e100, 1e100)
@@ -54,6 +69,18 @@ class Walkers:
         sse[rows] = np.einsum("bn,bn->b", residual[rows], residual[rows])
         return out, residual, sse
 
+    def _keep(self, matrix: Array, linear: Array, solved: Solved) -> Solved:
+        """Re-solve only offset and drift for the walkers that keep their moving linear parameters."""
+        rows, m = np.flatnonzero(self.kept), self.columns.moving_count
+        rest = self.columns.target - (linear[rows, None, :m] @ matrix[rows, :m])[:, 0, :]
+        fixed = matrix[0, m:]
+        answer = np.linalg.lstsq(fixed.T, rest.T, rcond=None)[0].T
+        out, residual, sse = solved.linear.copy(), solved.residual.copy(), solved.sse.copy()
+        out[rows, :m], out[rows, m:] = linear[rows, :m], answer
+        residual[rows] = rest - answer @ fixed
+        sse[rows] = np.einsum("bn,bn->b", residual[rows], residual[rows])
+        return solved._replace(linear=out, residual=residual, sse=sse)
+
     def aims(self, theta: Array, linear: Array) -> Array:
         """Return the gradient (W, 3 + q) of each walker's figure, signed."""
         chart = self.columns.chart
@@ -61,9 +88,12 @@ class Walkers:
         T, r = chart.lags(theta)
         by_r, T_by = self._conversions(theta, r)
         rho = _UnitTimes(r, self.names, self.band)
+        differences = self._differences(theta, linear) if self.by_difference else {}
         for i, name in enumerate(self.names):
             rows = slice(2 * i, 2 * i + 2)
-            if name == "damping":
+            if name in differences:
+                out[rows] = differences[name]
+            elif name == "damping":
                 out[rows, 1] = -1.0 if chart.by_lags else 1.0
             elif name == "frequency":
                 out[rows, 0] = -1.0 if chart.by_lags else 1.0
@@ -86,6 +116,25 @@ class Walkers:
         out[:, :3] *= self.free
         signed: Array = out * self.sign[:, None]
         return signed
+
+    def _differences(self, theta: Array, linear: Array) -> dict[str, Array]:
+        """Return gradients (2, 3 + q) by central differences, for figures that a zero moves."""
+        wanted = [i for i, name in enumerate(self.names) if name in self.by_difference]
+        walkers = np.concatenate([[2 * i, 2 * i + 1] for i in wanted])
+        here = np.concatenate([theta[walkers], linear[walkers]], axis=1)
+        size = here.shape[1]
+        nudges = _NUDGE * np.concatenate([np.ones(2), [0.0], np.ones(size - 3)]) * np.maximum(np.abs(here), 1e-12)
+        nudges[:, :2] = _NUDGE
+        nudges[:, 2] = _NUDGE * self.columns.chart.lags(theta[walkers])[0]
+        steps = nudges[:, None, :] * np.eye(size)[None]
+        around = np.concatenate([here[:, None] + steps, here[:, None] - steps], axis=1).reshape(-1, size)
+        table = figures_of(self.columns, Points(theta=around[:, :3], linear=around[:, 3:]), self.band)
+        out = {}
+        for k, i in enumerate(wanted):
+            values = table[self.by_difference[self.names[i]]].reshape(len(walkers), 2, size)[2 * k : 2 * k + 2]
+            slope = (values[:, 0] - values[:, 1]) / (2.0 * nudges[2 * k : 2 * k + 2])
+            out[self.names[i]] = np.where(np.isfinite(slope), slope, 0.0)
+        return out
 
     def _conversions(self, theta: Array, r: Array) -> tuple[Array, Array]:
         """Return dr and dlog T in the second coordinate."""

@@ -18,6 +18,9 @@ from loopfit.fit.samples import Samples
 from loopfit.model.chart import Chart
 from loopfit.model.shape import ladder, ladder_by_shape
 
+_LONGEST_RELEASE = 1.5  # spans: beyond, a slow decay is a drift to the record
+_LONGEST = 100.0
+
 
 @dataclass(frozen=True, kw_only=True, eq=False)
 class Input:
@@ -58,6 +61,14 @@ class Columns:
         if self.drift:
             rows.append(self.samples.centres - self.samples.centres.mean())
         return np.stack(rows) * self.samples.root_count
+
+    @cached_property
+    def highest(self) -> Array:
+        """Upper bounds of the coordinates (3,): no sum of lags so long that the record cannot hold it."""
+        out = np.full(3, np.inf)
+        if self.chart.by_lags:
+            out[0] = np.log((_LONGEST_RELEASE if self.input is None else _LONGEST) * np.ptp(self.samples.centres))
+        return out
 
     @property
     def moving_count(self) -> int:

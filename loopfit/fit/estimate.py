@@ -218,6 +218,7 @@ def search(
         columns.target,
         starts,
         lowest=chart.lowest,
+        highest=columns.highest,
         free=free,
         caps=caps,
         tolerance=tolerance,

@@ -59,9 +59,20 @@ def beside_jumps(
         aims[:, 0] = columns.chart.scale_sign * T * unit_step.settling_time(r, band) * sign
         aims[:, 2] = sign
         step = reach(
-            matrix, slopes, linear, solved.residual, rise, aims, held, at, columns.chart.lowest, threshold, variance
+            matrix,
+            slopes,
+            linear,
+            solved.residual,
+            rise,
+            aims,
+            held,
+            at,
+            columns.chart.lowest,
+            columns.highest,
+            threshold,
+            variance,
         )
-        at = np.maximum(at + step[:, :3], columns.chart.lowest)
+        at = np.clip(at + step[:, :3], columns.chart.lowest, columns.highest)
     return Points.joined(kept) if kept else None
 
 

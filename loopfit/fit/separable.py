@@ -74,6 +74,7 @@ def minimise(
     theta: Array,
     *,
     lowest: Array,
+    highest: Array | None = None,
     free: Flags,
     caps: Callable[[Array], Array] | None = None,
     tolerance: float = 1e-6,
@@ -89,8 +90,8 @@ def minimise(
     target : (n,) array
     theta : (B, p) array
         Starts.
-    lowest : (p,) array
-        Lower bounds.
+    lowest, highest : (p,) array
+        Bounds.
     free : (p,) bool array
         Coordinates that may move.
     caps : callable, optional
@@ -103,7 +104,8 @@ def minimise(
         Drop members that have merged or fallen hopelessly behind.
     """
     n = target.size
-    theta = np.maximum(theta, np.where(np.isfinite(lowest), lowest, -np.inf))
+    top = np.full(theta.shape[1], np.inf) if highest is None else highest
+    theta = np.clip(theta, lowest, top)
     floor = (8 * np.finfo(float).eps) ** 2 * float(target @ target) + _TINY
     damping = np.full(theta.shape[0], _FIRST_DAMPING)
     growth = np.full(theta.shape[0], 2.0)
@@ -116,7 +118,7 @@ def minimise(
     kept = np.eye(theta.shape[1], dtype=bool)
     for turn in range(rounds):
         gradient = (jacobian @ residual[:, :, None])[:, :, 0]
-        held = ~free | ((theta <= lowest) & (gradient < 0))
+        held = ~free | ((theta <= lowest) & (gradient < 0)) | ((theta >= top) & (gradient > 0))
         normal = jacobian @ np.swapaxes(jacobian, 1, 2)
         gradient = np.where(held, 0.0, gradient)
         normal = np.where(held[:, :, None] | held[:, None, :], 0.0, normal)
@@ -126,7 +128,7 @@ def minimise(
         if caps is not None:
             limit = caps(theta)
             step = step / np.maximum(1.0, np.max(np.abs(step) / limit, axis=1))[:, None]
-        trial = np.maximum(theta + step, lowest)
+        trial = np.clip(theta + step, lowest, top)
         step = trial - theta
         promised = 2.0 * np.einsum("bp,bp->b", step, gradient) - np.einsum("bp,bpq,bq->b", step, normal, step)
         settled = settled | (promised <= tolerance * (sse + floor) / n) | (damping > 1e12) | (sse <= floor)
@@ -136,7 +138,7 @@ def minimise(
         solved = solve_linear(columns, target)
         gained = sse - solved.sse
         better = (gained > 0) & ~settled
-        ratio = gained / np.maximum(promised, _TINY)
+        ratio = np.clip(gained, -1e100, 1e100) / np.maximum(promised, 1e-150)
         damping = np.where(
             better,
             damping * np.maximum(0.1, 1.0 - (2.0 * np.clip(ratio, 0.0, 1.0) - 1.0) ** 3),

@@ -58,7 +58,7 @@ def walk(
         Settling band, a fraction.
     """
     walkers = Walkers(columns, theta, free, band)
-    lowest = columns.chart.lowest
+    lowest, highest = columns.chart.lowest, columns.highest
     best = solve_linear(columns.evaluate(theta[None], derivatives=False)[0], columns.target)
     at = np.repeat(theta[None], walkers.count, axis=0)
     linear = np.repeat(best.linear, walkers.count, axis=0)
@@ -84,8 +84,8 @@ def walk(
             matrix, slopes = (np.repeat(a, walkers.count, axis=0) for a in (matrix, slopes))
         if turn < _ROUNDS:
             aims = walkers.aims(at, linear)
-            step = reach(matrix, slopes, linear, residual, rise, aims, free, at, lowest, threshold, variance)
-            at = np.maximum(at + step[:, :3], lowest)
+            step = reach(matrix, slopes, linear, residual, rise, aims, free, at, lowest, highest, threshold, variance)
+            at = np.clip(at + step[:, :3], lowest, highest)
             linear = linear + step[:, 3:]
         elif turn < _ROUNDS + 2:  # secant on the root of the rise, along the chord from the optimum
             off = np.abs(rise / threshold - 1.0) > _CLOSE - 1.0
@@ -93,7 +93,7 @@ def walk(
                 break
             ratio = np.where(off & (rise > 0), np.sqrt(threshold / np.maximum(rise, 1e-3 * threshold)), 1.0)
             ratio = np.clip(ratio, 0.3, 2.0)[:, None]
-            at = np.maximum(theta + ratio * (at - theta), lowest)
+            at = np.clip(theta + ratio * (at - theta), lowest, highest)
             linear = best.linear + ratio * (linear - best.linear)
     # settling time jumps between swings: the jump can lie inside the surface
     ends, end_linear = at, linear
