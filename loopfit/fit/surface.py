@@ -19,8 +19,13 @@ from loopfit.fit.figures_of import Points
 from loopfit.fit.jumps import beside_jumps
 from loopfit.fit.reach import reach
 from loopfit.fit.separable import Solved, solve_linear
+from loopfit.fit.valleys import over_all_shapes
 
 _ROUNDS = 4
+_ROUNDS_AT_MOST = 16
+_FAR = 4.0
+_BACK = 0.3
+_OVERDAMPED = 0.5
 _CLOSE = 1.04
 _CHORD = np.linspace(0.08, 0.96, 12)
 
@@ -65,7 +70,9 @@ def walk(
     sse_best = float(best.sse[0])
     seen = [Points(theta=theta[None], linear=best.linear), _gain_alone(best, theta, threshold * variance)]
     open_damping, better, rise = False, None, np.zeros(walkers.count)
-    for turn in range(_ROUNDS + 3):
+    rounds, turn = _ROUNDS, 0
+    near_at, near_linear = at, linear  # where each walker last stood near the surface
+    while True:
         if turn > 0:
             matrix, slopes = columns.evaluate(at)
             linear, residual, sse = walkers.resolve(matrix, linear)
@@ -82,12 +89,20 @@ def walk(
             matrix, slopes = columns.evaluate(at[:1])
             residual = np.repeat(best.residual, walkers.count, axis=0)
             matrix, slopes = (np.repeat(a, walkers.count, axis=0) for a in (matrix, slopes))
-        if turn < _ROUNDS:
+        lost = ~(rise <= _FAR * threshold)
+        if lost.any() and rounds < _ROUNDS_AT_MOST:
+            rounds += 1
+        if turn < rounds:
             aims = walkers.aims(at, linear)
             step = reach(matrix, slopes, linear, residual, rise, aims, free, at, lowest, highest, threshold, variance)
-            at = np.clip(at + step[:, :3], lowest, highest)
-            linear = linear + step[:, 3:]
-        elif turn < _ROUNDS + 2:  # secant on the root of the rise, along the chord from the optimum
+            ahead_at, ahead_linear = np.clip(at + step[:, :3], lowest, highest), linear + step[:, 3:]
+            # a walker that has left the surface's neighbourhood goes back most of its way before it aims again
+            back_at, back_linear = near_at + _BACK * (at - near_at), near_linear + _BACK * (linear - near_linear)
+            near_at = np.where(lost[:, None], near_at, at)
+            near_linear = np.where(lost[:, None], near_linear, linear)
+            at = np.where(lost[:, None], back_at, ahead_at)
+            linear = np.where(lost[:, None], back_linear, ahead_linear)
+        elif turn < rounds + 2:  # secant on the root of the rise, along the chord from the optimum
             off = np.abs(rise / threshold - 1.0) > _CLOSE - 1.0
             if not off.any():
                 break
@@ -95,6 +110,9 @@ def walk(
             ratio = np.clip(ratio, 0.3, 2.0)[:, None]
             at = np.clip(theta + ratio * (at - theta), lowest, highest)
             linear = best.linear + ratio * (linear - best.linear)
+        else:
+            break
+        turn += 1
     # settling time jumps between swings: the jump can lie inside the surface
     ends, end_linear = at, linear
     share = _CHORD[:, None, None]
@@ -105,6 +123,16 @@ def walk(
     within = rise <= _CLOSE * threshold
     keep = np.tile(within, _CHORD.size)
     seen.append(Points(theta=inside.theta[keep], linear=inside.linear[keep]))
+    if (
+        columns.input is None
+        and columns.chart.by_lags
+        and free[1]
+        and columns.chart.shape(theta[None])[0] < _OVERDAMPED
+    ):
+        valleys = over_all_shapes(columns, threshold=threshold, variance=variance, sse=sse_best)
+        if valleys is not None:
+            seen.append(valleys)
+            open_damping |= bool(np.any(valleys.theta[:, 1] <= lowest[1] + 1e-9))
     if columns.input is not None and columns.rungs == (1,) and free[1]:
         near = beside_jumps(
             columns, Points.joined(seen), free=free, threshold=threshold, variance=variance, sse=sse_best, band=band

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
-from functools import cached_property
+from functools import cached_property, lru_cache
 from typing import Literal
 
 import numpy as np
@@ -39,7 +39,7 @@ class Cell:
     grid: float = 0.0  # resolution, of the change
     other: System | None = None
 
-    @property
+    @cached_property
     def system(self) -> System:
         """The true system."""
         if self.other is not None:
@@ -47,12 +47,16 @@ class Cell:
         assert self.zeta is not None
         return second_order(self.zeta, OMEGA, self.dead_time / OMEGA)
 
-    @property
+    @cached_property
     def known(self) -> dict[str, float]:
         """The true figures."""
         truth = dict(self.system.figures)
         if self.zeta is not None:
-            truth |= {"damping_ratio": self.zeta, "natural_frequency_rad_s": OMEGA, "dead_time_s": self.dead_time / OMEGA}
+            truth |= {
+                "damping_ratio": self.zeta,
+                "natural_frequency_rad_s": OMEGA,
+                "dead_time_s": self.dead_time / OMEGA,
+            }
         truth["gain"] = 1.0 if self.record == "closed loop" else GAIN
         return truth
 
@@ -73,7 +77,7 @@ class Cell:
             gaps = np.random.default_rng(self.rows).uniform(*_GAPS, self.rows - 1)
             time = np.concatenate([[0.0], np.cumsum(gaps / gaps.sum())]) * float(np.ptp(time)) + time[0]
         if isinstance(self.system, SampledLoop):
-            every = max(int(round(float(time[1] - time[0]) / self.system.scan)), 1)
+            every = max(round(float(time[1] - time[0]) / self.system.scan), 1)
             first = every * int(np.argmax(time >= 0.0))
             return self.system.scan * (every * np.arange(self.rows, dtype=np.float64) - first)
         return time - time[int(np.argmax(time >= 0.0))]
@@ -110,7 +114,7 @@ class Cell:
         """Return one measurement."""
         size = abs(self.change) / self.ratio
         if isinstance(self.system, SampledLoop):
-            every = int(round(float(self.time[1] - self.time[0]) / self.system.scan))
+            every = round(float(self.time[1] - self.time[0]) / self.system.scan)
             forget = 50 * every
             disturbed = self.system.disturbed(rng.standard_normal(forget + self.rows * every))[forget::every]
             return self.clean + size * disturbed / _rms_of_loop(self.system)
@@ -151,6 +155,7 @@ class Cell:
         return dict(zip(names, spreads.tolist(), strict=True)), weights
 
 
+@lru_cache
 def _rms_of_loop(loop: SampledLoop) -> float:
     pulse = np.zeros(100 * loop.delay_scans)
     pulse[0] = 1.0
@@ -180,10 +185,7 @@ CELLS: tuple[Cell, ...] = (
     ),
     *(replace(CENTRE, group="SNR", name=f"SNR {ratio:g}", ratio=ratio) for ratio in (5.0, 10.0, 20.0, 100.0, 200.0)),
     *(replace(CENTRE, group="rows", name=f"rows {rows}", rows=rows) for rows in (30, 60, 120, 1000, 3000)),
-    *(
-        replace(CENTRE, group="dead time", name=f"dead time {dead:g}/omega", dead_time=dead)
-        for dead in (0.0, 1.0, 2.0)
-    ),
+    *(replace(CENTRE, group="dead time", name=f"dead time {dead:g}/omega", dead_time=dead) for dead in (0.0, 1.0, 2.0)),
     *(
         replace(CENTRE, group="noise", name=noise.name, noise=noise)
         for noise in (
