@@ -11,7 +11,15 @@ from functools import partial
 from numpy.typing import ArrayLike
 
 from loopfit.analysis.assess import assess
-from loopfit.analysis.circumstances import about_rows, around_the_step, other_inputs, output_limits, standing_offset
+from loopfit.analysis.circumstances import (
+    about_rows,
+    apart_from_record,
+    around_the_step,
+    drifting_tail,
+    other_inputs,
+    output_limits,
+    standing_offset,
+)
 from loopfit.analysis.figures import model_of, response_of
 from loopfit.analysis.prepared import StatedStep
 from loopfit.analysis.result import Analysis, ObservedFigures, StepFigures, StepUsed
@@ -170,11 +178,14 @@ def analyze_record(
     if model is not None:
         findings += around_the_step(trace, fit, figures, noise)
         findings += about_rows(trace, fit, noise)
+        findings += drifting_tail(trace, fit, figures, noise)
+        findings += apart_from_record(observed, figures)
         findings += about_swings(trace, best.plain, noise, change_of(best.plain, trace))
         if prepared.step is not None:
             findings += other_inputs(record, trace, prepared.step)
             findings += output_limits(record, trace, prepared.step)
-            findings += standing_offset(observed, figures["gain"], prepared.step)
+            if not fit.structure.drift:
+                findings += standing_offset(observed, figures["gain"], prepared.step)
     return Analysis(
         record=record,
         findings=tuple(findings),
@@ -202,7 +213,7 @@ def _taken_together(count: int) -> Finding:
 
 
 def _observed(step: StepUsed | None, trace: Trace, band: float, confidence: float, noise: float) -> ObservedFigures:
-    if step is None:
+    if step is None or step.size == 0:
         return ObservedFigures()
     setpoint = step.to if step.signal == "setpoint" else None
     seen = observe(

@@ -9,7 +9,7 @@ import numpy as np
 from loopfit.analysis.result import ObservedFigures, StepUsed
 from loopfit.core.finding import Finding
 from loopfit.core.quantity import Quantity
-from loopfit.fit.choose import change_of, moves_before_step
+from loopfit.fit.choose import change_of, clear_trend, moves_before_step
 from loopfit.fit.estimate import Fit, Trace
 from loopfit.record.record import Record
 from loopfit.step.detect import find_steps
@@ -17,6 +17,7 @@ from loopfit.step.limits import rows_at_limit, steepest_runs
 from loopfit.step.noise import resolution
 
 _ENOUGH = 0.8  # of the change must be in the record
+_DRIFT = 0.01  # of the change
 _OFFSET = 0.02  # of the step
 _OFFSET_LARGE = 0.05
 _INPUT_CHANGES = 12  # a column with more is no other input that was stepped
@@ -68,6 +69,51 @@ def around_the_step(trace: Trace, fit: Fit, figures: dict[str, Quantity | None],
         text = f"The measurement has not settled when the record ends; {longer} to see it settle."
         findings.append(Finding(code="not_settled", severity="warning", at_s=(end, end), text=text))
     return findings
+
+
+def drifting_tail(trace: Trace, fit: Fit, figures: dict[str, Quantity | None], noise: float) -> list[Finding]:
+    """Name a trend among the rows after the response has settled."""
+    settling = figures.get("settling_time_s")
+    if trace.input is None or settling is None or not math.isfinite(settling.value) or fit.structure.drift:
+        return []
+    rows = trace.time >= trace.last_change + 1.2 * settling.value
+    t, y = trace.time[rows], trace.values[rows]
+    trend = clear_trend(t, y, noise)
+    change = abs(change_of(fit, trace))
+    if trend is None or change == 0 or abs(trend) < _DRIFT * change:
+        return []
+    return [
+        Finding(
+            code="drifting_tail",
+            severity="warning",
+            at_s=(float(t[0]), float(t[-1])),
+            text=f"After it has settled the measurement still drifts by {abs(trend):.2g} ({100 * abs(trend) / change:.1f} % of the "
+            "change): gain and final value carry part of it, beyond their intervals.",
+        )
+    ]
+
+
+def apart_from_record(observed: ObservedFigures, figures: dict[str, Quantity | None]) -> list[Finding]:
+    """Name figures for which model and record exclude each other."""
+    names = {"overshoot_percent": "overshoot", "rise_time_s": "rise time", "delay_time_s": "delay time"}
+    apart = []
+    for name, words in names.items():
+        seen, modelled = getattr(observed, name), figures.get(name)
+        if seen is None or modelled is None:
+            continue
+        slack = 0.02 * abs(modelled.value) if name != "overshoot_percent" else 0.5
+        if seen.low > modelled.high + slack or seen.high < modelled.low - slack:
+            apart.append(words)
+    if not apart:
+        return []
+    return [
+        Finding(
+            code="model_and_record_differ",
+            severity="warning",
+            text=f"Model and record exclude each other in {' and '.join(apart)}: believe the record's own figures there, and the "
+            "model's damping only as that of an equivalent.",
+        )
+    ]
 
 
 def _held_away(trace: Trace) -> bool:
@@ -185,8 +231,10 @@ def standing_offset(observed: ObservedFigures, model_gain: Quantity | None, step
     if step.signal != "setpoint":
         return []
     deviation = observed.steady_state_deviation
-    if deviation is None and model_gain is not None:
-        deviation = model_gain.scaled(-1.0).shifted(1.0).scaled(step.size)
+    if model_gain is not None:
+        modelled = model_gain.scaled(-1.0).shifted(1.0).scaled(step.size)
+        if deviation is None or modelled.high - modelled.low < deviation.high - deviation.low:
+            deviation = modelled
     if deviation is None or deviation.low <= 0.0 <= deviation.high:
         return []
     share = abs(deviation.value / step.size)

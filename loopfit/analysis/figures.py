@@ -31,9 +31,9 @@ def model_of(fit: Fit, figures: Figures, verdict: Verdict, interval: float) -> M
         natural_frequency_rad_s=_frequency(figures["natural_frequency_rad_s"], damping),
         damped_frequency_rad_s=None if kind == "dead_time" else figures["damped_frequency_rad_s"],
         damped_period_s=None if kind == "dead_time" else figures["damped_period_s"],
-        dead_time_s=figures["dead_time_s"],
+        dead_time_s=_between_rows(figures["dead_time_s"], interval) if kind == "dead_time" else figures["dead_time_s"],
         time_constants_s=_lags(kind, figures["slow_time_constant_s"], figures["fast_time_constant_s"]),
-        lag_plus_dead_time_s=figures["lag_plus_dead_time_s"],
+        lag_plus_dead_time_s=None if kind == "dead_time" else figures["lag_plus_dead_time_s"],
         zero_s=figures["zero_s"],
         regime=None if damping is None else regime(damping),
         residual_rms=math.sqrt(fit.sse / fit.columns.samples.rows),
@@ -41,6 +41,13 @@ def model_of(fit: Fit, figures: Figures, verdict: Verdict, interval: float) -> M
         adequate=verdict.adequate,
         reasons=verdict.reasons,
     )
+
+
+def _between_rows(dead_time: Quantity | None, interval: float) -> Quantity | None:
+    """Return the dead time of a jump: a record can tell it no closer than the rows before and after."""
+    if dead_time is None:
+        return None
+    return Quantity(dead_time.value, max(dead_time.low - interval, 0.0), dead_time.high + interval)
 
 
 def _kind(fit: Fit, figures: Figures, interval: float) -> Kind:
@@ -97,8 +104,20 @@ def regime(damping: Quantity) -> str:
 
 def response_of(fit: Fit, figures: Figures, points: Points, band: float, model: Model) -> ResponseFigures | None:
     """Return the figures of the model's response; None where it has no final value."""
-    if model.kind in ("integrating", "dead_time"):
+    if model.kind == "integrating":
         return None
+    if model.kind == "dead_time":
+        assert model.dead_time_s is not None
+        rise = model.dead_time_s.high - model.dead_time_s.value
+        return ResponseFigures(
+            overshoot_percent=Quantity(0.0, 0.0, 0.0),
+            peak_time_s=None,
+            rise_time_s=Quantity(0.0, 0.0, rise),
+            settling_time_s=model.dead_time_s,
+            delay_time_s=model.dead_time_s,
+            decay_ratio=None,
+            rest_crossings=None,
+        )
     return ResponseFigures(
         overshoot_percent=figures["overshoot_percent"],
         peak_time_s=figures["peak_time_s"],

@@ -187,6 +187,20 @@ def _between(record: Record, found: StepsFound, step: Step, begin: int, end: int
     )
 
 
+def _blip(record: Record, found: StepsFound, row: int) -> Finding:
+    name = found.steps[0].signal
+    signal = record.setpoint if name == "setpoint" else record.output
+    assert signal is not None
+    at = float(record.time[row])
+    return Finding(
+        code="one_row_change",
+        severity="warning",
+        at_s=(at, at),
+        text=f"The {name} reads {signal.values[row]:g} in one row only, at {at:.6g} s, between rows at {signal.values[row - 1]:g}: "
+        "taken for a false reading, not for a pulse.",
+    )
+
+
 def _used(step: Step, *, used: bool) -> StepUsed:
     return StepUsed(signal=step.signal, time_s=step.time_s, from_=step.from_, to=step.to, used=used)
 
@@ -200,7 +214,7 @@ def _thinned(rows: np.ndarray, sizes: Array) -> tuple[np.ndarray, Array]:
 
 
 def _about_steps(record: Record, found: StepsFound, number: int | None) -> tuple[Finding, ...]:
-    findings = []
+    findings = [_blip(record, found, row) for row in found.blips]
     count = len(found.steps)
     if number is not None and count > 1:
         one = found.steps[number - 1]

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import contextlib
+import os
 import sys
 from typing import Annotated
 
@@ -9,6 +11,7 @@ import typer
 
 from loopfit import __version__
 from loopfit.cli.analyze import analyze_command
+from loopfit.cli.exits import UNUSABLE_INPUT
 
 app = typer.Typer(
     name="loopfit",
@@ -43,7 +46,13 @@ def main() -> None:
     for stream in (sys.stdout, sys.stderr):
         if hasattr(stream, "reconfigure"):
             stream.reconfigure(errors="replace")  # a terminal that cannot show a degree sign
-    app()
+    try:
+        app()
+    except OSError as error:  # a full disk, a closed pipe
+        reason = error.strerror or str(error)
+        with contextlib.suppress(OSError):
+            sys.stderr.write(f"loopfit: the output could not be written: {reason}\n")
+        os._exit(UNUSABLE_INPUT)  # the interpreter would try to flush the same stream again
 
 
 if __name__ == "__main__":

@@ -6,6 +6,8 @@ import math
 
 from loopfit.core.quantity import Quantity
 
+_MOST_DIGITS = 6
+
 
 def decimals_for(spread: float, value: float) -> int:
     """Return the decimals that show the spread to one figure, or to two when it begins with 1.
@@ -32,4 +34,7 @@ def decimals_of(quantity: Quantity) -> int:
     """Return the decimals that suit a quantity's interval."""
     ends = [bound for bound in (quantity.low, quantity.high) if math.isfinite(bound)]
     spread = max((abs(quantity.value - bound) for bound in ends), default=0.0)
-    return min(decimals_for(spread, quantity.value), 9)
+    places = decimals_for(spread, quantity.value)
+    if quantity.value != 0 and math.isfinite(quantity.value):
+        places = min(places, _MOST_DIGITS - 1 - math.floor(math.log10(abs(quantity.value))))
+    return min(places, 9)

@@ -129,7 +129,7 @@ def smooth(time: Array, measurement: Array, before: Array, least_noise: float = 
     # single precision is enough to weigh the combinations and halves the time
     spectrum = colour[:, None, None, 1:].astype(np.float32) + bend.astype(np.float32)
     largest = max(float(power.max()), 1e-300)
-    excess = ((1 / spectrum) @ (power / largest).astype(np.float32)) * largest + rest[:, None, None]
+    excess = ((1 / spectrum) @ (power / largest).astype(np.float32)).astype(np.float64) * largest + rest[:, None, None]
     floor = max(least_noise**2 / rows, (1e-9 * float(np.ptp(measurement))) ** 2, 1e-300)
     scale = np.maximum(excess / total, floor * (1 - _COLOURS[:, None, None] ** 2))
     logarithm = np.log(spectrum).sum(-1, dtype=np.float64) + rest_log[:, None, None]

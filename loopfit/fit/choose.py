@@ -6,6 +6,7 @@ import math
 
 import numpy as np
 
+from loopfit.core.arrays import Array
 from loopfit.fit.estimate import Fit, Structure, Trace, fit_trace
 
 _STRUCTURED = 4.0  # standard errors of the residual's neighbour correlation that raise doubt
@@ -91,7 +92,15 @@ def moves_before_step(trace: Trace, noise: float) -> bool:
     rows = trace.step_row
     if rows < _REST_ROWS:
         return False
-    t, y = trace.time[:rows], trace.values[:rows]
+    trend = clear_trend(trace.time[:rows], trace.values[:rows], noise)
+    return trend is not None and abs(trend) > 0.03 * float(np.ptp(trace.values))
+
+
+def clear_trend(t: Array, y: Array, noise: float) -> float | None:
+    """Return how far a straight line travels over some rows; None where their noise, colour and all, explains it."""
+    rows = t.size
+    if rows < _REST_ROWS:
+        return None
     centred = t - t.mean()
     width = float(centred @ centred)
     slope = float(centred @ y) / width
@@ -100,8 +109,7 @@ def moves_before_step(trace: Trace, noise: float) -> bool:
     colour = min(max(neighbour, 0.0) + 2.0 / rows, 0.95)
     spread = max(float(rest @ rest) / (rows - 2), noise**2)
     error = math.sqrt(spread / width * (1.0 + colour) / (1.0 - colour))
-    travelled = abs(slope) * float(t[-1] - t[0])
-    return abs(slope) > 5.0 * error and travelled > 0.03 * float(np.ptp(trace.values))
+    return slope * float(t[-1] - t[0]) if abs(slope) > 5.0 * error else None
 
 
 def wanders_before_step(trace: Trace, noise: float, change: float) -> bool:

@@ -18,7 +18,7 @@ from loopfit.fit.samples import Samples
 from loopfit.model.chart import Chart
 from loopfit.model.shape import ladder, ladder_by_shape
 
-_LONGEST_RELEASE = 1.5  # spans: beyond, a slow decay is a drift to the record
+_LONGEST_RELEASE = 3.0  # spans: beyond, a slow decay is a drift to the record
 _LONGEST = 100.0
 
 

@@ -42,9 +42,9 @@ def reach(
     for _ in range(6):
         step = _step_to_surface(H, b, aims, rise, held, move, threshold)
         # a bound first: without it the rest of the step may be short enough
-        bounded = np.clip(step[:, :3], lowest - at, highest - at)
-        crossing = (np.abs(bounded - step[:, :3]) > 1e-12) & ~held[:, :3]
-        capped = np.clip(step[:, :3], -limit, limit)
+        bounded = np.maximum(step[:, :3], lowest - at)
+        crossing = (bounded - step[:, :3] > 1e-12) & ~held[:, :3]
+        capped = np.clip(step[:, :3], -limit, np.minimum(limit, highest - at))
         leaping = (capped != step[:, :3]) & ~held[:, :3] & ~crossing.any(axis=1, keepdims=True)
         if not (crossing | leaping).any():
             break

@@ -89,17 +89,17 @@ def walk(
             matrix, slopes = columns.evaluate(at[:1])
             residual = np.repeat(best.residual, walkers.count, axis=0)
             matrix, slopes = (np.repeat(a, walkers.count, axis=0) for a in (matrix, slopes))
-        lost = ~(rise <= _FAR * threshold)
+        # re-aiming brings most walkers back at once; one that stays away for as many rounds must turn back
+        lost = ~(rise <= _FAR * threshold) & (turn >= _ROUNDS)
         if lost.any() and rounds < _ROUNDS_AT_MOST:
             rounds += 1
         if turn < rounds:
             aims = walkers.aims(at, linear)
             step = reach(matrix, slopes, linear, residual, rise, aims, free, at, lowest, highest, threshold, variance)
             ahead_at, ahead_linear = np.clip(at + step[:, :3], lowest, highest), linear + step[:, 3:]
-            # a walker that has left the surface's neighbourhood goes back most of its way before it aims again
             back_at, back_linear = near_at + _BACK * (at - near_at), near_linear + _BACK * (linear - near_linear)
-            near_at = np.where(lost[:, None], near_at, at)
-            near_linear = np.where(lost[:, None], near_linear, linear)
+            near = (rise <= _FAR * threshold)[:, None]
+            near_at, near_linear = np.where(near, at, near_at), np.where(near, linear, near_linear)
             at = np.where(lost[:, None], back_at, ahead_at)
             linear = np.where(lost[:, None], back_linear, ahead_linear)
         elif turn < rounds + 2:  # secant on the root of the rise, along the chord from the optimum
@@ -134,10 +134,10 @@ def walk(
             seen.append(valleys)
             open_damping |= bool(np.any(valleys.theta[:, 1] <= lowest[1] + 1e-9))
     if columns.input is not None and columns.rungs == (1,) and free[1]:
-        near = beside_jumps(
+        beside = beside_jumps(
             columns, Points.joined(seen), free=free, threshold=threshold, variance=variance, sse=sse_best, band=band
         )
-        seen += [] if near is None else [near]
+        seen += [] if beside is None else [beside]
     return Surface(points=Points.joined(seen), open_damping=open_damping, better=None if better is None else better[1])
 
 

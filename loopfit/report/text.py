@@ -10,7 +10,7 @@ from loopfit.core.quantity import Quantity
 from loopfit.core.rounding import decimals_for, decimals_of, number
 from loopfit.record.record import Signal
 
-_NAME, _UNIT, _VALUE, _RANGE = 23, 12, 11, 24
+_NAME, _UNIT, _VALUE, _RANGE = 23, 12, 11, 23
 _WIDTH, _LABEL = 100, 13
 _ORDER = ("error", "warning", "note")
 _KINDS = {
@@ -90,7 +90,10 @@ def _record(analysis: Analysis) -> str:
     used = f"{record.time.size} rows"
     if record.rows != record.time.size:
         used = f"{record.time.size} of {record.rows} rows"
-    lines = [f"record       {record.source}: {used}, every {record.sample_interval_s:.4g} s, {record.duration_s:.5g} s"]
+    lines = [
+        f"record       {'standard input' if record.source == '-' else record.source}: {used}, every "
+        f"{record.sample_interval_s:.4g} s, over {record.duration_s:.5g} s"
+    ]
     lines.append(
         "columns      "
         + ", ".join(
@@ -136,7 +139,7 @@ def _table(analysis: Analysis) -> str:
     stepped = stepped_signal(analysis)
     per = f"{unit or '-'}/{stepped.unit}" if stepped is not None and stepped.unit and stepped.unit != unit else ""
     confidence = f"{analysis.confidence_percent:g} % interval"
-    head = f"{'':{_NAME}}{'':{_UNIT}}{'model':>{_VALUE}}  {confidence:<{_RANGE}}record shows"
+    head = f"{'':{_NAME}}{'':{_UNIT}}{'model':>{_VALUE}}  {confidence:<{_RANGE}} record shows"
     rows = [head.rstrip()]
     if model is not None:
         lags = model.time_constants_s or ()
@@ -217,7 +220,7 @@ def _rows(*rows: tuple[str, str, Quantity | None, Quantity | None]) -> list[str]
         if modelled is None and seen is None:
             continue
         value, interval = _cells(modelled)
-        out.append(f"{name:{_NAME}}{unit:{_UNIT}}{value:>{_VALUE}}  {interval:<{_RANGE}}{_seen(seen)}".rstrip())
+        out.append(f"{name:{_NAME}}{unit:{_UNIT}}{value:>{_VALUE}}  {interval:<{_RANGE}} {_seen(seen)}".rstrip())
     return out
 
 

@@ -40,7 +40,8 @@ class Step:
 class StepsFound:
     """The steps of one column, and every change of its level: `rows` (J,), `sizes` (J,).
 
-    `noise`: the column's own noise, 0 when it is clean. `always_moving`: no levels can be told.
+    `noise`: the column's own noise, 0 when it is clean. `always_moving`: no levels can be told. `blips`: rows that
+    differ alone from equal rows on both sides, taken for false readings and not counted as changes.
     """
 
     steps: tuple[Step, ...]
@@ -48,6 +49,7 @@ class StepsFound:
     sizes: Array
     noise: float
     always_moving: bool
+    blips: tuple[int, ...] = ()
 
 
 def column_noise(values: Array) -> float:
@@ -73,6 +75,12 @@ def find_steps(time: Array, values: Array, signal: Stepped) -> StepsFound:
     spread = float(np.ptp(values))
     if spread == 0:
         return nothing
+    blips = _lone_rows(values)
+    if blips:
+        values = values.copy()
+        for row in blips:
+            values[row] = values[row - 1]
+        return replace(find_steps(time, values, signal), blips=blips)
     differences = np.diff(values)
     noise = column_noise(values)
     if noise == 0:
@@ -87,6 +95,18 @@ def find_steps(time: Array, values: Array, signal: Stepped) -> StepsFound:
     return StepsFound(
         steps=_moves(time, values, rows, sizes, signal, noise), rows=rows, sizes=sizes, noise=noise, always_moving=False
     )
+
+
+def _lone_rows(values: Array) -> tuple[int, ...]:
+    """Return rows that differ alone while three rows on each side are equal to each other."""
+    n = values.size
+    if n < 8:
+        return ()
+    inside = np.arange(3, n - 3)
+    sides = [values[inside + k] for k in (-3, -2, -1, 1, 2, 3)]
+    level = sides[2]
+    alone = np.all([side == level for side in sides], axis=0) & (values[inside] != level)
+    return tuple(int(row) for row in inside[alone])
 
 
 def _noisy_changes(values: Array, noise: float, spread: float) -> tuple[np.ndarray, Array]:
