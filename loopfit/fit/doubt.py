@@ -29,6 +29,8 @@ _MEMBERS = 12
 _GRID = 3000
 _SPANS = 3.0
 _DIFFERENCE = 0.02
+_CLOSE = 1.1
+_LONGEST = 0.4  # of the span after the step
 _LOWEST = np.append(LAGS.lowest, np.log(_LEAST_LAG))
 
 
@@ -79,9 +81,10 @@ def doubted_response(
         degrees, factor = max(min(degrees, int(rows - 5)), 4), 1.0 + 6.0 / rows
     if (fit.sse - float(solved.sse[best])) / variance < _CLEARLY:
         return None
-    allowed = factor * quantile_of_f(confidence, degrees) - (solved.sse - solved.sse[best]) / variance
+    limit, least = factor * quantile_of_f(confidence, degrees), float(solved.sse[best])
+    allowed = limit - (solved.sse - least) / variance
     kept = np.flatnonzero(allowed > 0)
-    table = _reach(found, columns, slopes, solved.linear, allowed, kept, variance, trace, band)
+    table = _reach(family, found, columns, slopes, solved.linear, allowed, kept, variance, limit, least, trace, band)
     return {name: _widened(figures[name], values) for name, values in table.items()}
 
 
@@ -127,8 +130,8 @@ def _caps(theta: Array) -> Array:
 
 
 def _reach(
-    theta: Array, columns: Array, slopes: Array, linear: Array, allowed: Array, kept: NDArray[np.intp],
-    variance: float, trace: Trace, band: float,
+    family: ThirdLag, theta: Array, columns: Array, slopes: Array, linear: Array, allowed: Array, kept: NDArray[np.intp],
+    variance: float, limit: float, least: float, trace: Trace, band: float,
 ) -> dict[str, Array]:  # fmt: skip
     """Return each figure at every kept member and at the ends of its own interval there."""
     jacobian = np.concatenate([(linear[:, None, None, :2] @ slopes)[:, :, 0, :], columns[:, :2]], axis=1)
@@ -158,10 +161,31 @@ def _reach(
             ends = points[i][None]
             if length > 0:
                 move = along * np.sqrt(allowed[i] / length)
-                ends = np.stack([points[i] + share * move for share in (-1.0, -0.5, 0.5, 1.0)])
+                ends = points[i] + np.linspace(-1.0, 1.0, 9)[:, None] * move
+                ends = ends[(_squares(family, ends) - least) / variance <= _CLOSE * limit]
+            ends = ends[_slowest(ends) <= _LONGEST * trace.span]
+            if ends.size == 0:
+                continue
             reached = _figures(ends, trace, band)[name]
             out.setdefault(name, []).append(np.append(reached, values[0]))
     return {name: np.concatenate(parts) for name, parts in out.items()}
+
+
+def _slowest(points: Array) -> Array:
+    """Return the longest lag at each point, s: one far beyond the record is a drift to it, not a response."""
+    scale, shape = LAGS.scale(points[:, :3]), LAGS.shape(points[:, :3])
+    slow: Array = scale * 0.5 * (1.0 + np.sqrt(np.maximum(1.0 - 4.0 * shape, 0.0)))
+    return np.maximum(slow, scale * np.sqrt(shape + R_SHIFT) * np.exp(np.minimum(points[:, 3], 5.0)))
+
+
+def _squares(family: ThirdLag, points: Array) -> Array:
+    """Return the sum of squares at points (P, 6), offset and drift solved anew: a straight line leaves the surface."""
+    columns = family.values(np.maximum(points[:, :4], _LOWEST))
+    rest = family.columns.target - np.einsum("pq,pqn->pn", points[:, 4:6], columns[:, :2])
+    basis = np.linalg.qr(columns[0, 2:].T)[0]
+    rest = rest - (rest @ basis) @ basis.T
+    squares: Array = np.einsum("pn,pn->p", rest, rest)
+    return squares
 
 
 def _figures(points: Array, trace: Trace, band: float) -> dict[str, Array]:
