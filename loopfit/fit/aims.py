@@ -132,8 +132,9 @@ class Walkers:
         out = {}
         for k, i in enumerate(wanted):
             values = table[self.by_difference[self.names[i]]].reshape(len(walkers), 2, size)[2 * k : 2 * k + 2]
-            slope = (values[:, 0] - values[:, 1]) / (2.0 * nudges[2 * k : 2 * k + 2])
-            out[self.names[i]] = np.where(np.isfinite(slope), slope, 0.0)
+            both = np.isfinite(values).all(axis=1)
+            rise = np.where(both, values[:, 0], 0.0) - np.where(both, values[:, 1], 0.0)
+            out[self.names[i]] = rise / (2.0 * nudges[2 * k : 2 * k + 2])
         return out
 
     def _conversions(self, theta: Array, r: Array) -> tuple[Array, Array]:

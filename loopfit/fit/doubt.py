@@ -22,6 +22,7 @@ from loopfit.model.chart import LAGS, R_SHIFT
 
 _LAGS = (0.03, 0.15, 0.3, 0.5, 0.8, 1.2, 1.8, 2.8)  # over omega_n, about
 _LEAST_LAG = 0.02
+_LARGEST_LAG, _LARGEST_SHAPE = 4.0, 10.0  # logarithms
 _REFINED = 4
 _CLEARLY = 4.0  # drop of the squares, in noise powers, from which the second order is doubted
 _LOOK = 6.0  # noise powers by the score test, from which the family is fitted
@@ -58,12 +59,21 @@ def doubted_response(
         return None
     family = ThirdLag(columns=fit.columns)
     target = fit.columns.target
+    highest = np.array([fit.columns.highest[0], _LARGEST_SHAPE, np.inf, _LARGEST_LAG])
     fixed_lag, any_lag = np.array([True, True, True, False]), np.ones(4, dtype=bool)
     first = minimise(
-        family.evaluate, target, start, lowest=_LOWEST, free=fixed_lag, caps=_caps, tolerance=1e-3, rounds=25
+        family.evaluate,
+        target,
+        start,
+        lowest=_LOWEST,
+        highest=highest,
+        free=fixed_lag,
+        caps=_caps,
+        tolerance=1e-3,
+        rounds=25,
     )
     order = np.argsort(first.sse)
-    last = minimise(family.evaluate, target, first.theta[order[:_REFINED]], lowest=_LOWEST, free=any_lag, caps=_caps,
+    last = minimise(family.evaluate, target, first.theta[order[:_REFINED]], lowest=_LOWEST, highest=highest, free=any_lag, caps=_caps,
                     tolerance=1e-4, rounds=40)  # fmt: skip
     found = np.concatenate([last.theta, first.theta[order[: _MEMBERS - _REFINED]]])
     columns, slopes = family.evaluate(found)
@@ -180,7 +190,7 @@ def _slowest(points: Array) -> Array:
 
 def _squares(family: ThirdLag, points: Array) -> Array:
     """Return the sum of squares at points (P, 6), offset and drift solved anew: a straight line leaves the surface."""
-    columns = family.values(np.maximum(points[:, :4], _LOWEST))
+    columns = family.values(np.clip(points[:, :4], _LOWEST, [np.inf, _LARGEST_SHAPE, np.inf, _LARGEST_LAG]))
     rest = family.columns.target - np.einsum("pq,pqn->pn", points[:, 4:6], columns[:, :2])
     basis = np.linalg.qr(columns[0, 2:].T)[0]
     rest = rest - (rest @ basis) @ basis.T
@@ -190,7 +200,7 @@ def _squares(family: ThirdLag, points: Array) -> Array:
 
 def _figures(points: Array, trace: Trace, band: float) -> dict[str, Array]:
     """Return the figures of responses at points (P, 6): T, r, dead time, third lag, gain, zero."""
-    theta = np.maximum(points[:, :4], _LOWEST)
+    theta = np.clip(points[:, :4], _LOWEST, [np.inf, _LARGEST_SHAPE, np.inf, _LARGEST_LAG])
     scale = LAGS.scale(theta)
     time = np.linspace(0.0, _SPANS * trace.span, _GRID)
     x = (time[None, :] - theta[:, 2:3]) / scale[:, None]
