@@ -8,6 +8,7 @@ from collections.abc import Mapping
 from dataclasses import replace
 from functools import partial
 
+import numpy as np
 from numpy.typing import ArrayLike
 
 from loopfit.analysis.assess import assess
@@ -30,11 +31,15 @@ from loopfit.core.errors import RecordError, UsageError
 from loopfit.core.finding import Finding
 from loopfit.core.quantity import Quantity
 from loopfit.figures.observed import observe
+from loopfit.figures.swings import find_swings
 from loopfit.fit.choose import change_of
 from loopfit.fit.estimate import Trace
 from loopfit.record.read import read_record, record_from_arrays
 from loopfit.record.record import Record
 from loopfit.step.noise import noise_rms, resolution
+
+_SWINGS_TO_COMPARE = 3
+_CLEAR = 15.0
 
 
 def analyze(
@@ -89,6 +94,14 @@ def analyze(
     RecordError
         If the record cannot be used.
     """
+    _check_types(band_percent=band_percent, confidence_percent=confidence_percent, interval_s=interval_s,
+                 step_at_s=step_at_s, step_from=step_from, step_to=step_to)  # fmt: skip
+    if window_s is not None:
+        if not isinstance(window_s, tuple | list) or len(window_s) != 2:
+            raise UsageError("window_s is a pair: from and to, either may be None")
+        _check_types(window_from=window_s[0], window_to=window_s[1])
+    if step is not None and (isinstance(step, bool) or not isinstance(step, int)):
+        raise UsageError(f"step is a whole number, not {step!r}")
     if not 0 < band_percent < 50:
         raise UsageError(f"the settling band must be above 0 and below 50 %, not {band_percent:g}")
     if not 50 <= confidence_percent < 100:
@@ -123,6 +136,14 @@ def analyze(
     return analyze_record(
         record, step=step, stated=stated, band_percent=band_percent, confidence_percent=confidence_percent
     )
+
+
+def _check_types(**numbers: object) -> None:
+    for name, value in numbers.items():
+        if value is not None and (
+            isinstance(value, bool) or not isinstance(value, int | float | np.integer | np.floating)
+        ):
+            raise UsageError(f"{name} is a number, not {value!r}")
 
 
 def _stated(at: float | None, from_: float | None, to: float | None) -> StatedStep | None:
@@ -213,7 +234,9 @@ def _taken_together(count: int) -> Finding:
 
 
 def _observed(step: StepUsed | None, trace: Trace, band: float, confidence: float, noise: float) -> ObservedFigures:
-    if step is None or step.size == 0:
+    if step is None:
+        return _observed_release(trace, confidence, noise)
+    if step.size == 0:
         return ObservedFigures()
     setpoint = step.to if step.signal == "setpoint" else None
     seen = observe(
@@ -231,3 +254,22 @@ def _observed(step: StepUsed | None, trace: Trace, band: float, confidence: floa
         past = seen.peak_value.shifted(-step.to).scaled(percent)
         figures["overshoot_over_setpoint_percent"] = Quantity(*(max(x, 0.0) for x in (past.value, past.low, past.high)))
     return ObservedFigures(**figures)
+
+
+def _observed_release(trace: Trace, confidence: float, noise: float) -> ObservedFigures:
+    """Return what a release shows without a model: where it begins, and the decay of its swings."""
+    from scipy.special import ndtri  # the other quantiles need it too: already there
+
+    rest = float(np.mean(trace.values[-max(5, trace.values.size // 10) :]))
+    heights = find_swings(trace.time, trace.values - rest, noise).heights
+    heights = heights[heights > _CLEAR * noise]  # smaller ones are raised by the noise they stand in
+    first = float(trace.values[0])
+    width = float(ndtri(0.5 + 0.5 * confidence)) * noise
+    begin = Quantity(first, first - width, first + width)
+    if heights.size < _SWINGS_TO_COMPARE:
+        return ObservedFigures(initial_value=begin)
+    swings = heights.size - 1
+    ratio = float((heights[-1] / heights[0]) ** (2.0 / swings))  # two swings make a period
+    error = 2.0 / swings * width * math.hypot(1.0 / heights[0], 1.0 / heights[-1])
+    decay = Quantity(ratio, max(ratio * (1.0 - error), 0.0), ratio * (1.0 + error))
+    return ObservedFigures(initial_value=begin, decay_ratio=decay)

@@ -51,7 +51,9 @@ def solve_linear(columns: Array, target: Array) -> Solved:
     """
     basis, triangle = np.linalg.qr(np.swapaxes(columns, 1, 2))
     diagonal = np.abs(np.diagonal(triangle, axis1=1, axis2=2))
-    lost = diagonal <= 1e-13 * np.linalg.norm(triangle, axis=1) + 1e-150  # each against its own length: units do not matter
+    lost = (
+        diagonal <= 1e-13 * np.linalg.norm(triangle, axis=1) + 1e-150
+    )  # each against its own length: units do not matter
     if lost.any():
         basis = np.where(lost[:, None, :], 0.0, basis)
         triangle = np.where(lost[:, None, :], 0.0, triangle)

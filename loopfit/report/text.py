@@ -28,7 +28,7 @@ def page(analysis: Analysis) -> str:
     if analysis.model is not None or _observed_rows(analysis):
         parts.append(_table(analysis))
     if analysis.model is not None:
-        parts.append(_model_line(analysis.model))
+        parts.append(_model_line(analysis.model, release=analysis.step is None))
     if analysis.per_step:
         parts.append(_per_step(analysis))
     if analysis.findings:
@@ -227,8 +227,8 @@ def _rows(*rows: tuple[str, str, Quantity | None, Quantity | None]) -> list[str]
 def _cells(quantity: Quantity | None) -> tuple[str, str]:
     if quantity is None:
         return "", ""
-    if quantity.value == quantity.low == quantity.high == 0.0:
-        return "0", ""
+    if quantity.value == quantity.low == quantity.high and quantity.value == round(quantity.value):
+        return f"{quantity.value:.0f}", ""  # a count, or nothing at all
     places = decimals_of(quantity)
     value = number(quantity.value, places) if math.isfinite(quantity.value) else "none"
     if math.isinf(quantity.high):
@@ -244,9 +244,10 @@ def _seen(quantity: Quantity | None) -> str:
     return f"{value} ({interval})" if interval else value
 
 
-def _model_line(model: Model) -> str:
+def _model_line(model: Model, *, release: bool) -> str:
     verdict = "adequate" if model.adequate else "NOT adequate"
-    first = f"{_KINDS[model.kind]}; r² {model.r_squared:.4f}; {verdict}"
+    kind = _KINDS[model.kind].replace(" with dead time", "") if release else _KINDS[model.kind]
+    first = f"{kind}; r² {model.r_squared:.4f}; {verdict}"
     return _wrapped("model", first) + "".join("\n" + _wrapped("", reason) for reason in model.reasons)
 
 
