@@ -11,7 +11,7 @@ from loopfit.analysis.swinging import limit_cycle
 from loopfit.core.finding import Finding
 from loopfit.core.quantity import Quantity
 from loopfit.figures.swings import find_swings
-from loopfit.fit.choose import change_of, structured
+from loopfit.fit.choose import change_of, clearly_structured
 from loopfit.fit.estimate import Fit, Trace
 
 _STRUCTURE_LIMIT = 0.05  # of the change: beyond it the figures are of an equivalent, not of the loop
@@ -59,7 +59,7 @@ def judge(trace: Trace, fit: Fit, figures: Figures, noise: float, *, pushed: boo
         Whether the step is one of the setpoint, which the measurement must follow.
     """
     change = change_of(fit, trace)
-    share = structured(fit, noise) / abs(change) if change != 0 else math.inf
+    share = clearly_structured(fit, noise) / abs(change) if change != 0 else math.inf
     growing = _growing(trace, figures, noise)
     if growing is not None:
         return Verdict(findings=(growing,), adequate=False, reasons=(growing.text,))

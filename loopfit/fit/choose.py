@@ -84,7 +84,18 @@ def structured(fit: Fit, noise: float) -> float:
     noise : float
         Fast noise of a row, rms.
     """
-    return math.sqrt(max(fit.sse - noise**2 * fit.degrees, 0.0) / float(np.sum(fit.columns.samples.root_count**2)))
+    rows = float(np.sum(fit.columns.samples.root_count**2))
+    return math.sqrt(max(fit.sse - noise**2 * fit.degrees, 0.0) / rows)
+
+
+def clearly_structured(fit: Fit, noise: float) -> float:
+    """Return the rms of the residual that noise does not explain even with its own sampling error allowed for.
+
+    Two standard errors of both: the squares of the samples, and the noise from second differences of the rows.
+    """
+    rows = float(np.sum(fit.columns.samples.root_count**2))
+    doubt = 1.0 + 2.0 * math.sqrt(2.0 / fit.degrees + 2.6 / rows)
+    return math.sqrt(max(fit.sse - doubt * noise**2 * fit.degrees, 0.0) / rows)
 
 
 def moves_before_step(trace: Trace, noise: float) -> bool:

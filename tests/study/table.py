@@ -151,18 +151,26 @@ def goals(scores: Scores) -> list[str]:
     shares, all_six = _pool(scores, active=False)
     outside = [f"{head} {share:.4f}" for head, share in zip((*HEADS[:SIX], "all six"), (*shares[:SIX], all_six), strict=True)
                if not POOLED_GOAL[0] <= share <= POOLED_GOAL[1]]  # fmt: skip
-    return [
+    lines = [
         "",
-        "Goals (?: as far from the goal as so few records of a method that meets it may be: 1 in 1000, or 2 standard errors)",
-        f"Coverage of the first six figures at least {CELL_GOAL:g} in every cell with a second-order truth",
-        *_listed(low),
-        f"Pooled coverage {POOLED_GOAL[0]:g} to {POOLED_GOAL[1]:g} where no bound is active",
-        *_listed([", ".join(outside)] if outside else []),
-        f"Coverage of the response figures at least {WRONG_GOAL:g} for a truth that is not second order",
-        *_listed(wrong),
-        f"Efficiency at most {EFFICIENCY_GOAL:.2f} where the Cramer-Rao deviation is below a tenth of the truth",
-        *_listed(slow),
+        "Goals (?: so far from the goal by chance: 1 in 1000 for a coverage, 2 standard errors for an efficiency)",
     ]
+    kinds = [CELLS[number].zeta is not None for number in scores]
+    if any(kinds):
+        lines += [f"Coverage of the first six figures at least {CELL_GOAL:g} in every cell with a second-order truth"]
+        lines += _listed(low)
+    if not np.isnan(all_six):
+        lines += [f"Pooled coverage {POOLED_GOAL[0]:g} to {POOLED_GOAL[1]:g} where no bound is active"]
+        lines += _listed([", ".join(outside)] if outside else [])
+    if not all(kinds):
+        lines += [f"Coverage of the response figures at least {WRONG_GOAL:g} for a truth that is not second order"]
+        lines += _listed(wrong)
+    if any(_identifiable(CELLS[number]) for number in scores):
+        lines += [
+            f"Efficiency at most {EFFICIENCY_GOAL:.2f} where the Cramer-Rao deviation is below a tenth of the truth"
+        ]
+        lines += _listed(slow)
+    return lines
 
 
 def _line(cell: Cell, misses: list[str]) -> list[str]:
