@@ -70,7 +70,7 @@ def whitener_of(residual: Array, jacobian: Array) -> Whitener | None:
     best, best_score, chosen = z, lags.twice_negative_log(z), z
     tried_in_vain = 0
     for order in range(1, min(_ORDERS, n // 8) + 1):
-        z = _climb(lags, np.append(chosen if order == 1 else z, _first_guess(lags, z)))
+        z = _climb(lags, np.append(chosen if order == 1 else z, lags.neighbours if order == 1 else 0.0))
         score = lags.twice_negative_log(z) + order * _PENALTY
         if score < best_score:
             best, best_score, tried_in_vain = z, score, 0
@@ -94,13 +94,17 @@ class _LagProducts:
         alive = scale > 1e-12 * scale.max()
         rows = np.vstack([jacobian[alive] / scale[alive, None], residual / np.linalg.norm(residual)])
         self.n, self.size = residual.size, rows.shape[0]
+        # the first guess: the lag-one correlation, its bias mended (Kendall 1954, from memory)
+        first = float(rows[-1, 1:] @ rows[-1, :-1])
+        self.neighbours = math.atanh(min(max(first + (1.0 + 3.0 * first) / self.n, -0.9), 0.98))
         top = _ORDERS + 1
         self.products = np.zeros((top, top, self.size, self.size))
         for i in range(top):
-            for j in range(top):
+            for j in range(i, top):
                 last = self.n - i - j
                 if last > 0:
                     self.products[i, j] = rows[:, i : i + last] @ rows[:, j : j + last].T
+                    self.products[j, i] = self.products[i, j].T
 
     def twice_negative_log(self, z: Array) -> float:
         """Return -2 log of the restricted likelihood at atanh of the partial autocorrelations."""
@@ -119,13 +123,6 @@ class _LagProducts:
         start = float(np.sum(np.arange(1, p + 1) * np.log1p(-(pi**2))))
         total: float = (self.n - self.size + 1) * math.log(squares) + float(logdet) - start
         return total
-
-
-def _first_guess(lags: _LagProducts, z: Array) -> float:
-    """Return the best of a few values for one more partial autocorrelation."""
-    tries = [-0.5, 0.0, 0.4, 0.9, 1.5]
-    scores = [lags.twice_negative_log(np.append(z, last)) for last in tries]
-    return tries[int(np.argmin(scores))]
 
 
 def _climb(lags: _LagProducts, z: Array) -> Array:
@@ -156,7 +153,7 @@ def _climb(lags: _LagProducts, z: Array) -> Array:
         else:
             break
         gained, z, value = value - found, trial, found
-        if gained < 1e-3:
+        if gained < 1e-2:
             break
     return z
 
