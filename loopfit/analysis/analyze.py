@@ -179,19 +179,21 @@ def analyze_record(
         band=band,
         setpoint=prepared.step is not None and prepared.step.signal == "setpoint",
     )
-    best = one(prepared.trace, pushed=prepared.held_before)
     findings = [*record.findings, *prepared.findings]
     each: list[StepFigures] = []
     steps, first_trace = prepared.steps, prepared.trace
+    apart: list[Finding] = []
     if prepared.separate:
         alone = [one(trace) for _, trace in prepared.separate]
         each = [of_each(step_used, assessed) for (step_used, _), assessed in zip(prepared.separate, alone, strict=True)]
         first_trace = prepared.separate[0][1]
         apart = disagreements(each)
         findings += apart or [_taken_together(len(each))]
-        if apart:
-            best = alone[0]
-            steps = tuple(replace(s, used=s.time_s == prepared.separate[0][0].time_s) for s in steps)
+    if apart:  # then there is no model of all steps together to look for
+        best = alone[0]
+        steps = tuple(replace(s, used=s.time_s == prepared.separate[0][0].time_s) for s in steps)
+    else:
+        best = one(prepared.trace, pushed=prepared.held_before)
     observed = _observed(prepared.step, first_trace, band, confidence, noise)
     findings += [*best.aside, *best.verdict.findings]
     fit, figures, trace = best.fit, best.figures, best.trace

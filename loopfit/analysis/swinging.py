@@ -27,11 +27,13 @@ MANUAL_TEST = (
 
 def swings_after(trace: Trace, fit: Fit, noise: float) -> Swings:
     """Return the swings about the final value after the last change."""
-    final = float(fit.linear[fit.columns.moving_count])
-    if trace.input is not None:
-        final += float(fit.linear[0] * np.sum(trace.input.sizes))
     rows = trace.time >= trace.last_change + float(fit.theta[2])
-    return find_swings(trace.time[rows], trace.values[rows] - final, noise)
+    return find_swings(trace.time[rows], trace.values[rows] - _final_value(trace, fit), noise)
+
+
+def _final_value(trace: Trace, fit: Fit) -> float:
+    offset = float(fit.linear[fit.columns.moving_count])
+    return offset if trace.input is None else offset + float(fit.linear[0] * np.sum(trace.input.sizes))
 
 
 def about_swings(trace: Trace, fit: Fit, noise: float, change: float) -> list[Finding]:
@@ -126,10 +128,8 @@ def limit_cycle(trace: Trace, fit: Fit, noise: float) -> Finding | None:
 def _shape_words(trace: Trace, fit: Fit, swings: Swings) -> str:
     """Say when the wave is far from a sine: rms over height is 0.71 for a sine, 0.58 triangle, 1 square."""
     inside = (trace.time >= swings.passes[0]) & (trace.time <= swings.passes[-1])
-    final = float(fit.linear[fit.columns.moving_count])
-    if trace.input is not None:
-        final += float(fit.linear[0] * np.sum(trace.input.sizes))
-    form = float(np.sqrt(np.mean((trace.values[inside] - final) ** 2))) / float(np.median(swings.heights))
+    departure = trace.values[inside] - _final_value(trace, fit)
+    form = float(np.sqrt(np.mean(departure**2))) / float(np.median(swings.heights))
     if form > 0.80:
         return ", nearly square"
     if form < 0.62:

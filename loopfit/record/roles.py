@@ -93,12 +93,17 @@ def _role_by_name(column: Column, among: Sequence[Column]) -> tuple[str, int]:
     return ("measurement", 1) if measurement == 1 else ("", 0)
 
 
+def _free_claims(search: Search, claims: Sequence[Column]) -> tuple[list[Column], list[Column], str]:
+    """Return the claims still free, those of them in the measurement's own group, and that group."""
+    free = [c for c in claims if c in search.free]
+    group = group_of(search.found["measurement"].name)
+    return free, [c for c in free if group_of(c.name) == group], group
+
+
 def _setpoint(search: Search, claims: Sequence[Column]) -> None:
     if "setpoint" in search.found:
         return
-    claims = [c for c in claims if c in search.free]
-    group = group_of(search.found["measurement"].name)
-    own = [c for c in claims if group_of(c.name) == group]
+    claims, own, group = _free_claims(search, claims)
     if len(claims) > 1 and own:
         claims = own
     elif (
@@ -135,9 +140,7 @@ def _numbers_differ(one: Column, other: Column) -> bool:
 def _output(search: Search, claims: Sequence[Column]) -> None:
     if "output" in search.found:
         return
-    claims = [c for c in claims if c in search.free]
-    group = group_of(search.found["measurement"].name)
-    own = [c for c in claims if group_of(c.name) == group]
+    claims, own, _ = _free_claims(search, claims)
     if len(claims) > 1 and own:
         claims = own
     if len(claims) > 1:
