@@ -11,6 +11,8 @@ from functools import partial
 import numpy as np
 from numpy.typing import ArrayLike
 
+from loopfit.analysis.advice import Determined
+from loopfit.analysis.advice_words import advised
 from loopfit.analysis.assess import assess
 from loopfit.analysis.circumstances import (
     about_rows,
@@ -22,6 +24,7 @@ from loopfit.analysis.circumstances import (
     standing_offset,
 )
 from loopfit.analysis.figures import model_of, response_of
+from loopfit.analysis.noise import noise_of
 from loopfit.analysis.prepared import StatedStep
 from loopfit.analysis.result import Analysis, ObservedFigures, StepFigures, StepUsed
 from loopfit.analysis.several import disagreements, of_each
@@ -198,6 +201,9 @@ def analyze_record(
     findings += [*best.aside, *best.verdict.findings]
     fit, figures, trace = best.fit, best.figures, best.trace
     model = None if best.verdict.refused else model_of(fit, figures, best.verdict, record.sample_interval_s)
+    response = None if model is None else response_of(fit, figures, best.points, band, model)
+    about_noise = noise_of(trace, None if model is None else fit, rms=noise, grid=grid)
+    verdicts: tuple[Determined, ...] = ()
     if model is not None:
         findings += around_the_step(trace, fit, figures, noise)
         findings += about_rows(trace, fit, noise)
@@ -209,17 +215,20 @@ def analyze_record(
             findings += output_limits(record, trace, prepared.step)
             if not fit.structure.drift:
                 findings += standing_offset(observed, figures["gain"], prepared.step)
+        verdicts, notes = advised(best, model, response, about_noise, confidence, coarse=floor > 0)
+        findings += notes
     return Analysis(
         record=record,
         findings=tuple(findings),
         window_s=(float(trace.time[0]), float(trace.time[-1])),
-        noise_rms=noise,
+        noise=about_noise,
         step=prepared.step,
         steps=steps,
         per_step=tuple(each),
         observed=observed,
         model=model,
-        response=None if model is None else response_of(fit, figures, best.points, band, model),
+        response=response,
+        determined=verdicts,
         fit=fit,
         points=best.points,
         band_percent=float(band_percent),

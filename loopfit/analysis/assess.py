@@ -2,22 +2,25 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from loopfit.analysis.judge import Figures, Verdict, judge
 from loopfit.core.finding import Finding
+from loopfit.core.quantity import Quantity
 from loopfit.fit.choose import change_of, choose, structured
-from loopfit.fit.doubt import doubted_response
+from loopfit.fit.doubt import doubt_of
 from loopfit.fit.estimate import Fit, Trace, fit_trace
 from loopfit.fit.figures_of import Points
 from loopfit.fit.intervals import quantities, refine, surface_of, whitened
 from loopfit.fit.set_aside import Rows, false_first_rows, outliers, without_rows
+from loopfit.fit.third_walk import widened
 from loopfit.step.limits import rows_at_limit
 from loopfit.step.noise import resolution
 
 _REFITS = 3
 _ROWS_LEFT = 12
 _LISTED = 5
+_FAR_OFF = 12.0  # noise powers, a chance in ten thousand with three coordinates
 _WORTH_A_LOOK = 0.02  # of the change left unexplained
 
 
@@ -83,7 +86,15 @@ def assess(
         trace = without_rows(trace, wild)
         fit = choose(trace, noise, noise_floor=noise_floor)
     plain = fit  # least squares explains most; what it leaves is judged, not what the coloured noise may swallow
-    fit = whitened(fit, trace, noise_floor=noise_floor)
+    doubt = doubt_of(plain, confidence=confidence, noise_floor=noise_floor)
+    if (
+        doubt is None or not doubt.clear
+    ):  # what a model cannot follow is not noise, and must not be filtered as if it were
+        fit = whitened(plain, trace, noise_floor=noise_floor)
+        if (
+            fit.sse - plain.sse > _FAR_OFF * plain.inflation * plain.variance
+        ):  # no noise of that colour moves a model so far
+            fit = plain
     surface = surface_of(fit, confidence=confidence, band=band)
     for _ in range(_REFITS):  # a walker can meet a better model than the search did
         if surface.better is None:
@@ -91,14 +102,24 @@ def assess(
         fit = refine(fit, surface.better)
         surface = surface_of(fit, confidence=confidence, band=band)
     figures = quantities(fit, surface, band)
-    doubted = doubted_response(plain, trace, figures, confidence=confidence, band=band)
-    if doubted is not None:
-        figures |= doubted
-        aside.append(_beyond_second_order())
+    if doubt is not None:
+        figures |= widened(doubt, figures, trace.span, band)
+        if doubt.clear:
+            aside.append(_beyond_second_order())
+    figures["overshoot_percent"] = _told_from_none(figures)
     verdict = judge(trace, plain, figures, noise, pushed=pushed, against_setpoint=setpoint)
     return Assessment(
         trace=trace, plain=plain, fit=fit, points=surface.points, figures=figures, verdict=verdict, aside=tuple(aside)
     )
+
+
+def _told_from_none(figures: Figures) -> Quantity | None:
+    """Return the overshoot, from 0 on where it is smaller than the error of the final value: no record shows that one."""
+    over, gain = figures["overshoot_percent"], figures["gain"]
+    if over is None or gain is None or gain.value == 0:
+        return over
+    error = 50.0 * (gain.high - gain.low) / abs(gain.value)
+    return replace(over, low=0.0) if over.low < error else over
 
 
 def _beyond_second_order() -> Finding:

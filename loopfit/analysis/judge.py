@@ -210,8 +210,7 @@ def _about_noise(fit: Fit, share: float) -> list[Finding]:
         Finding(
             code="coloured_noise",
             severity="note",
-            text=f"Neighbouring residuals are alike (correlation {fit.colour:.2f}): the noise is taken as coloured, "
-            "and the intervals allow for it.",
+            text="Neighbouring residuals are alike: the noise is taken as coloured, and the intervals allow for it.",
         )
     ]
 

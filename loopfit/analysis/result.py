@@ -5,6 +5,8 @@ from __future__ import annotations
 from dataclasses import dataclass, fields
 from typing import Any, Literal
 
+from loopfit.analysis.advice import Determined
+from loopfit.analysis.noise import Noise
 from loopfit.core.finding import Finding
 from loopfit.core.plain import plain, to_json
 from loopfit.core.quantity import Quantity
@@ -104,19 +106,21 @@ class StepFigures:
 class Analysis:
     """The result for one record. `model` is None when it was refused; the findings say why.
 
-    `fit` and `points` are the fitted model and all models that the record allows, as the estimator has them.
+    `determined` says of each main figure whether the record determines it, and what record would; it is empty without
+    an adequate model. `fit` and `points` are the fitted model and all models that the record allows, as the estimator has them.
     """
 
     record: Record
     findings: tuple[Finding, ...]
     window_s: tuple[float, float]
-    noise_rms: float
+    noise: Noise
     step: StepUsed | None
     steps: tuple[StepUsed, ...]
     per_step: tuple[StepFigures, ...]
     observed: ObservedFigures
     model: Model | None
     response: ResponseFigures | None
+    determined: tuple[Determined, ...]
     fit: Fit
     points: Points
     band_percent: float
@@ -125,6 +129,11 @@ class Analysis:
     def __repr__(self) -> str:
         damping = None if self.model is None else self.model.damping_ratio
         return f"<Analysis of {self.record.source}: {self.refusal or damping or (self.model and self.model.kind)}>"
+
+    @property
+    def noise_rms(self) -> float:
+        """Noise from row to row, rms, measurement units."""
+        return self.noise.rms
 
     @property
     def refusal(self) -> str | None:
@@ -169,7 +178,12 @@ class Analysis:
                 "duration_s": record.duration_s,
                 "sample_interval_s": record.sample_interval_s,
                 "window_s": list(self.window_s),
-                "noise_rms": self.noise_rms,
+                "noise_rms": self.noise.rms,
+                "noise_colour": self.noise.colour,
+                "noise_correlation": self.noise.correlation,
+                "noise_order": self.noise.order,
+                "noise_rows_per_independent": self.noise.rows_per_independent,
+                "resolution": self.noise.resolution,
                 "findings": [
                     {
                         "code": f.code,
@@ -186,6 +200,7 @@ class Analysis:
             "observed": _fields(self.observed),
             "model": None if self.model is None else _fields(self.model),
             "response": None if self.response is None else _fields(self.response),
+            "determined": [_fields(row) for row in self.determined],
             "band_percent": self.band_percent,
             "confidence_percent": self.confidence_percent,
         }
@@ -202,5 +217,5 @@ def _step(step: StepUsed, *, used: bool) -> dict[str, Any]:
     return out | {"used": step.used} if used else out
 
 
-def _fields(result: ObservedFigures | Model | ResponseFigures | StepFigures) -> dict[str, Any]:
+def _fields(result: ObservedFigures | Model | ResponseFigures | StepFigures | Determined) -> dict[str, Any]:
     return {field.name: getattr(result, field.name) for field in fields(result)}

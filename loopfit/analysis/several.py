@@ -15,7 +15,7 @@ _COMPARED = {
     "gain": "gain",
     "damping_ratio": "damping ratio",
     "natural_frequency_rad_s": "natural frequency",
-    "lag_plus_dead_time_s": "lags and dead time",
+    "lag_plus_dead_time_s": "sum of time constants and dead time",
 }
 _TELLS = 0.8  # widest interval, as a share of its value, that counts in the comparison
 _SLACK = 1.25  # dozens of comparisons at 95 % each: intervals are stretched before they are called apart

@@ -35,6 +35,9 @@ def decimals_of(quantity: Quantity) -> int:
     ends = [bound for bound in (quantity.low, quantity.high) if math.isfinite(bound)]
     spread = max((abs(quantity.value - bound) for bound in ends), default=0.0)
     places = decimals_for(spread, quantity.value)
+    if len(ends) == 1 and ends[0] != 0:  # a bound that is the value itself shows two figures, any other three
+        figures = 1 if spread == 0 else 2
+        places = min(places, figures - math.floor(math.log10(abs(ends[0]))))
     if quantity.value != 0 and math.isfinite(quantity.value):
         places = min(places, _MOST_DIGITS - 1 - math.floor(math.log10(abs(quantity.value))))
     return min(places, 9)

@@ -26,6 +26,7 @@ from loopfit.core.arrays import Array
 
 SMALLEST_SHAPE = 1e-15  # stands for r = 0: a second lag that no double precision figure can see
 _TINY = 1e-300
+_CUBIC = 1e-6  # a step below this share leaves an error of its cube
 
 
 def broadcast(shape: ArrayLike, *others: ArrayLike) -> tuple[Array, ...]:
@@ -131,7 +132,13 @@ def _fall_under(r: Array, depth: Array) -> Array:
         phase = np.where(phase < zero, phase, short_of_zero)
         sine = np.sin(phase)
         level = np.maximum(np.cos(phase) + q * sine, _TINY)
-        phase = phase - _halley(np.log(level) - q * phase + depth, -square * sine / level, -square / level**2)
+        value = np.log(level) - q * phase + depth
+        steep = square * sine * sine
+        # as _halley, with the slope -square sine / level and the curve -square / level^2 put in
+        step = value * sine * level / np.maximum(steep + 0.5 * value, 0.5 * steep)
+        phase = phase + step
+        if not (np.abs(step) > _CUBIC * phase).any():
+            break
     return phase / w
 
 

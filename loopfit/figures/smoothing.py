@@ -14,6 +14,7 @@ from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
+from numpy.typing import NDArray
 
 from loopfit.core.arrays import Array
 
@@ -46,24 +47,44 @@ class Curve:
     noise_rms: float
 
 
-@lru_cache(maxsize=32)
-def _transform(size: int, rows: int) -> tuple[Array, Array, Array, Array]:
-    """Return the cosine transform (size, size), its inverse on a finer grid, and the shapes of curve and noise.
-
-    The inverse undoes the averaging within blocks.
-    """
+@lru_cache(maxsize=16)
+def _basis(size: int) -> Array:
+    """Return the cosine transform (size, size)."""
     index = np.arange(size)
-    scale = np.full((size, 1), np.sqrt(2 / size))
-    scale[0] = np.sqrt(1 / size)
-    basis = scale * np.cos(np.pi / size * np.outer(index, index + 0.5))
+    return np.asarray(_scale(size) * np.cos(np.pi / size * np.outer(index, index + 0.5)))
+
+
+@lru_cache(maxsize=16)
+def _inverse(size: int, rows: int) -> tuple[Array, Array]:
+    """Return the inverse of the transform on a finer grid, the averaging within blocks undone; and its square."""
+    index = np.arange(size)
     frequency = np.pi * index / size
     blur = np.ones(size)
     blur[1:] = np.sin(frequency[1:] / 2) / (rows * np.sin(frequency[1:] / (2 * rows)))
     fine = np.linspace(0, size - 1, (size - 1) * finer(size) + 1)
-    inverse = scale * np.cos(np.pi / size * np.outer(index, fine + 0.5)) / blur[:, None]
-    square = 2 - 2 * np.cos(frequency[1:])
+    inverse = _scale(size) * np.cos(np.pi / size * np.outer(index, fine + 0.5)) / blur[:, None]
+    return inverse, inverse**2
+
+
+def _scale(size: int) -> Array:
+    scale = np.full((size, 1), np.sqrt(2 / size))
+    scale[0] = np.sqrt(1 / size)
+    return scale
+
+
+@lru_cache(maxsize=8)
+def _spectra(size: int) -> tuple[Array, Array, NDArray[np.float32]]:
+    """Return the spectra of all combinations of colour, form and stiffness, which no record changes.
+
+    Of the curve (form, stiffness, frequency); of the sum with the noise its logarithm, summed over frequency (colour,
+    form, stiffness), and its reciprocal, in single precision: enough to weigh the combinations, in half the time.
+    """
+    square = 2 - 2 * np.cos(np.pi / size * np.arange(1, size))
     roughness = np.stack([(square + corner**2) ** (power / 2) for power, corner in _FORMS])
-    return basis, inverse, roughness, _colours(size)
+    bend = 1 / (roughness[:, None] * _STIFFNESSES[:, None])
+    spectrum = _colours(size)[:, None, None, 1:].astype(np.float32) + bend.astype(np.float32)
+    logarithm: Array = np.log(spectrum).sum(-1, dtype=np.float64)
+    return bend, logarithm, np.reciprocal(spectrum)
 
 
 def finer(size: int) -> int:
@@ -106,7 +127,7 @@ def long_variance(rest: Array) -> float:
 def _quiet(rest: Array) -> tuple[Array, Array]:
     """Return, per colour, sum of power over shape and of the log shape, for rows that hold noise only."""
     shape = _colours(rest.size)[:, 1:]
-    power = (_transform(rest.size, 1)[0][1:] @ rest) ** 2
+    power = (_basis(rest.size)[1:] @ rest) ** 2
     return (power / shape).sum(1), np.log(shape).sum(1)
 
 
@@ -118,21 +139,20 @@ def smooth(time: Array, measurement: Array, before: Array, least_noise: float = 
     """
     time, measurement, rows = blocks(time, measurement)
     size = time.size
-    basis, inverse, roughness, colour = _transform(size, rows)
-    content = basis @ measurement
+    inverse, inverse_squared = _inverse(size, rows)
+    bend, spectrum_log, reciprocal = _spectra(size)
+    colour = _colours(size)
+    content = _basis(size) @ measurement
     power = content[1:] ** 2
     quiet = _means(before[-MOST_BLOCKS * rows :], rows)
     known = quiet.size >= 8
     rest, rest_log = _quiet(quiet) if known else (np.zeros(len(_COLOURS)), np.zeros(len(_COLOURS)))
     total = size - 1 + (quiet.size - 1 if known else 0)
-    bend = 1 / (roughness[:, None] * _STIFFNESSES[:, None])  # (form, stiffness, frequency)
-    # single precision is enough to weigh the combinations and halves the time
-    spectrum = colour[:, None, None, 1:].astype(np.float32) + bend.astype(np.float32)
     largest = max(float(power.max()), 1e-300)
-    excess = ((1 / spectrum) @ (power / largest).astype(np.float32)).astype(np.float64) * largest + rest[:, None, None]
+    excess = (reciprocal @ (power / largest).astype(np.float32)).astype(np.float64) * largest + rest[:, None, None]
     floor = max(least_noise**2 / rows, (1e-9 * float(np.ptp(measurement))) ** 2, 1e-300)
     scale = np.maximum(excess / total, floor * (1 - _COLOURS[:, None, None] ** 2))
-    logarithm = np.log(spectrum).sum(-1, dtype=np.float64) + rest_log[:, None, None]
+    logarithm = spectrum_log + rest_log[:, None, None]
     fit = -0.5 * (logarithm + total * np.log(scale) + excess / scale)
     weight = np.exp(fit - fit.max())
     chosen = np.nonzero(weight > 0.02)
@@ -146,7 +166,7 @@ def smooth(time: Array, measurement: Array, before: Array, least_noise: float = 
     kept[:, 1:] = curve / (curve + noise[:, 1:])
     values = (kept * content) @ inverse
     value = weight @ values
-    spread = (weight @ (kept * noise)) @ inverse**2 + weight @ (values - value) ** 2
+    spread = (weight @ (kept * noise)) @ inverse_squared + weight @ (values - value) ** 2
     between = np.linspace(0, size - 1, value.size)
     return Curve(
         time=np.interp(between, np.arange(size), time),

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import itertools
 from dataclasses import dataclass
 
 import numpy as np
@@ -54,18 +53,23 @@ def find_swings(time: Array, departure: Array, noise: float) -> Swings:
     passes = []
     for i in changes:
         a, b = int(clear[i]), int(clear[i + 1])
-        t, y = time[a : b + 1], departure[a : b + 1]
-        slope = np.polynomial.polynomial.polyfit(y / np.ptp(y), t - t[0], 1)
-        passes.append(float(np.clip(t[0] + slope[0], t[0], t[-1])))
+        passes.append(_passage(time[a : b + 1], departure[a : b + 1]))
     turns, heights = [], []
-    for begin, end in itertools.pairwise(passes):
-        inside = np.flatnonzero((time >= begin) & (time <= end))
-        if inside.size == 0:
+    firsts, lasts = np.searchsorted(time, passes[:-1]), np.searchsorted(time, passes[1:], side="right")
+    for first, last in zip(firsts.tolist(), lasts.tolist(), strict=True):
+        if first >= last:
             return Swings(turns=empty, heights=empty, passes=empty)
-        top, when = _turning_point(time[inside], np.abs(departure[inside]))
+        top, when = _turning_point(time[first:last], np.abs(departure[first:last]))
         heights.append(top)
         turns.append(when)
     return Swings(turns=np.array(turns), heights=np.array(heights), passes=np.array(passes))
+
+
+def _passage(t: Array, y: Array) -> float:
+    """Return when the rows pass zero, by the straight line of time over height."""
+    later, height = t - t[0], y - y.mean()
+    slope = float(height @ later) / float(height @ height)
+    return float(min(max(t[0] + later.mean() - slope * y.mean(), t[0]), t[-1]))
 
 
 def _turning_point(t: Array, y: Array) -> tuple[float, float]:
@@ -74,9 +78,16 @@ def _turning_point(t: Array, y: Array) -> tuple[float, float]:
     if near.size < 4:
         top = int(np.argmax(y))
         return float(y[top]), float(t[top])
-    x = t[near] - t[near].mean()
-    c0, c1, c2 = np.polynomial.polynomial.polyfit(x, y[near], 2)
+    middle = float(t[near].mean())
+    x, heights = t[near] - middle, y[near]
+    # least squares on a constant, x, and x^2 made orthogonal to both
+    square = x * x
+    level, tilt = float(square.mean()), float(square @ x) / float(x @ x)
+    bend = square - level - tilt * x
+    c2 = float(bend @ heights) / float(bend @ bend)
     if c2 >= 0:
         return float(y.max()), float(t[int(np.argmax(y))])
-    at = float(np.clip(-0.5 * c1 / c2, x[0], x[-1]))
-    return float(c0 + c1 * at + c2 * at * at), float(at + t[near].mean())
+    c1 = float(x @ heights) / float(x @ x) - c2 * tilt
+    c0 = float(heights.mean()) - c2 * level
+    at = min(max(-0.5 * c1 / c2, float(x[0])), float(x[-1]))
+    return c0 + c1 * at + c2 * at * at, at + middle

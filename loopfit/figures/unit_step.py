@@ -48,6 +48,13 @@ def _first_peak(r: Array, kappa: Array) -> tuple[Array, Array]:
     return time, np.where(np.isnan(time), -np.inf, height)
 
 
+def first_peak(r: ArrayLike, kappa: ArrayLike = 0.0) -> tuple[Array, Array]:
+    """Return overshoot and peak time of the same responses together; see `overshoot` and `peak_time`."""
+    r, kappa = broadcast(r, kappa)
+    time, height = _first_peak(r, kappa)
+    return np.exp(height), time
+
+
 def overshoot(r: ArrayLike, kappa: ArrayLike = 0.0) -> Array:
     """Return the largest excursion beyond the final value, as a fraction of it; 0 when there is none.
 
@@ -55,14 +62,12 @@ def overshoot(r: ArrayLike, kappa: ArrayLike = 0.0) -> Array:
     5-3). With real lags there is overshoot only when the zero is slower than both: kappa tau above the
     larger of them.
     """
-    r, kappa = broadcast(r, kappa)
-    return np.exp(_first_peak(r, kappa)[1])
+    return first_peak(r, kappa)[0]
 
 
 def peak_time(r: ArrayLike, kappa: ArrayLike = 0.0) -> Array:
     """Return the time of the first peak beyond the final value; nan when there is none."""
-    r, kappa = broadcast(r, kappa)
-    return _first_peak(r, kappa)[0]
+    return first_peak(r, kappa)[1]
 
 
 def undershoot(r: ArrayLike, kappa: ArrayLike) -> Array:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 
 from loopfit.core.arrays import Array
@@ -11,6 +13,7 @@ from loopfit.fit.figures_of import Points, figures_of
 from loopfit.fit.separable import Solved, solve_linear
 
 _NUDGE = 1e-3
+_NUDGES = 1.0 + _NUDGE * np.array([[-1.0], [0.0], [1.0]])
 
 
 class Walkers:
@@ -48,8 +51,14 @@ class Walkers:
         self.held_column = 0
         # figures that a zero moves depend on its linear parameter: those walkers keep what they have walked to
         self.kept = np.repeat([name in self.by_difference or name == "zero" for name in names], 2)
+        without = ("rise", "damped", "slow", "fast")  # times that the dead time is no part of
+        self.after_dead = np.repeat([0.0 if name in without else 1.0 for name in names], 2)
         if "gain" in names:
             self.held[2 * names.index("gain") :][:2] = True
+
+    def longer(self, way: Array) -> Array:
+        """Return the longer way of each walker's pair (W,): one of them may stand at a bound."""
+        return np.repeat(np.abs(way).reshape(-1, 2).max(axis=1), 2)
 
     def resolve(self, matrix: Array, linear: Array) -> tuple[Array, Array, Array]:
         """Return linear parameters, residuals and sums of squares, each walker's own constraint kept."""
@@ -60,8 +69,8 @@ class Walkers:
             solved = self._keep(matrix, linear, solved)
         rows = np.flatnonzero(self.held)
         k = self.held_column
-        inverse = np.clip(np.linalg.inv(solved.triangle[rows]), -1e100, 1e100)
-        covariance = inverse @ np.swapaxes(inverse, 1, 2)
+        inverse = np.minimum(np.maximum(np.linalg.inv(solved.triangle[rows]), -1e100), 1e100)
+        covariance = inverse @ inverse.swapaxes(1, 2)
         shift = (linear[rows, k] - solved.linear[rows, k]) / covariance[:, k, k]
         out, residual, sse = solved.linear.copy(), solved.residual.copy(), solved.sse.copy()
         out[rows] += covariance[:, :, k] * shift[:, None]
@@ -87,8 +96,8 @@ class Walkers:
         out = np.zeros((self.count, 3 + self.linear_count))
         T, r = chart.lags(theta)
         by_r, T_by = self._conversions(theta, r)
-        rho = _UnitTimes(r, self.names, self.band)
         differences = self._differences(theta, linear) if self.by_difference else {}
+        times: list[int] = []
         for i, name in enumerate(self.names):
             rows = slice(2 * i, 2 * i + 2)
             if name in differences:
@@ -108,11 +117,15 @@ class Walkers:
                 out[rows, 3] = -scale * linear[rows, 1] / linear[rows, 0] ** 2
                 out[rows, 0] = chart.scale_sign * scale * linear[rows, 1] / linear[rows, 0]
             else:
-                value, slope = rho.of(name, rows)
-                # a time T rho(r) (+ dead time): gradient by the product rule
-                out[rows, 0] = T[rows] * value * (1.0 if chart.by_lags else -1.0)
-                out[rows, 1] = T[rows] * (slope * by_r[rows] + value * T_by[rows])
-                out[rows, 2] = 0.0 if name in ("rise", "damped", "slow", "fast") else 1.0
+                times.append(i)
+        if times:  # a time T rho(r) (+ dead time): gradients by the product rule, all in one
+            chosen = np.repeat(2 * np.array(times), 2)
+            chosen[1::2] += 1
+            value, slope = _unit_times(r[chosen], [self.names[i] for i in times], self.band)
+            T_here = T[chosen]
+            out[chosen, 0] = T_here * value * (1.0 if chart.by_lags else -1.0)
+            out[chosen, 1] = T_here * (slope * by_r[chosen] + value * T_by[chosen])
+            out[chosen, 2] = self.after_dead[chosen]
         out[:, :3] *= self.free
         signed: Array = out * self.sign[:, None]
         return signed
@@ -146,44 +159,50 @@ class Walkers:
         return -0.5 / zeta**3, 1.0 / zeta
 
 
-class _UnitTimes:
-    """Times in units of T as functions of r, with slopes by small differences, for the walkers' aims."""
+def _unit_times(r: Array, names: list[str], band: float) -> tuple[Array, Array]:
+    """Return times in units of T and their slopes in r (2 K,) for K pairs of walkers, by small differences.
 
-    def __init__(self, r: Array, names: list[str], band: float) -> None:
-        self.band = band
-        nudges = 1.0 + _NUDGE * np.array([-1.0, 0.0, 1.0])[:, None]
-        self.spread = np.maximum(r, 1e-5)[None, :] * nudges
-        levels = {"rise": (0.1, 0.9), "delay": (0.5,), "settle": (1.0 - band,)}
-        wanted = [(i, level) for i, name in enumerate(names) for level in levels.get(name, ())]
-        if wanted:  # all crossings in one call
-            pairs = np.stack([self.spread[:, 2 * i : 2 * i + 2] for i, _ in wanted])
-            times = unit_step.crossing_time(pairs, np.array([level for _, level in wanted])[:, None, None])
-            self.crossings = {(names[i], level): time for (i, level), time in zip(wanted, times, strict=True)}
+    Parameters
+    ----------
+    r : (2 K,) array
+        Of the walkers.
+    names : list
+        What each pair walks for.
+    """
+    spread = np.maximum(r, 1e-5) * _NUDGES
+    pairs = spread.reshape(3, len(names), 2)
+    levels = {"rise": (0.1, 0.9), "delay": (0.5,), "settle": (1.0 - band,)}
+    wanted = [(i, level) for i, name in enumerate(names) for level in levels.get(name, ())]
+    crossings: dict[tuple[str, float], Array] = {}
+    if wanted:  # all in one call
+        times = unit_step.crossing_time(
+            pairs[:, [i for i, _ in wanted]], np.array([level for _, level in wanted])[:, None]
+        )
+        crossings = {(names[i], level): times[:, k] for k, (i, level) in enumerate(wanted)}
+    values = np.empty_like(pairs)
+    for i, name in enumerate(names):
+        values[:, i] = _unit_time(name, pairs[:, i], crossings, band)
+    low, middle, high = values.reshape(spread.shape)
+    return middle, (high - low) / (spread[2] - spread[0])
 
-    def of(self, name: str, rows: slice) -> tuple[Array, Array]:
-        """Return value and slope in r for the walkers in these rows."""
-        r = self.spread[:, rows]
-        low, middle, high = self._value(name, r)
-        return middle, (high - low) / (r[2] - r[0])
 
-    def _value(self, name: str, r: Array) -> Array:
-        root = np.sqrt(np.maximum(1.0 - 4.0 * r, 1e-6))
-        value: Array
-        match name:
-            case "rise":
-                value = self.crossings[name, 0.9] - self.crossings[name, 0.1]
-            case "delay":
-                value = self.crossings[name, 0.5]
-            case "settle":
-                value = self.crossings[name, 1.0 - self.band]
-            case "envelope":
-                value = 2.0 * r * np.log(1.0 / self.band)
-            case "peak" | "damped":
-                value = 2.0 * np.pi * r / np.sqrt(np.maximum(4.0 * r - 1.0, 1e-3))
-            case "slow":
-                value = 0.5 * (1.0 + root)
-            case "fast":
-                value = 0.5 * (1.0 - root)
-            case _:  # lag and dead time together
-                value = np.ones_like(r)
-        return value
+def _unit_time(name: str, r: Array, crossings: dict[tuple[str, float], Array], band: float) -> Array:
+    value: Array
+    match name:
+        case "rise":
+            value = crossings[name, 0.9] - crossings[name, 0.1]
+        case "delay":
+            value = crossings[name, 0.5]
+        case "settle":
+            value = crossings[name, 1.0 - band]
+        case "envelope":
+            value = 2.0 * r * math.log(1.0 / band)
+        case "peak" | "damped":
+            value = 2.0 * np.pi * r / np.sqrt(np.maximum(4.0 * r - 1.0, 1e-3))
+        case "slow":
+            value = 0.5 * (1.0 + np.sqrt(np.maximum(1.0 - 4.0 * r, 1e-6)))
+        case "fast":
+            value = 0.5 * (1.0 - np.sqrt(np.maximum(1.0 - 4.0 * r, 1e-6)))
+        case _:  # lag and dead time together
+            value = np.ones_like(r)
+    return value

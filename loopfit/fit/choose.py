@@ -8,6 +8,7 @@ import numpy as np
 
 from loopfit.core.arrays import Array
 from loopfit.fit.estimate import Fit, Structure, Trace, fit_trace
+from loopfit.fit.warranted import warranted
 
 _STRUCTURED = 4.0  # standard errors of the residual's neighbour correlation that raise doubt
 _HALVED = 0.5  # a richer model must at least halve the structured residual
@@ -35,29 +36,41 @@ def choose(trace: Trace, noise: float, *, noise_floor: float) -> Fit:
         return best
     if start.moving_start:  # a drift is considered only where the rows before the step show movement
         rival = fit_trace(trace, Structure(drift=True), noise_floor=noise_floor)
-        best = min(best, rival, key=criterion)
+        best = rival if evidence(rival, best) > 0.0 else best
+        plain = fit_trace(trace, Structure(), noise_floor=noise_floor)
+        best = best if warranted(best, plain) else plain
     if _far_beyond(best, trace) and not best.structure.drift:
         rival = fit_trace(trace, Structure(rungs=(2,), first_order=True), noise_floor=noise_floor)
-        if criterion(rival) <= criterion(best) + 2.0:
+        if evidence(best, rival) <= 2.0:
             return rival
-    if start.moving_start or best.colour * math.sqrt(best.columns.target.size) < _STRUCTURED:
+    if best.structure != Structure() or best.colour * math.sqrt(best.columns.target.size) < _STRUCTURED:
         return best  # a zero would follow a tail that is slower than the plant
     rivals = [Structure(rungs=(1, 0))]
     if wanders_before_step(trace, noise, abs(change_of(best, trace))):
         rivals.insert(0, Structure(moving_start=True))
     for structure in rivals:
         rival = fit_trace(trace, structure, noise_floor=noise_floor)
-        clearly = criterion(rival) < criterion(best) - _EVIDENCE
+        clearly = evidence(rival, best) > _EVIDENCE
         if clearly and structured(rival, noise) < _HALVED * structured(best, noise) and not _far_beyond(rival, trace):
             return rival
     return best
 
 
-def criterion(fit: Fit) -> float:
-    """Return Schwarz's information criterion (1978), with the samples thinned for their colour."""
-    n = fit.columns.target.size / fit.inflation
-    parameters = fit.linear.size + 2 + (not fit.structure.first_order)
-    return n * math.log(max(fit.sse, 1e-300) / fit.columns.target.size) + parameters * math.log(max(n, 2.0))
+def evidence(fit: Fit, against: Fit) -> float:
+    """Return by how much Schwarz's information criterion (1978) is lower for one fit than for another.
+
+    The samples are thinned for the colour of the fit that leaves more of it, both alike: with a number of rows for each
+    the difference would depend on the unit of the measurement.
+    """
+    rows = [each.columns.target.size for each in (fit, against)]
+    n = min(rows) / max(fit.inflation, against.inflation)
+    gained = [math.log(max(each.sse, 1e-300) / count) for each, count in zip((against, fit), rows[::-1], strict=True)]
+    more = _parameters(fit) - _parameters(against)
+    return n * (gained[0] - gained[1]) - more * math.log(max(n, 2.0))
+
+
+def _parameters(fit: Fit) -> int:
+    return fit.linear.size + 2 + (not fit.structure.first_order)
 
 
 def change_of(fit: Fit, trace: Trace) -> float:
@@ -117,7 +130,8 @@ def clear_trend(t: Array, y: Array, noise: float) -> float | None:
     slope = float(centred @ y) / width
     rest = y - y.mean() - slope * centred
     neighbour = float(rest[1:] @ rest[:-1]) / max(float(rest @ rest), 1e-300)
-    colour = min(max(neighbour, 0.0) + 2.0 / rows, 0.95)
+    # what the line takes out of the lag-one correlation, to first order (after Kendall 1954, from memory)
+    colour = min(max(neighbour, 0.0) + (2.0 + 4.0 * max(neighbour, 0.0)) / rows, 0.95)
     spread = max(float(rest @ rest) / (rows - 2), noise**2)
     error = math.sqrt(spread / width * (1.0 + colour) / (1.0 - colour))
     return slope * float(t[-1] - t[0]) if abs(slope) > 5.0 * error else None

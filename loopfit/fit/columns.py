@@ -20,6 +20,7 @@ from loopfit.model.shape import ladder, ladder_by_shape
 
 _LONGEST_RELEASE = 3.0  # spans: beyond, a slow decay is a drift to the record
 _LONGEST = 100.0
+_REMEMBERED = 4
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -83,85 +84,108 @@ class Columns:
         theta : (B, 3) array
             Coordinates of B models in this chart.
         """
+        if theta.shape[0] > 1:
+            return self._evaluated(theta, derivatives)
+        # the same optimum is asked for by the search, the walk, the verdict and the findings in turn
+        for with_derivatives in (True, False) if not derivatives else (True,):
+            known = self._recent.get((theta.tobytes(), with_derivatives))
+            if known is not None:
+                return known if derivatives else (known[0], known[0][:, :0])
+        found = self._evaluated(theta, derivatives)
+        for array in found:
+            array.flags.writeable = False
+        while len(self._recent) >= _REMEMBERED:
+            del self._recent[next(iter(self._recent))]
+        self._recent[theta.tobytes(), derivatives] = found
+        return found
+
+    @cached_property
+    def _recent(self) -> dict[tuple[bytes, bool], tuple[Array, Array]]:
+        """What was last evaluated at single models."""
+        return {}
+
+    def _evaluated(self, theta: Array, derivatives: bool) -> tuple[Array, Array]:
         shape = self.chart.shape(theta)
         scale = self.chart.scale(theta)
-        blocks: list[tuple[Array, Array]] = []
+        blocks: list[Array] = []
         if self.input is not None and self.rungs:
             blocks.append(self._driven(theta, scale, shape, derivatives))
         if self.free_from is not None:
             blocks.append(self._free(scale, shape, derivatives))
-        fixed = np.broadcast_to(self.fixed, (theta.shape[0], *self.fixed.shape))
-        weight = self.samples.root_count
-        columns = np.concatenate([*(block[0] * weight for block in blocks), fixed], axis=1)
-        if self.whitener is not None:
-            columns = self.whitener(columns)
-        if not derivatives:
-            return columns, columns[:, :0]
-        parts = [block[1] for block in blocks]
-        slopes = (parts[0] if len(parts) == 1 else np.concatenate(parts, axis=2)) * weight
-        return columns, slopes if self.whitener is None else self.whitener(slopes)
+        moving = blocks[0] if len(blocks) == 1 else np.concatenate(blocks, axis=2)
+        m = moving.shape[2]
+        columns = np.empty((theta.shape[0], m + self.fixed.shape[0], moving.shape[3]))
+        columns[:, :m], columns[:, m:] = moving[:, 0], self.fixed
+        slopes = moving[:, 1:] if derivatives else columns[:, :0]
+        if self.whitener is None:
+            return columns, slopes
+        return self.whitener(columns), self.whitener(slopes) if derivatives else slopes
 
-    def _driven(self, theta: Array, scale: Array, shape: Array, derivatives: bool) -> tuple[Array, Array]:
+    def _driven(self, theta: Array, scale: Array, shape: Array, derivatives: bool) -> Array:
+        """Return the responses to the input and their derivatives (B, 4 or 1, rungs, n), weighed."""
         assert self.input is not None
-        B, J = theta.shape[0], self.input.times.size
-        since = self.samples.nodes[None, None, :] - self.input.times[None, :, None] - theta[:, 2, None, None]
+        times, sizes = self.input.times, self.input.sizes
+        B, J = theta.shape[0], times.size
+        if J == 1:
+            x = (self.samples.nodes - (times[0] + theta[:, 2:])) * (1.0 / scale[:, None])
+            return self._weighed(self._rungs(x, scale, shape, self.rungs, derivatives), scale, self.rungs, sizes[0])
+        since = self.samples.nodes - (times[None, :, None] + theta[:, 2, None, None])
         x = (since / scale[:, None, None]).reshape(B * J, -1)
-        many = np.repeat(shape, J) if J > 1 else shape
-        wide = np.repeat(scale, J) if J > 1 else scale
-        values, slopes = self._rungs(x, wide, many, self.rungs, derivatives)
-        if J > 1:
-            sizes = self.input.sizes
-            values = np.einsum("bjqn,j->bqn", values.reshape(B, J, *values.shape[1:]), sizes)
-            if derivatives:
-                slopes = np.einsum("bjpqn,j->bpqn", slopes.reshape(B, J, *slopes.shape[1:]), sizes)
-        else:
-            values, slopes = values * self.input.sizes[0], slopes * self.input.sizes[0]
-        return values, slopes
+        each = self._rungs(x, np.repeat(scale, J), np.repeat(shape, J), self.rungs, derivatives)
+        together = np.einsum("bjpqn,j->bpqn", each.reshape(B, J, *each.shape[1:]), sizes)
+        return self._weighed(together, scale, self.rungs, 1.0)
 
-    def _free(self, scale: Array, shape: Array, derivatives: bool) -> tuple[Array, Array]:
+    def _free(self, scale: Array, shape: Array, derivatives: bool) -> Array:
+        """Return the free response and its derivatives (B, 4 or 1, 2, n), weighed."""
         assert self.free_from is not None
-        x = (self.samples.nodes[None, :] - self.free_from) / scale[:, None]
-        values, slopes = self._rungs(x, scale, shape, (1, 0), derivatives)
-        values[:, 0] = 1.0 - values[:, 0]
-        if derivatives:
-            slopes[:, :, 0] *= -1.0
-            slopes[:, 2] = 0.0  # the free response knows no dead time
-        return values, slopes
+        x = (self.samples.nodes - self.free_from) / scale[:, None]
+        out = self._weighed(self._rungs(x, scale, shape, (1, 0), derivatives), scale, (1, 0), 1.0)
+        out[:, 0, 0] = self.samples.root_count - out[:, 0, 0]
+        out[:, 1:, 0] *= -1.0
+        out[:, 3:] = 0.0  # the free response knows no dead time
+        return out
 
-    def _rungs(
-        self, x: Array, scale: Array, shape: Array, rungs: tuple[int, ...], derivatives: bool
-    ) -> tuple[Array, Array]:
-        """Return columns (B, len(rungs), n) and derivatives (B, 3, len(rungs), n) at nodes x (B, M)."""
+    def _rungs(self, x: Array, scale: Array, shape: Array, rungs: tuple[int, ...], derivatives: bool) -> Array:
+        """Return columns and derivatives (B, 4 or 1, len(rungs), n) from nodes x (B, M), in units of the scale.
+
+        Values at rows, or rises of the integral over bins.
+        """
         samples, chart = self.samples, self.chart
         lift = 1 if samples.binned else 0  # an average is a difference of the next integral
         lowest, highest = min(rungs) + lift - 1, max(rungs) + lift
-        a, b, a_by, b_by = chart.coefficients(shape)
-        response = chart.respond(x, shape, derivatives=derivatives)
         correct = samples.binned and samples.row_interval > 0
-        F = ladder(x, response, a, b, min(lowest, min(rungs) - 1) if correct else lowest, highest)
-        tau = scale[:, None]
-        n = samples.values.size
-        values = np.empty((x.shape[0], len(rungs), n))
-        slopes = np.empty((x.shape[0], 3, len(rungs), n)) if derivatives else values[:, :0]
+        a, b, a_by, b_by = chart.coefficients(shape)
+        np.maximum(x, 0.0, out=x)
+        response = chart.respond(x, shape, derivatives=derivatives)
+        F = ladder(x, response, a, b, lowest - 1 if correct else lowest, highest)
         G = ladder_by_shape(response, F, a, b, a_by, b_by, highest) if derivatives else {}
-        shape_slope = chart.shape_slope(shape)[:, None]
-        xs = np.maximum(x, 0.0)
-        for i, k in enumerate(rungs):
-            power = tau if k == 2 else 1.0
-            extra = 1.0 if k == 2 else 0.0
-            if not samples.binned:
-                values[:, i] = power * F[k]
-                if derivatives:
-                    slopes[:, 0, i] = chart.scale_sign * power * (extra * F[k] - xs * F[k - 1])
-                    slopes[:, 1, i] = power * G[k] * shape_slope
-                    slopes[:, 2, i] = -power * F[k - 1] / tau
-                continue
-            over = power * tau / samples.widths
-            rise = F[k + 1] - (samples.row_interval / tau) ** 2 / 24.0 * F[k - 1] if correct else F[k + 1]
-            values[:, i] = over * samples.differences(rise)
+        out = np.empty((x.shape[0], 4 if derivatives else 1, len(rungs), x.shape[1]))
+        for i, rung in enumerate(rungs):
+            k = rung + lift
+            if correct:
+                np.multiply((samples.row_interval / scale[:, None]) ** 2 / -24.0, F[k - 2], out=out[:, 0, i])
+                out[:, 0, i] += F[k]
+            else:
+                out[:, 0, i] = F[k]
             if derivatives:
-                stretch = (1.0 + extra) * F[k + 1] - xs * F[k]
-                slopes[:, 0, i] = chart.scale_sign * over * samples.differences(stretch)
-                slopes[:, 1, i] = over * samples.differences(G[k + 1]) * shape_slope
-                slopes[:, 2, i] = -power / samples.widths * samples.differences(F[k])
-        return values, slopes
+                power = lift + (1 if rung == 2 else 0)  # of the scale, in the column
+                stretch = np.multiply(x, F[k - 1], out=out[:, 1, i])
+                np.subtract(F[k] if power == 1 else power * F[k], stretch, out=stretch)
+                if chart.scale_sign < 0:
+                    np.negative(stretch, out=stretch)
+                np.multiply(G[k], chart.shape_slope(shape)[:, None], out=out[:, 2, i])
+                np.multiply(F[k - 1], -1.0 / scale[:, None], out=out[:, 3, i])
+        return samples.differences(out) if samples.binned else out
+
+    def _weighed(self, rises: Array, scale: Array, rungs: tuple[int, ...], size: float) -> Array:
+        """Return the rises (B, p, len(rungs), n) in units of the measurement, weighed; in place."""
+        powers = np.array([(1 if rung == 2 else 0) + (1 if self.samples.binned else 0) for rung in rungs])
+        factor = size * scale[:, None] ** powers
+        rises *= factor[:, None, :, None] * self._weight
+        return rises
+
+    @cached_property
+    def _weight(self) -> Array:
+        """Weight of a sample (n,): the root of its rows; over the width, where it is an average."""
+        root = self.samples.root_count
+        return root / self.samples.widths if self.samples.binned else root

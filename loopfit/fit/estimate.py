@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 
@@ -36,7 +37,7 @@ class Structure:
     drift: bool = False
 
 
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+@dataclass(frozen=True, kw_only=True, eq=False)
 class Trace:
     """The part of a record that is fitted: rows, the input in it, and where the step is.
 
@@ -60,8 +61,25 @@ class Trace:
         """Time from the step to the last row, s."""
         return float(self.time[-1] - self.begins)
 
+    # every structure that is tried asks for these again
 
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+    @cached_property
+    def even(self) -> bool:
+        """Whether the rows are evenly spaced."""
+        return is_even(self.time)
+
+    @cached_property
+    def main_frequency(self) -> float | None:
+        """The record's main frequency, rad/s, where it has one that a coarse grid can miss."""
+        return main_frequency(self.time, self.values)
+
+    @cached_property
+    def coarse(self) -> dict[Structure, Columns]:
+        """Models on few bins that were asked for, by structure."""
+        return {}
+
+
+@dataclass(frozen=True, kw_only=True, eq=False)
 class Fit:
     """A fitted model: its columns, coordinates, linear parameters, and the noise left over.
 
@@ -82,7 +100,7 @@ class Fit:
     settled: bool
     whitener: Whitener | None = None
 
-    @property
+    @cached_property
     def working(self) -> Columns:
         """The columns as the likelihood sees them: whitened."""
         return self.columns if self.whitener is None else replace(self.columns, whitener=self.whitener)
@@ -108,7 +126,7 @@ def fit_trace(trace: Trace, structure: Structure, *, noise_floor: float = 0.0) -
     noise_floor : float
         Least noise of a row that the record's resolution allows, measurement units.
     """
-    even = is_even(trace.time)
+    even = trace.even
     free = free_coordinates(structure, trace.input is not None)
     coarse, main = coarse_columns(trace, structure)
     starts = scan(coarse, trace.span, main, release=trace.input is None)
@@ -136,10 +154,12 @@ def fit_trace(trace: Trace, structure: Structure, *, noise_floor: float = 0.0) -
 
 def coarse_columns(trace: Trace, structure: Structure) -> tuple[Columns, float | None]:
     """Return the model on few bins, for the first search, and the record's main frequency, rad/s."""
-    main = main_frequency(trace.time, trace.values)
-    cycles = 0.0 if main is None else main * (trace.time[-1] - trace.time[0]) / (2.0 * math.pi)
-    bins = max(_COARSE_BINS, int(_BINS_PER_CYCLE * cycles))
-    return _columns(trace, structure, LAGS, math.inf, is_even(trace.time), bins), main
+    main = trace.main_frequency
+    if structure not in trace.coarse:
+        cycles = 0.0 if main is None else main * (trace.time[-1] - trace.time[0]) / (2.0 * math.pi)
+        bins = max(_COARSE_BINS, int(_BINS_PER_CYCLE * cycles))
+        trace.coarse[structure] = _columns(trace, structure, LAGS, math.inf, trace.even, bins)
+    return trace.coarse[structure], main
 
 
 def _finish(
@@ -152,11 +172,7 @@ def _finish(
     scale = float(np.max(np.abs(columns.target))) if n else 0.0
     settled = settled or sse <= _EXACT * float(columns.target @ columns.target)
     variance = max(sse / degrees, noise_floor**2, (1e-13 * scale) ** 2, 1e-300)
-    colour = _neighbour_correlation(solved.residual[0])
-    inflation = 1.0
-    if colour * np.sqrt(n) > 3.0:
-        bounded = min(colour + (1.0 + 3.0 * colour) / n, 0.98)  # Kendall 1954: bias of the lag-one correlation
-        inflation = (1.0 + bounded) / (1.0 - bounded)
+    colour = neighbour_correlation(solved.residual[0])
     return Fit(
         structure=structure,
         columns=columns,
@@ -166,9 +182,17 @@ def _finish(
         variance=variance,
         degrees=degrees,
         colour=colour,
-        inflation=inflation,
+        inflation=inflation_by(colour, n),
         settled=settled,
     )
+
+
+def inflation_by(colour: float, rows: int) -> float:
+    """Return the factor by which a correlation of neighbouring residuals widens the variance of slow shapes."""
+    if colour * math.sqrt(rows) <= 3.0:
+        return 1.0
+    bounded = min(colour + (1.0 + 3.0 * colour) / rows, 0.98)  # Kendall 1954: bias of the lag-one correlation
+    return (1.0 + bounded) / (1.0 - bounded)
 
 
 def _columns(
@@ -210,7 +234,8 @@ def search(
     def caps(theta: Array) -> Array:
         limit = np.empty_like(theta)
         limit[:, 0], limit[:, 1] = (0.8, 1.2) if chart.by_lags else (0.3, 0.3)
-        limit[:, 2] = 2.0 / chart.frequency(theta) + 0.5 * chart.lags(theta)[0]
+        T, r = chart.lags(theta)
+        limit[:, 2] = T * (2.0 * np.sqrt(r) + 0.5)  # T sqrt(r) = 1 / omega_n
         return limit
 
     return minimise(
@@ -227,6 +252,7 @@ def search(
     )
 
 
-def _neighbour_correlation(residual: Array) -> float:
+def neighbour_correlation(residual: Array) -> float:
+    """Return the correlation of neighbouring residuals."""
     power = float(residual @ residual)
     return float(residual[1:] @ residual[:-1]) / power if power > 0 else 0.0

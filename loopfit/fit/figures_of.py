@@ -26,6 +26,7 @@ MODEL_FIGURES = (
     "zero_s",
 )
 RESPONSE_FIGURES = ("overshoot_percent", "peak_time_s", "rise_time_s", "settling_time_s", "delay_time_s", "decay_ratio")
+_LEVELS = np.array([0.1, 0.5, 0.9])  # rise time from the first to the last, delay time to the middle
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -93,12 +94,14 @@ def figures_of(columns: Columns, points: Points, band: float) -> dict[str, Array
         kappa = out["zero_s"] / T
     if 1 not in columns.rungs:
         return out
+    height, peak_time = unit_step.first_peak(r, kappa)
+    first, half, last = unit_step.crossing_time(r, _LEVELS[:, None], kappa)
     out |= {
-        "overshoot_percent": np.where(growing, np.inf, 100.0 * unit_step.overshoot(r, kappa)),
-        "peak_time_s": np.where(growing, np.nan, dead + T * unit_step.peak_time(r, kappa)),
-        "rise_time_s": T * unit_step.rise_time(r, kappa),
+        "overshoot_percent": np.where(growing, np.inf, 100.0 * height),
+        "peak_time_s": np.where(growing, np.nan, dead + T * peak_time),
+        "rise_time_s": T * (last - first),
         "settling_time_s": np.where(growing, np.inf, dead + T * unit_step.settling_time(r, band, kappa)),
-        "delay_time_s": dead + T * unit_step.delay_time(r, kappa),
+        "delay_time_s": dead + T * half,
         "decay_ratio": decay,
     }
     return out

@@ -27,11 +27,11 @@ def whitened(fit: Fit, trace: Trace, *, noise_floor: float) -> Fit:
     The colour is estimated from the residuals, the model fitted anew from the optimum and from the first starts (a
     fit that took coloured noise for white can sit in a wrong valley), and both once more.
     """
-    if not _evenly_spaced(fit):
+    if not evenly_spaced(fit):
         return fit
     starts: Array | None = None
     for _ in range(_NOISE_ROUNDS):
-        whitener = whitener_of(*_residual_and_jacobian(fit))
+        whitener = whitener_of(*residual_and_jacobian(fit))
         if whitener is None:
             return replace(fit, whitener=None, inflation=1.0)
         working = replace(fit.columns, whitener=whitener)
@@ -53,7 +53,8 @@ def _at(fit: Fit, theta: Array, *, noise_floor: float) -> Fit:
     return replace(fit, theta=theta, linear=working.linear[0], sse=float(rest @ rest), variance=variance)
 
 
-def _residual_and_jacobian(fit: Fit) -> tuple[Array, Array]:
+def residual_and_jacobian(fit: Fit) -> tuple[Array, Array]:
+    """Return the residuals (n,) of a fit and the derivatives (q, n) of its prediction in all parameters."""
     columns, slopes = fit.columns.evaluate(fit.theta[None])
     moved = (fit.linear[None, : slopes.shape[2]] @ slopes[0])[:, 0, :]
     return fit.columns.target - fit.linear @ columns[0], np.vstack([moved[fit.free], columns[0]])
@@ -69,7 +70,8 @@ def _starts(fit: Fit, trace: Trace) -> Array:
     return starts
 
 
-def _evenly_spaced(fit: Fit) -> bool:
+def evenly_spaced(fit: Fit) -> bool:
+    """Tell whether the samples are evenly spaced, within 2 % of the interval."""
     steps = np.diff(fit.columns.samples.centres)[1:-1]
     return steps.size > 0 and bool(np.ptp(steps) <= _EVEN_WITHIN * np.median(steps))
 

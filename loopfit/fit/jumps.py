@@ -13,7 +13,7 @@ from loopfit.core.arrays import Array
 from loopfit.figures import unit_step
 from loopfit.fit.columns import Columns
 from loopfit.fit.figures_of import Points
-from loopfit.fit.reach import reach
+from loopfit.fit.reach import ARRIVED, quadratic, reach
 from loopfit.fit.separable import solve_linear
 
 _SWINGS = 40
@@ -45,6 +45,7 @@ def beside_jumps(
     at, linear, sign = starts
     held = free & np.array([True, False, True])
     kept: list[Points] = []
+    rounds, way = _ROUNDS, np.zeros(at.shape[0])
     for turn in range(_ROUNDS + 1):
         matrix, slopes = columns.evaluate(at)
         solved = solve_linear(matrix, columns.target)
@@ -52,26 +53,18 @@ def beside_jumps(
         within = rise <= 1.04 * threshold
         if within.any():
             kept.append(Points(theta=at[within], linear=linear[within]))
-        if turn == _ROUNDS:
+        if turn == rounds:
             break
         T, r = columns.chart.lags(at)
         aims = np.zeros((at.shape[0], 3 + linear.shape[1]))
         aims[:, 0] = columns.chart.scale_sign * T * unit_step.settling_time(r, band) * sign
         aims[:, 2] = sign
-        step = reach(
-            matrix,
-            slopes,
-            linear,
-            solved.residual,
-            rise,
-            aims,
-            held,
-            at,
-            columns.chart.lowest,
-            columns.highest,
-            threshold,
-            variance,
-        )
+        H, b = quadratic(matrix, slopes, linear, solved.residual, variance)
+        step = reach(H, b, rise, aims, held, at, columns.chart.lowest, columns.highest, threshold)
+        ahead = (aims * step).sum(axis=1)
+        way = way + ahead
+        if turn > 0 and np.all(np.abs(ahead) <= ARRIVED * np.abs(way)):
+            rounds = turn + 1
         at = np.clip(at + step[:, :3], columns.chart.lowest, columns.highest)
     return Points.joined(kept) if kept else None
 

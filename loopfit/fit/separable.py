@@ -50,10 +50,9 @@ def solve_linear(columns: Array, target: Array) -> Solved:
         A column that is empty or repeats another gets the coefficient 0.
     """
     basis, triangle = np.linalg.qr(np.swapaxes(columns, 1, 2))
-    diagonal = np.abs(np.diagonal(triangle, axis1=1, axis2=2))
-    lost = (
-        diagonal <= 1e-13 * np.linalg.norm(triangle, axis=1) + 1e-150
-    )  # each against its own length: units do not matter
+    diagonal = np.abs(triangle.diagonal(axis1=1, axis2=2))
+    length = np.sqrt((triangle * triangle).sum(axis=1))
+    lost = diagonal <= 1e-13 * length + 1e-150  # each against its own length: units do not matter
     if lost.any():
         basis = np.where(lost[:, None, :], 0.0, basis)
         triangle = np.where(lost[:, None, :], 0.0, triangle)
@@ -64,9 +63,23 @@ def solve_linear(columns: Array, target: Array) -> Solved:
     return Solved(linear, residual, np.einsum("bn,bn->b", residual, residual), basis, triangle)
 
 
+def combined(linear: Array, slopes: Array) -> Array:
+    """Return the derivative (B, p, n) of the prediction with its linear parameters (B, q) held.
+
+    Parameters
+    ----------
+    slopes : (B, p, m, n) array
+        Derivatives of the first m columns.
+    """
+    if slopes.shape[2] == 1:  # a product of small matrices costs more than a product
+        return linear[:, :1, None] * slopes[:, :, 0]
+    moved: Array = (linear[:, None, None, : slopes.shape[2]] @ slopes)[:, :, 0, :]
+    return moved
+
+
 def projected_jacobian(slopes: Array, solved: Solved) -> Array:
     """Return the derivative (B, p, n) of the prediction in the coordinates, linear part re-solved."""
-    moved = (solved.linear[:, None, None, : slopes.shape[2]] @ slopes)[:, :, 0, :]
+    moved = combined(solved.linear, slopes)
     return moved - (moved @ solved.basis) @ np.swapaxes(solved.basis, 1, 2)
 
 
@@ -105,9 +118,10 @@ def minimise(
     thin : bool
         Drop members that have merged or fallen hopelessly behind.
     """
+    # tiny arrays: the cost is the number of calls, and np.clip, np.einsum and np.where are slow ones
     n = target.size
     top = np.full(theta.shape[1], np.inf) if highest is None else highest
-    theta = np.clip(theta, lowest, top)
+    theta = np.minimum(np.maximum(theta, lowest), top)
     floor = (8 * np.finfo(float).eps) ** 2 * float(target @ target) + _TINY
     damping = np.full(theta.shape[0], _FIRST_DAMPING)
     growth = np.full(theta.shape[0], 2.0)
@@ -117,22 +131,23 @@ def minimise(
     jacobian = projected_jacobian(slopes, solved)
     sse = solved.sse
     residual = solved.residual
-    kept = np.eye(theta.shape[1], dtype=bool)
+    fixed = ~free
+    unit = np.eye(theta.shape[1])
     for turn in range(rounds):
         gradient = (jacobian @ residual[:, :, None])[:, :, 0]
-        held = ~free | ((theta <= lowest) & (gradient < 0)) | ((theta >= top) & (gradient > 0))
-        normal = jacobian @ np.swapaxes(jacobian, 1, 2)
-        gradient = np.where(held, 0.0, gradient)
-        normal = np.where(held[:, :, None] | held[:, None, :], 0.0, normal)
-        size = np.maximum(np.diagonal(normal, axis1=1, axis2=2), _TINY)
-        lifted = normal + np.where(kept, (np.where(held, 1.0, size * damping[:, None]))[:, :, None], 0.0)
-        step = np.linalg.solve(lifted, gradient[:, :, None])[:, :, 0]
+        held = ((theta <= lowest) & (gradient < 0)) | ((theta >= top) & (gradient > 0)) | fixed
+        normal = jacobian @ jacobian.swapaxes(1, 2)
+        if held.any():
+            gradient[held] = 0.0
+            normal[held[:, :, None] | held[:, None, :]] = 0.0
+        size = np.maximum(normal.diagonal(axis1=1, axis2=2), _TINY) * damping[:, None]
+        size[held] = 1.0
+        step = np.linalg.solve(normal + size[:, :, None] * unit, gradient[:, :, None])[:, :, 0]
         if caps is not None:
-            limit = caps(theta)
-            step = step / np.maximum(1.0, np.max(np.abs(step) / limit, axis=1))[:, None]
-        trial = np.clip(theta + step, lowest, top)
+            step /= np.maximum(1.0, (np.abs(step) / caps(theta)).max(axis=1))[:, None]
+        trial = np.minimum(np.maximum(theta + step, lowest), top)
         step = trial - theta
-        promised = 2.0 * np.einsum("bp,bp->b", step, gradient) - np.einsum("bp,bpq,bq->b", step, normal, step)
+        promised = (step * (2.0 * gradient - (normal @ step[:, :, None])[:, :, 0])).sum(axis=1)
         settled = settled | (promised <= tolerance * (sse + floor) / n) | (damping > 1e12) | (sse <= floor)
         if settled.all():
             break
@@ -140,10 +155,10 @@ def minimise(
         solved = solve_linear(columns, target)
         gained = sse - solved.sse
         better = (gained > 0) & ~settled
-        ratio = np.clip(gained, -1e100, 1e100) / np.maximum(promised, 1e-150)
+        ratio = np.minimum(np.maximum(gained / np.maximum(promised, 1e-150), 0.0), 1.0)
         damping = np.where(
             better,
-            damping * np.maximum(0.1, 1.0 - (2.0 * np.clip(ratio, 0.0, 1.0) - 1.0) ** 3),
+            damping * np.maximum(0.1, 1.0 - (2.0 * ratio - 1.0) ** 3),
             np.where(settled, damping, damping * growth),
         )
         growth = np.where(better, 2.0, growth * 2.0)
@@ -159,8 +174,9 @@ def minimise(
             jacobian = np.where(better[:, None, None], fresh, jacobian)
         if thin and turn % 2 == 1 and theta.shape[0] > 1:
             keep = _worth_keeping(theta, sse, n)
-            theta, sse, residual, jacobian = theta[keep], sse[keep], residual[keep], jacobian[keep]
-            damping, growth, settled = damping[keep], growth[keep], settled[keep]
+            if keep.size < theta.shape[0]:
+                theta, sse, residual, jacobian = theta[keep], sse[keep], residual[keep], jacobian[keep]
+                damping, growth, settled = damping[keep], growth[keep], settled[keep]
     return Minimum(theta, sse, settled)
 
 
@@ -168,11 +184,11 @@ def _worth_keeping(theta: Array, sse: Array, n: int) -> NDArray[np.intp]:
     """Return the members that are neither copies of a better one nor far behind the best."""
     order = np.argsort(sse)
     best = sse[order[0]]
+    behind: Flags = np.greater(sse, 4.0 * best + 1e-9) & np.greater(sse, best * (1.0 + 200.0 / n))
+    alike = np.abs(theta[:, None] - theta) < 1e-3 * (1.0 + np.abs(theta))
+    copies: Flags = np.all(alike, axis=2)  # [i, j]: i is a copy of j
     keep: list[int] = []
-    for i in order:
-        if sse[i] > 4.0 * best + 1e-9 and sse[i] > best * (1.0 + 200.0 / n):
-            continue
-        if any(np.all(np.abs(theta[i] - theta[j]) < 1e-3 * (1.0 + np.abs(theta[j]))) for j in keep):
-            continue
-        keep.append(int(i))
+    for i in order.tolist():
+        if not behind[i] and not any(copies[i, j] for j in keep):
+            keep.append(i)
     return np.array(sorted(keep))

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from weakref import WeakKeyDictionary
+
 import numpy as np
 
 from loopfit.core.arrays import Array
@@ -15,6 +17,7 @@ _DEAD_TIMES = (0.0, 0.8, 2.5)  # in units of 1 / omega_n
 _KEPT = 6
 _APART = 0.6
 _PERIODOGRAM_ROWS = 4096
+_SCANNED: WeakKeyDictionary[Columns, Array] = WeakKeyDictionary()  # coloured noise asks for the same starts again
 
 
 def scan(columns: Columns, span: float, main: float | None, *, release: bool) -> Array:
@@ -31,18 +34,23 @@ def scan(columns: Columns, span: float, main: float | None, *, release: bool) ->
     release : bool
         Whether there is no input, and so no dead time.
     """
+    known = _SCANNED.get(columns)
+    if known is not None:
+        return known.copy()
     slow = span * _SLOWNESS
     if main is not None:
         near = np.array([0.85, 0.93, 1.0, 1.08, 1.18]) / main
         slow = np.concatenate([slow, near])
     dampings = np.array(_RELEASE_DAMPINGS if release else _DAMPINGS)
     lags = np.array((0.0,) if release else _DEAD_TIMES)
-    z, w, dead = (a.ravel() for a in np.meshgrid(dampings, 1.0 / slow, lags, indexing="ij"))
+    z = np.repeat(dampings, slow.size * lags.size)
+    w = np.tile(np.repeat(1.0 / slow, lags.size), dampings.size)
+    dead = np.tile(lags, dampings.size * slow.size)
     theta = columns.chart.locate(z, w, dead / w)
     theta = theta[theta[:, 2] < 0.8 * span]
-    matrix, _ = columns.evaluate(theta, derivatives=False)
-    sse = solve_linear(matrix, columns.target).sse
-    return _apart(theta, sse, span)
+    found = _apart(theta, _squares_left(columns, theta), span)
+    _SCANNED[columns] = found
+    return found.copy()
 
 
 def main_frequency(time: Array, values: Array) -> float | None:
@@ -70,17 +78,35 @@ def main_frequency(time: Array, values: Array) -> float | None:
     return float(2.0 * np.pi * cycles * (n - 1) / n / (even[-1] - even[0]))
 
 
+def _squares_left(columns: Columns, theta: Array) -> Array:
+    """Return the least sum of squares at each model (B,); what no coordinate moves is taken out once for all of them."""
+    matrix, _ = columns.evaluate(theta, derivatives=False)
+    m = columns.moving_count
+    fixed = np.linalg.qr(matrix[0, m:].T)[0].T
+    moving = matrix[:, :m] - (matrix[:, :m] @ fixed.T) @ fixed
+    target = columns.target - (columns.target @ fixed.T) @ fixed
+    if m > 1:
+        return solve_linear(moving, target).sse
+    square, whole = ((rows[:, None] @ rows[:, :, None])[:, 0, 0] for rows in (moving[:, 0], matrix[:, 0]))
+    told = square > 1e-20 * whole + 1e-300  # else the column is empty, or nothing but an offset
+    sse: Array = target @ target - told * (moving[:, 0] @ target) ** 2 / np.where(told, square, 1.0)
+    return sse
+
+
 def _apart(theta: Array, sse: Array, span: float) -> Array:
-    kept: list[Array] = []
-    for i in np.argsort(sse):
-        here = theta[i]
+    time = np.minimum(np.exp(theta[:, 0]), span)
+    kept: list[int] = []
+    for i in np.argsort(sse).tolist():
+        # plain numbers: three comparisons at a time are not worth an array
+        scale, shape, dead = theta[i].tolist()
         unlike = all(
-            np.any(np.abs(here[:2] - other[:2]) > _APART)
-            or abs(here[2] - other[2]) > 0.5 * min(np.exp(min(here[0], other[0])), span)
-            for other in kept
+            abs(scale - theta[j, 0]) > _APART
+            or abs(shape - theta[j, 1]) > _APART
+            or abs(dead - theta[j, 2]) > 0.5 * min(time[i], time[j])
+            for j in kept
         )
         if unlike:
-            kept.append(here)
+            kept.append(i)
         if len(kept) == _KEPT:
             break
-    return np.array(kept)
+    return theta[kept]

@@ -17,7 +17,7 @@ from loopfit.fit.aims import Walkers
 from loopfit.fit.columns import Columns
 from loopfit.fit.figures_of import Points
 from loopfit.fit.jumps import beside_jumps
-from loopfit.fit.reach import reach
+from loopfit.fit.reach import ARRIVED, quadratic, reach
 from loopfit.fit.separable import Solved, solve_linear
 from loopfit.fit.valleys import over_all_shapes
 
@@ -71,6 +71,7 @@ def walk(
     seen = [Points(theta=theta[None], linear=best.linear), _gain_alone(best, theta, threshold * variance)]
     open_damping, better, rise = False, None, np.zeros(walkers.count)
     rounds, turn = _ROUNDS, 0
+    way = np.zeros(walkers.count)  # how far each walker has gone along its own figure
     near_at, near_linear = at, linear  # where each walker last stood near the surface
     while True:
         if turn > 0:
@@ -86,22 +87,32 @@ def walk(
             if columns.chart.by_lags:
                 open_damping |= bool(np.any(within & (at[:, 1] <= lowest[1] + 1e-9)))
         else:
-            matrix, slopes = columns.evaluate(at[:1])
-            residual = np.repeat(best.residual, walkers.count, axis=0)
-            matrix, slopes = (np.repeat(a, walkers.count, axis=0) for a in (matrix, slopes))
+            matrix, slopes = columns.evaluate(at[:1])  # all stand on the optimum
+            residual = best.residual
+        if turn == rounds < _ROUNDS and np.any(np.abs(rise / threshold - 1.0) > _CLOSE - 1.0):
+            rounds = _ROUNDS  # not all have arrived after all
         # re-aiming brings most walkers back at once; one that stays away for as many rounds must turn back
         lost = ~(rise <= _FAR * threshold) & (turn >= _ROUNDS)
         if lost.any() and rounds < _ROUNDS_AT_MOST:
             rounds += 1
         if turn < rounds:
             aims = walkers.aims(at, linear)
-            step = reach(matrix, slopes, linear, residual, rise, aims, free, at, lowest, highest, threshold, variance)
-            ahead_at, ahead_linear = np.clip(at + step[:, :3], lowest, highest), linear + step[:, 3:]
-            back_at, back_linear = near_at + _BACK * (at - near_at), near_linear + _BACK * (linear - near_linear)
+            H, b = quadratic(matrix, slopes, linear[: matrix.shape[0]], residual, variance)
+            if turn == 0:
+                H, b = np.repeat(H, walkers.count, axis=0), np.repeat(b, walkers.count, axis=0)
+            step = reach(H, b, rise, aims, free, at, lowest, highest, threshold)
+            ahead = (aims * step).sum(axis=1)
+            way = way + ahead
+            if 0 < turn < _ROUNDS and np.all(np.abs(ahead) <= ARRIVED * walkers.longer(way)):
+                rounds = turn + 1
+            ahead_at, ahead_linear = np.minimum(np.maximum(at + step[:, :3], lowest), highest), linear + step[:, 3:]
+            if lost.any():
+                back_at, back_linear = near_at + _BACK * (at - near_at), near_linear + _BACK * (linear - near_linear)
+                ahead_at = np.where(lost[:, None], back_at, ahead_at)
+                ahead_linear = np.where(lost[:, None], back_linear, ahead_linear)
             near = (rise <= _FAR * threshold)[:, None]
             near_at, near_linear = np.where(near, at, near_at), np.where(near, linear, near_linear)
-            at = np.where(lost[:, None], back_at, ahead_at)
-            linear = np.where(lost[:, None], back_linear, ahead_linear)
+            at, linear = ahead_at, ahead_linear
         elif turn < rounds + 2:  # secant on the root of the rise, along the chord from the optimum
             off = np.abs(rise / threshold - 1.0) > _CLOSE - 1.0
             if not off.any():

@@ -30,7 +30,7 @@ class Chart:
 
     def scale(self, theta: Array) -> Array:
         """Return the unit of time (B,), s: T, or 1 / omega_n."""
-        log = np.clip(theta[:, 0], -_LARGEST_LOG, _LARGEST_LOG)
+        log = np.minimum(np.maximum(theta[:, 0], -_LARGEST_LOG), _LARGEST_LOG)
         return np.exp(log if self.by_lags else -log)
 
     @property

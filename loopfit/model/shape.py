@@ -58,12 +58,13 @@ def lag_shape(x: Array, r: Array, *, derivatives: bool = True) -> Shape:
     for chosen, formula in regimes:
         if chosen.all():
             return formula(x, r[:, None], d[:, None], derivatives)
-    out = Shape(*(np.empty_like(x) for _ in range(4)))
+    out = [np.empty_like(x) for _ in range(4 if derivatives else 2)]
     for chosen, formula in (*regimes, (np.abs(d) <= _NEAR_CRITICAL, _near_critical)):
         if chosen.any():
-            for whole, part in zip(out, formula(x[chosen], r[chosen, None], d[chosen, None], derivatives), strict=True):
+            parts = formula(x[chosen], r[chosen, None], d[chosen, None], derivatives)
+            for whole, part in zip(out, parts, strict=False):
                 whole[chosen] = part
-    return out
+    return Shape(out[0], out[1], *out[-2:])
 
 
 def _overdamped(x: Array, r: Array, d: Array, derivatives: bool) -> Shape:
@@ -86,12 +87,19 @@ def _overdamped(x: Array, r: Array, d: Array, derivatives: bool) -> Shape:
 def _underdamped(x: Array, r: Array, d: Array, derivatives: bool) -> Shape:
     a = 0.5 / r
     w = np.sqrt(-d) * a
+    angle = w * x
     E = np.exp(-a * x)
-    c, s = np.cos(w * x), np.sin(w * x) / w
+    c, s = np.cos(angle), np.sin(angle)
+    c *= E
+    s *= E
+    s *= 1.0 / w
     if not derivatives:
-        g, h = 1.0 - E * (c + a * s), E * s / r
+        g, h = 1.0 - (c + a * s), s * (2.0 * a)
         return Shape(g, h, g, h)
-    return _from_swing(x, r, a, E, c, s, (s - x * c) / (w * w))
+    turned = x * c
+    k = s - turned
+    k *= 1.0 / (w * w)
+    return _from_swing(x, a, c, s, turned, k)
 
 
 def _near_critical(x: Array, r: Array, d: Array, derivatives: bool) -> Shape:  # noqa: ARG001
@@ -104,16 +112,29 @@ def _near_critical(x: Array, r: Array, d: Array, derivatives: bool) -> Shape:  #
         c = 1.0 + c * z / ((2 * j + 1) * (2 * j + 2))
         s = 1.0 + s * z / ((2 * j + 2) * (2 * j + 3))
         k = 1.0 + k * z * (j + 2) / ((j + 1) * (2 * j + 4) * (2 * j + 5))
-    return _from_swing(x, r, a, E, c, x * s, x**3 * k / 3.0)
+    c = c * E
+    return _from_swing(x, a, c, x * s * E, x * c, x**3 * k * E / 3.0)
 
 
-def _from_swing(x: Array, r: Array, a: Array, E: Array, c: Array, s: Array, k: Array) -> Shape:
-    """Combine cosine, sine / w and (s - x c) / w^2 into the response and its derivatives."""
-    g = 1.0 - E * (c + a * s)
-    h = E * s / r
-    g_r = -2.0 * a * a * E * (x * s - a * k)
-    h_r = -a * g_r - 2.0 * a * a * E * (s + x * (c - a * s))
-    return Shape(g, h, g_r, h_r)
+def _from_swing(x: Array, a: Array, c: Array, s: Array, turned: Array, k: Array) -> Shape:
+    """Combine cosine, sine / w, x times cosine and (s - x c) / w^2, all decayed, into the response and its derivatives.
+
+    Written with few intermediate arrays: at some thousand samples the cost is memory.
+    """
+    g = a * s
+    g += c
+    np.subtract(1.0, g, out=g)
+    h = s * (2.0 * a)
+    late = x * s
+    g_r = a * k
+    g_r -= late
+    g_r *= 2.0 * a * a
+    late *= a
+    turned += s
+    turned -= late
+    turned *= -2.0 * a * a
+    turned -= a * g_r
+    return Shape(g, h, g_r, turned)
 
 
 def swing_shape(x: Array, zeta: Array, *, derivatives: bool = True) -> Shape:  # noqa: ARG001
@@ -150,16 +171,17 @@ def ladder(x: Array, shape: Shape, a: Array, b: Array, lowest: int, highest: int
     Parameters
     ----------
     x : (B, M) array
-        Time as given to the shape.
+        Time as given to the shape, at least 0.
     a, b : (B, 1) arrays
         Coefficients of the equation.
     """
-    x = np.maximum(x, 0.0)
     out = {1: shape.step, 0: shape.slope}
     if lowest < 0:
         out[-1] = np.where(x > 0, (1.0 - shape.step - b * shape.slope) / a, 0.0)
     if highest > 1:
-        out[2] = x - b * shape.step - a * shape.slope
+        taken = a * shape.slope
+        taken += b * shape.step
+        out[2] = np.subtract(x, taken, out=taken)
     if highest > 2:
         out[3] = 0.5 * x * x - b * out[2] - a * shape.step
     return out
@@ -170,8 +192,12 @@ def ladder_by_shape(
 ) -> dict[int, Array]:
     """Return the derivatives of F0..F_highest in the shape parameter (a_by, b_by: those of a and b)."""
     out = {1: shape.step_by_shape, 0: shape.slope_by_shape}
-    if highest > 1:
-        out[2] = -b_by * rungs[1] - b * out[1] - a_by * rungs[0] - a * out[0]
-    if highest > 2:
-        out[3] = -b_by * rungs[2] - b * out[2] - a_by * rungs[1] - a * out[1]
+    for k in range(2, highest + 1):
+        change = a * out[k - 2]
+        change += b * out[k - 1]
+        if a_by != 0.0:
+            change += a_by * rungs[k - 2]
+        if b_by != 0.0:
+            change += b_by * rungs[k - 1]
+        out[k] = np.negative(change, out=change)
     return out

@@ -9,8 +9,9 @@ from loopfit.analysis.result import Analysis, Model, ResponseFigures, StepUsed
 from loopfit.core.quantity import Quantity
 from loopfit.core.rounding import decimals_for, decimals_of, number
 from loopfit.record.record import Signal
+from loopfit.report.phrases import determined_words, noise_words
 
-_NAME, _UNIT, _VALUE, _RANGE = 23, 12, 11, 23
+_NAME, _UNIT, _VALUE, _RANGE = 28, 12, 11, 23
 _WIDTH, _LABEL = 100, 13
 _ORDER = ("error", "warning", "note")
 _KINDS = {
@@ -29,6 +30,8 @@ def page(analysis: Analysis) -> str:
         parts.append(_table(analysis))
     if analysis.model is not None:
         parts.append(_model_line(analysis.model, release=analysis.step is None))
+        if analysis.model.adequate:
+            parts[-1] += "\n" + _wrapped("determined", determined_words(analysis))
     if analysis.per_step:
         parts.append(_per_step(analysis))
     if analysis.findings:
@@ -110,6 +113,7 @@ def _record(analysis: Analysis) -> str:
         lines.append(f"step         {step_words(analysis.step, stepped_signal(analysis), record.sample_interval_s)}")
     else:
         lines.append("step         none: a release, returning to rest")
+    lines.append(_wrapped("noise", noise_words(analysis)))
     return "\n".join(lines)
 
 
@@ -158,10 +162,15 @@ def _table(analysis: Analysis) -> str:
             ("gain", rate, model.gain, None),
             ("dead time", "s", model.dead_time_s, None),
             *(
-                ((("slow lag", "fast lag") if len(lags) == 2 else ("lag",))[i], "s", lag, None)
+                (
+                    (("slow time constant", "fast time constant") if len(lags) == 2 else ("time constant",))[i],
+                    "s",
+                    lag,
+                    None,
+                )
                 for i, lag in enumerate(lags)
             ),
-            ("lags and dead time", "s", model.lag_plus_dead_time_s, None),
+            ("time constants + dead time", "s", model.lag_plus_dead_time_s, None),
             ("zero", "s", model.zero_s, None),
         )
     rows += _rows(
@@ -194,7 +203,7 @@ def _table(analysis: Analysis) -> str:
 
 
 def _per_step(analysis: Analysis) -> str:
-    rows = [f"{'each step alone':<28}{'damping ratio':<26}{'gain':<26}lags and dead time, s"]
+    rows = [f"{'each step alone':<28}{'damping ratio':<26}{'gain':<26}time constants + dead time, s"]
     for row in analysis.per_step:
         name = f"{row.step.time_s:>9.6g} s {_level(row.step.from_)} to {_level(row.step.to)}"
         if row.refusal is not None:

@@ -20,7 +20,7 @@ ROWS = {
     "damped period": ("model", "damped_period_s"),
     "gain": ("model", "gain"),
     "dead time": ("model", "dead_time_s"),
-    "lags and dead time": ("model", "lag_plus_dead_time_s"),
+    "time constants + dead time": ("model", "lag_plus_dead_time_s"),
     "overshoot": ("response", "overshoot_percent"),
     "rise time": ("response", "rise_time_s"),
     "delay time": ("response", "delay_time_s"),
@@ -71,6 +71,7 @@ def test_settling_beyond_the_record_is_said_to_be_so() -> None:
 
 def test_an_open_interval_is_a_bound_and_an_empty_overshoot_is_none() -> None:
     assert in_words(Quantity(4.0, 2.5, np.inf)) == "at least 2.5"
+    assert in_words(Quantity(11.0, 11.0, np.inf)) == "at least 11"  # a bound that is the value itself: two figures
     heater = page(loopfit.analyze(CASES / "rinse-heater.csv"))
     assert heater.splitlines()[1].startswith("No overshoot")
 
