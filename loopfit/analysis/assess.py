@@ -87,14 +87,13 @@ def assess(
         fit = choose(trace, noise, noise_floor=noise_floor)
     plain = fit  # least squares explains most; what it leaves is judged, not what the coloured noise may swallow
     doubt = doubt_of(plain, confidence=confidence, noise_floor=noise_floor)
-    if (
-        doubt is None or not doubt.clear
-    ):  # what a model cannot follow is not noise, and must not be filtered as if it were
+    if doubt is not None and doubt.clear:
+        # what a model cannot follow is not noise, and must not be filtered as if it were
+        fit = replace(plain, inflation=max(plain.inflation, doubt.inflation))
+    else:
         fit = whitened(plain, trace, noise_floor=noise_floor)
-        if (
-            fit.sse - plain.sse > _FAR_OFF * plain.inflation * plain.variance
-        ):  # no noise of that colour moves a model so far
-            fit = plain
+        if fit.sse - plain.sse > _FAR_OFF * plain.inflation * plain.variance:
+            fit = plain  # no noise of that colour moves a model so far
     surface = surface_of(fit, confidence=confidence, band=band)
     for _ in range(_REFITS):  # a walker can meet a better model than the search did
         if surface.better is None:

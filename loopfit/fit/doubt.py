@@ -22,7 +22,8 @@ from loopfit.model.chart import LAGS, R_SHIFT
 _LAGS = (0.2, 0.5, 1.0, 1.7, 3.5, 8.0)  # over omega_n, about
 _HIDING = (0.7, 1.7)
 _CLEAR = 12.0  # noise powers from which the record is clearly not of second order
-_LOOK = 2.7  # noise powers by the score test, from which the family is fitted: half of all true second orders stay below
+# noise powers by the score test from which the family is fitted: half of the true second orders stay below
+_LOOK = 2.7
 _SMALL_SAMPLE = 6.0
 _FEWEST_DEGREES = 4
 _STARTS = 4
@@ -36,7 +37,8 @@ class Doubt:
     """The richer family on a record: its best members and how far from them the record lets it go.
 
     `theta` (M, 4) and `linear` (M, q) with their sums of squares `sse` (M,), the best first; `threshold`: allowed rise
-    of the sum of squares over the `variance`; `clear`: the record is clearly not of second order.
+    of the sum of squares over the `variance`, which holds the `inflation` of coloured noise that is not filtered;
+    `clear`: the record is clearly not of second order.
     """
 
     family: ThirdLag
@@ -45,6 +47,7 @@ class Doubt:
     sse: Array
     variance: float
     threshold: float
+    inflation: float
     clear: bool
 
 
@@ -75,16 +78,20 @@ def doubt_of(fit: Fit, *, confidence: float, noise_floor: float) -> Doubt | None
     left = max(float(solved.sse[0]), 1e-300)
     at_once = (fit.sse - left) * residual.size / (left * inflation)
     factor, plain = 1.0, fit.sse
-    # what the family leaves over may itself be misfit: where it explains much, that too is not filtered as if it were noise
-    if evenly_spaced(fit) and at_once <= _CLEAR:
-        inflation = 1.0
+    if evenly_spaced(fit):
         whitener = whitener_of(residual, np.vstack([combined(solved.linear, slopes)[0], columns[0]]))
-        if whitener is not None:
-            family = ThirdLag(columns=fit.columns, whitener=whitener)
-            last = _minimise(family, _apart(last), tolerance, rounds)
-            working = replace(fit.columns, whitener=whitener)
-            plain = float(search(working, fit.theta[None], fit.free, tolerance=0.01, rounds=12).sse[0])
-            factor = 1.0 + _SMALL_SAMPLE / whitener.effective_rows
+        if at_once > _CLEAR:
+            # what the family leaves over may itself be misfit: it widens, but is not filtered as if it were noise
+            if whitener is not None:
+                inflation = max(inflation, residual.size / whitener.effective_rows)
+        else:
+            inflation = 1.0
+            if whitener is not None:
+                family = ThirdLag(columns=fit.columns, whitener=whitener)
+                last = _minimise(family, _apart(last), tolerance, rounds)
+                working = replace(fit.columns, whitener=whitener)
+                plain = float(search(working, fit.theta[None], fit.free, tolerance=0.01, rounds=12).sse[0])
+                factor = 1.0 + _SMALL_SAMPLE / whitener.effective_rows
     kept = _apart(last)
     solved = solve_linear(family.evaluate(kept, derivatives=False)[0], family.target)
     n, parameters = family.target.size, 4 + solved.linear.shape[1]
@@ -103,6 +110,7 @@ def doubt_of(fit: Fit, *, confidence: float, noise_floor: float) -> Doubt | None
         sse=solved.sse[near],
         variance=variance,
         threshold=limit,
+        inflation=inflation,
         clear=drop > _CLEAR,
     )
 

@@ -18,6 +18,7 @@ _FINE, _COARSE = 260, 60
 _LEVELS = (0.1, 0.5, 0.9)
 _LEAST_OVERSHOOT = 1e-6
 _STEEP = 1e-9
+_BESIDE = 1e-3  # of T
 
 
 def third_figures(
@@ -51,6 +52,8 @@ def third_figures(
     instants = np.column_stack([crossing, settle, peak_time])
     safe = np.where(np.isfinite(instants), instants, 0.0)
     x = (safe - theta[:, 2:3]) / scale[:, None]
+    if gradients:
+        x = np.column_stack([x, x[:, 4] + _BESIDE])  # beside the peak, for the bend there
     rungs = third_order(x, LAGS.shape(theta), np.exp(theta[:, 3]), 1, derivatives=gradients)
     k = kappa[:, None]
     slope = rungs[0][0] + k * rungs[-1][0]  # in units of 1 / T
@@ -86,13 +89,13 @@ def third_figures(
         axis=2,
     )
     later = np.where(steep[..., None], -moved / np.where(steep, slope, 1.0)[..., None], 0.0) * scale[:, None, None]
-    later[~np.isfinite(instants)] = 0.0
+    later[:, :5][~np.isfinite(instants)] = 0.0
     only_gain = np.zeros_like(points)
     only_gain[:, 4] = 1.0
     return figures, {
         "gain": only_gain,
         "overshoot_percent": 100.0 * moved[:, 4] * swings[:, None],
-        "peak_time_s": _peak_moves(x[:, 4], theta, kappa, gain, scale) * swings[:, None],
+        "peak_time_s": _peak_moves(rungs, x[:, 4], kappa, gain, scale) * swings[:, None],
         "rise_time_s": later[:, 2] - later[:, 0],
         "settling_time_s": later[:, 3] * (edge != 0)[:, None],
         "delay_time_s": later[:, 1],
@@ -104,18 +107,21 @@ def _responses(x: Array, theta: Array, kappa: Array) -> Array:
     return rungs[1][0] + kappa[:, None] * rungs[0][0]
 
 
-def _peak_moves(x: Array, theta: Array, kappa: Array, gain: Array, scale: Array) -> Array:
-    """Return the gradient (B, 6) of the peak time: where the slope crosses 0."""
-    rungs = third_order(x[:, None], LAGS.shape(theta), np.exp(theta[:, 3]), 1)
-    h = 1e-3
-    ahead = third_order(x[:, None] + h, LAGS.shape(theta), np.exp(theta[:, 3]), 1)
-    k = kappa[:, None]
-    bend = (ahead[0][0] - rungs[0][0] + k * (ahead[-1][0] - rungs[-1][0]))[:, 0] / h
-    by_u = ((ahead[1][1] - rungs[1][1]) + k * (ahead[0][1] - rungs[0][1]))[:, 0] / h
-    by_lag = ((ahead[1][2] - rungs[1][2]) + k * (ahead[0][2] - rungs[0][2]))[:, 0] / h
-    slope = (rungs[0][0] + k * rungs[-1][0])[:, 0]
-    second = rungs[-1][0][:, 0]
-    moved = np.stack([-x * bend - slope, by_u, -bend / scale, by_lag, -kappa / gain * second, second / gain], axis=1)
+def _peak_moves(
+    rungs: dict[int, tuple[Array, Array, Array]], x: Array, kappa: Array, gain: Array, scale: Array
+) -> Array:
+    """Return the gradient (B, 6) of the peak time: where the slope crosses 0. The rungs are at the peak and beside it."""
+
+    def rise(rung: int, part: int) -> Array:
+        values = rungs[rung][part]
+        return np.asarray((values[:, 5] - values[:, 4]) / _BESIDE)
+
+    slope, bend = rungs[0][0][:, 4] + kappa * rungs[-1][0][:, 4], rise(0, 0) + kappa * rise(-1, 0)
+    by_shape, by_lag = (rise(1, part) + kappa * rise(0, part) for part in (1, 2))
+    second = rungs[-1][0][:, 4]
+    moved = np.stack(
+        [-x * bend - slope, by_shape, -bend / scale, by_lag, -kappa / gain * second, second / gain], axis=1
+    )
     flat = np.abs(bend) < 1e-9
     out: Array = np.where(flat[:, None], 0.0, -moved / np.where(flat, 1.0, bend)[:, None] * scale[:, None])
     return out

@@ -6,6 +6,8 @@ drift are solved anew.
 
 from __future__ import annotations
 
+from typing import NamedTuple
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -26,6 +28,8 @@ _CAPS = np.array([0.5, 0.8, np.inf, 0.8])
 _REACHES = np.array([0.3, 0.5, 0.3, 0.5, 0.5, 0.3])  # dead time in units of T, gain and zero of the gain
 _CHORD = np.linspace(0.15, 1.0, 6)
 _GENEROUS = 1.3  # a surface bends
+_ARRIVED = 0.02  # of a walker's way
+_EVERYTHING = np.ones(4, dtype=bool)
 
 
 def widened(doubt: Doubt, figures: dict[str, Quantity | None], span: float, band: float) -> dict[str, Quantity | None]:
@@ -47,85 +51,120 @@ def widened(doubt: Doubt, figures: dict[str, Quantity | None], span: float, band
     return {name: _spanning(figures[name], values) for name, values in seen.items()}
 
 
+class _Place(NamedTuple):
+    """Where walkers stand: the surface's curvature and gradient there, its rise, the figures and their gradients."""
+
+    linear: Array
+    curvature: Array
+    gradient: Array
+    rise: Array
+    figures: dict[str, Array]
+    aims: dict[str, Array]
+    allowed: NDArray[np.bool_]
+
+    def of(self, members: NDArray[np.intp]) -> _Place:
+        """Return the place of some of them."""
+        figures, aims = (
+            {name: values[members] for name, values in table.items()} for table in (self.figures, self.aims)
+        )
+        return _Place(
+            self.linear[members], self.curvature[members], self.gradient[members], self.rise[members],
+            figures, aims, self.allowed[members],
+        )  # fmt: skip
+
+
 def _walk(doubt: Doubt, known: dict[str, Quantity | None], span: float, band: float) -> dict[str, Array]:
     """Return each figure's values (P,) at points that the record allows."""
-    family, threshold, variance, least = doubt.family, doubt.threshold, doubt.variance, float(doubt.sse[0])
-    target, highest = family.target, family.highest
-    at, linear = doubt.theta, doubt.linear
-    rounds = _ROUNDS_IF_CLEAR if doubt.clear else _ROUNDS
-    everything = np.ones(4, dtype=bool)
-    seen: dict[str, list[Array]] = {name: [] for name in FIGURES}
-    for turn in range(rounds + 1):
-        columns, slopes = family.evaluate(at)
-        linear, residual = _resolve(columns, linear, target)
-        rise = (np.einsum("bn,bn->b", residual, residual) - least) / variance
-        figures, gradients = third_figures(np.concatenate([at, linear[:, :2]], axis=1), span, band, gradients=True)
-        allowed = (rise <= _CLOSE * threshold) & (_slowest(at) <= _LONGEST * span)
-        for name in FIGURES:
-            seen[name].append(figures[name][allowed])
-        if turn == rounds:
-            break
-        H, b = quadratic(columns, slopes, linear, residual, variance)
-        # beside kappa = 0 a zero is a shift in time, to first order: without a bound on the step the walkers leap to and fro
-        reaches = np.tile(_REACHES, (at.shape[0], 1))
-        reaches[:, 2] *= LAGS.scale(at)
-        reaches[:, 4:] *= np.abs(linear[:, :1]) + 1e-300
-        H[:, range(6), range(6)] += threshold / reaches**2
-        if turn == 0:  # from each member to both sides of the figures that it may widen
-            member, which, sign = _worth_walking(H, figures, gradients, threshold - rise, known, clear=doubt.clear)
-            if member.size == 0:
+    threshold, highest = doubt.threshold, doubt.family.highest
+    place = _look(doubt, doubt.theta, doubt.linear, span, band)
+    seen = {name: [values[place.allowed]] for name, values in place.figures.items()}
+    member, which, sign = _worth_walking(place, threshold, known, clear=doubt.clear)
+    if member.size:
+        place = place.of(member)
+        home = near = at = doubt.theta[member]
+        home_linear = near_linear = place.linear
+        start = own = np.choose(which, [place.figures[name] for name in FIGURES])
+        for _ in range(_ROUNDS_IF_CLEAR if doubt.clear else _ROUNDS):
+            aims = np.zeros_like(place.gradient)
+            for i, name in enumerate(FIGURES):
+                aims[which == i, :6] = place.aims[name][which == i]
+            step = reach(place.curvature, place.gradient, place.rise, aims * sign[:, None], _EVERYTHING, at, LOWEST, highest,
+                         threshold, _CAPS)  # fmt: skip
+            close = (place.rise <= _FAR * threshold)[:, None]
+            near, near_linear = np.where(close, at, near), np.where(close, place.linear, near_linear)
+            ahead = np.minimum(np.maximum(at + step[:, :4], LOWEST), highest)
+            linear = np.where(close, place.linear + step[:, 4:], near_linear + _BACK * (place.linear - near_linear))
+            at = np.where(close, ahead, near + _BACK * (at - near))
+            place = _look(doubt, at, linear, span, band)
+            for name, values in place.figures.items():
+                seen[name].append(values[place.allowed])
+            before, own = own, np.choose(which, [place.figures[name] for name in FIGURES])
+            on = np.abs(place.rise / threshold - 1.0) < _CLOSE - 1.0
+            with np.errstate(invalid="ignore"):  # a settling time beyond the record is infinite
+                moving = np.abs(own - before) > _ARRIVED * np.abs(own - start)
+            if (on & ~moving).all():
                 break
-            at, linear, residual, rise = at[member], linear[member], residual[member], rise[member]
-            columns, slopes, H, b = columns[member], slopes[member], H[member], b[member]
-            gradients = {name: gradient[member] for name, gradient in gradients.items()}
-            home, home_linear, near, near_linear = at, linear, at, linear
-        aims = np.zeros((at.shape[0], 4 + linear.shape[1]))
-        for i, name in enumerate(FIGURES):
-            aims[which == i, :6] = gradients[name][which == i]
-        aims *= sign[:, None]
-        step = reach(H, b, rise, aims, everything, at, LOWEST, highest, threshold, _CAPS)
-        close = (rise <= _FAR * threshold)[:, None]
-        near, near_linear = np.where(close, at, near), np.where(close, linear, near_linear)
-        ahead = np.clip(at + step[:, :4], LOWEST, highest)
-        at = np.where(close, ahead, near + _BACK * (at - near))
-        linear = np.where(close, linear + step[:, 4:], near_linear + _BACK * (linear - near_linear))
-    else:
-        chords = (home + _CHORD[:, None, None] * (near - home)).reshape(-1, 4)
-        on_chords = (home_linear + _CHORD[:, None, None] * (near_linear - home_linear)).reshape(-1, linear.shape[1])
-        columns, _ = family.evaluate(chords, derivatives=False)
-        on_chords, residual = _resolve(columns, on_chords, target)
-        rise = (np.einsum("bn,bn->b", residual, residual) - least) / variance
-        allowed = (rise <= _CLOSE * threshold) & (_slowest(chords) <= _LONGEST * span)
-        points = np.concatenate([chords, on_chords[:, :2]], axis=1)[allowed]
-        figures, _ = third_figures(points, span, band, gradients=False)
-        for name in FIGURES:
-            seen[name].append(figures[name])
+        near = np.where((place.rise <= _FAR * threshold)[:, None], at, near)
+        near_linear = np.where((place.rise <= _FAR * threshold)[:, None], place.linear, near_linear)
+        # a jump of the settling time can lie inside; and where the end is not allowed, the way to it may be
+        inside = (which == FIGURES.index("settling_time_s")) | ~place.allowed
+        share = _CHORD[:, None, None]
+        chords = (home + share * (near - home))[:, inside].reshape(-1, 4)
+        linear = (home_linear + share * (near_linear - home_linear))[:, inside].reshape(-1, home_linear.shape[1])
+        if inside.any():
+            for name, values in _along(doubt, chords, linear, span, band).items():
+                seen[name].append(values)
     return {name: np.concatenate(values) for name, values in seen.items()}
 
 
+def _look(doubt: Doubt, at: Array, linear: Array, span: float, band: float) -> _Place:
+    columns, slopes = doubt.family.evaluate(at)
+    linear, residual = _resolve(columns, linear, doubt.family.target)
+    rise = _rise(doubt, residual)
+    figures, aims = third_figures(np.concatenate([at, linear[:, :2]], axis=1), span, band, gradients=True)
+    H, b = quadratic(columns, slopes, linear, residual, doubt.variance)
+    # beside kappa = 0 a zero is a shift in time, to first order: without a bound on the step the walkers leap to and fro
+    reaches = np.tile(_REACHES, (at.shape[0], 1))
+    reaches[:, 2] *= LAGS.scale(at)
+    reaches[:, 4:] *= np.abs(linear[:, :1]) + 1e-300
+    H[:, range(6), range(6)] += doubt.threshold / reaches**2
+    return _Place(linear, H, b, rise, figures, aims, _allowed(doubt, rise, at, span))
+
+
+def _along(doubt: Doubt, chords: Array, linear: Array, span: float, band: float) -> dict[str, Array]:
+    """Return the figures at those points of the chords that the record allows."""
+    columns, _ = doubt.family.evaluate(chords, derivatives=False)
+    linear, residual = _resolve(columns, linear, doubt.family.target)
+    allowed = _allowed(doubt, _rise(doubt, residual), chords, span)
+    return third_figures(np.concatenate([chords, linear[:, :2]], axis=1)[allowed], span, band, gradients=False)[0]
+
+
+def _rise(doubt: Doubt, residual: Array) -> Array:
+    return np.asarray(((residual * residual).sum(axis=1) - doubt.sse[0]) / doubt.variance)
+
+
+def _allowed(doubt: Doubt, rise: Array, at: Array, span: float) -> NDArray[np.bool_]:
+    return (rise <= _CLOSE * doubt.threshold) & (_slowest(at) <= _LONGEST * span)
+
+
 def _worth_walking(
-    H: Array,
-    figures: dict[str, Array],
-    gradients: dict[str, Array],
-    allowed: Array,
-    known: dict[str, Quantity | None],
-    *,
-    clear: bool,
+    place: _Place, threshold: float, known: dict[str, Quantity | None], *, clear: bool
 ) -> tuple[NDArray[np.intp], NDArray[np.intp], Array]:
     """Return member, figure and sign of the walks that may leave the second order's own intervals."""
+    H, allowed = place.curvature, threshold - place.rise
     scale = 1.0 / np.sqrt(np.maximum(H.diagonal(axis1=1, axis2=2), 1e-200))
     both = scale[:, :, None] * scale[:, None, :]
     inverse = np.linalg.inv(H * both + 1e-13 * np.eye(H.shape[1])) * both
     walks: list[tuple[int, int, float]] = []
     for i, name in enumerate(FIGURES):
-        quantity, slope = known[name], gradients[name]
+        quantity, slope = known[name], place.aims[name]
         if quantity is None or (name == "gain" and not clear):
             continue
         spread = _GENEROUS * np.sqrt(
             np.maximum(np.einsum("bi,bij,bj->b", slope, inverse[:, :6, :6], slope) * allowed, 0.0)
         )
         for member in range(H.shape[0]):
-            value = float(figures[name][member])
+            value = float(place.figures[name][member])
             if value - spread[member] < quantity.low:
                 walks.append((member, i, -1.0))
             if value + spread[member] > quantity.high:
