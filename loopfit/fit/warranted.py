@@ -10,7 +10,7 @@ from loopfit.fit.colour import whitener_of
 from loopfit.fit.estimate import Fit, search
 from loopfit.fit.intervals import evenly_spaced, residual_and_jacobian
 
-_CONFIDENCE = 0.999  # one false movement in a thousand records that are looked at
+_CONFIDENCE = 0.9999  # one false movement in ten thousand records: it moves the gain by many times its error
 _SMALL_SAMPLE = 6.0  # as for the intervals
 _FEWEST_DEGREES = 4.0
 
