@@ -22,8 +22,9 @@ from loopfit.model.chart import LAGS, R_SHIFT
 _LAGS = (0.2, 0.5, 1.0, 1.7, 3.5, 8.0)  # over omega_n, about
 _HIDING = (0.7, 1.7)
 _CLEAR = 12.0  # noise powers from which the record is clearly not of second order
-# noise powers by the score test from which the family is fitted: half of the true second orders stay below
-_LOOK = 2.7
+# noise powers by the score test from which the family is fitted; a hidden lag hides best where nothing swings
+_LOOK, _LOOK_IF_SWINGING = 2.6, 3.4
+_SWINGING = 0.5  # r from which a response swings well (damping ratio 0.71)
 _SMALL_SAMPLE = 6.0
 _FEWEST_DEGREES = 4
 _STARTS = 4
@@ -128,7 +129,8 @@ def _promising(fit: Fit) -> Array:
     basis = np.linalg.qr(np.swapaxes(more, 1, 2))[0]
     taken = np.sum((rest @ basis) ** 2, axis=1)
     power = float(rest @ rest) / fit.degrees
-    if not (power > 0 and np.max(taken) > _LOOK * power):
+    swings = fit.columns.chart.lags(fit.theta[None])[1][0] > _SWINGING
+    if not (power > 0 and np.max(taken) > (_LOOK_IF_SWINGING if swings else _LOOK) * power):
         return starts[:0]
     return starts if np.max(taken) > _CLEAR * power else starts[np.argsort(-taken)[:_STARTS]]
 
