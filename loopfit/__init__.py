@@ -12,18 +12,42 @@ if TYPE_CHECKING:
     from loopfit.core.errors import LoopfitError, RecordError, UsageError
     from loopfit.core.finding import Finding
     from loopfit.core.quantity import Quantity
+    from loopfit.equivalents.public import equivalent
+    from loopfit.loop.gains import Gains
+    from loopfit.loop.loop import Loop
+    from loopfit.loop.plant import Plant
+    from loopfit.loop.settings import Settings
 
 __version__ = "0.1.0"
-__all__ = ["Analysis", "Finding", "LoopfitError", "Quantity", "RecordError", "UsageError", "analyze", "to_control"]
+__all__ = [
+    "Analysis",
+    "Finding",
+    "Gains",
+    "Loop",
+    "LoopfitError",
+    "Plant",
+    "Quantity",
+    "RecordError",
+    "Settings",
+    "UsageError",
+    "analyze",
+    "equivalent",
+    "to_control",
+]
 
 _HOMES = {
     "Analysis": "loopfit.analysis.result",
     "Finding": "loopfit.core.finding",
+    "Gains": "loopfit.loop.gains",
+    "Loop": "loopfit.loop.loop",
     "LoopfitError": "loopfit.core.errors",
+    "Plant": "loopfit.loop.plant",
     "Quantity": "loopfit.core.quantity",
     "RecordError": "loopfit.core.errors",
+    "Settings": "loopfit.loop.settings",
     "UsageError": "loopfit.core.errors",
     "analyze": "loopfit.analysis.analyze",
+    "equivalent": "loopfit.equivalents.public",
     "to_control": "loopfit.analysis.interchange",
 }
 

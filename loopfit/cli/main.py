@@ -11,7 +11,9 @@ import typer
 
 from loopfit import __version__
 from loopfit.cli.analyze import analyze_command
+from loopfit.cli.equivalent import EquivalentCommand, equivalent_command
 from loopfit.cli.exits import UNUSABLE_INPUT
+from loopfit.cli.retune import retune_command
 
 app = typer.Typer(
     name="loopfit",
@@ -39,6 +41,8 @@ def root(
 
 
 app.command("analyze")(analyze_command)
+app.command("equivalent", cls=EquivalentCommand)(equivalent_command)
+app.command("retune")(retune_command)
 
 
 def main() -> None:
