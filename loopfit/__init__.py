@@ -17,6 +17,7 @@ if TYPE_CHECKING:
     from loopfit.loop.loop import Loop
     from loopfit.loop.plant import Plant
     from loopfit.loop.settings import Settings
+    from loopfit.tuning.retune import retune
 
 __version__ = "0.1.0"
 __all__ = [
@@ -32,6 +33,7 @@ __all__ = [
     "UsageError",
     "analyze",
     "equivalent",
+    "retune",
     "to_control",
 ]
 
@@ -48,6 +50,7 @@ _HOMES = {
     "UsageError": "loopfit.core.errors",
     "analyze": "loopfit.analysis.analyze",
     "equivalent": "loopfit.equivalents.public",
+    "retune": "loopfit.tuning.retune",
     "to_control": "loopfit.analysis.interchange",
 }
 

@@ -59,7 +59,7 @@ def _drawn(result: Equivalents) -> Figure:
     ).figure
     body = compared(result)
     time = _times(result, body)
-    errors = any(one.step_error_max_percent is not None for one in result.equivalents)
+    errors = result.best is not None and result.best.step_error_max_percent is not None and bool(body.static_gain)
     grid = out.add_gridspec(
         2 if errors else 1, 2, width_ratios=[1.6, 1.0], height_ratios=[1.0, 0.42] if errors else [1.0]
     )
@@ -94,10 +94,8 @@ def compared(result: Equivalents) -> System:
     system = result.system
     if not system.integrating or not isinstance(system, RationalSystem):
         return system
-    body = system.without_cancellations[0]
-    if len(body.numerator) == len(body.denominator):
-        return system  # the rest would differentiate
-    return system if body.rest.integrating else body.rest
+    rest = system.without_cancellations[0].rest
+    return system if rest is None or rest.integrating else rest
 
 
 def _times(result: Equivalents, body: System) -> Array:
@@ -107,6 +105,8 @@ def _times(result: Equivalents, body: System) -> Array:
     end = 6.0 / float(rates.min()) + body.dead_time_s if rates.size else 3.0 * body.dead_time_s or 1.0
     if result.window_s is not None:
         end = 1.15 * result.window_s if result.window_s > 0 else 1.0
+    elif rates.size == 0 and np.any(body.poles.imag > 0):  # swings without end
+        end = 25.0 / float(np.abs(body.poles).max()) + body.dead_time_s
     elif not body.stable and np.any(body.poles.real > 0):
         end = 4.0 / float(body.poles.real.max()) + body.dead_time_s
     best = result.best
@@ -117,8 +117,8 @@ def _times(result: Equivalents, body: System) -> Array:
     return np.unique(np.concatenate([[-0.04 * end, -1e-9 * end], np.linspace(0.0, end, _SAMPLES), jumps]))
 
 
-def _response(one: Equivalent, time: Array) -> Array:
-    return RationalSystem(transfer_of_equivalent(one)).step(time)
+def _response(one: Equivalent, body: System, time: Array) -> Array:
+    return RationalSystem(transfer_of_equivalent(one, integrating=body.integrating)).step(time)
 
 
 def _steps(panel: Panel, result: Equivalents, body: System, time: Array) -> None:
@@ -126,10 +126,10 @@ def _steps(panel: Panel, result: Equivalents, body: System, time: Array) -> None
     exact = body.step(time)
     axes.axvline(0.0, color=STEP, lw=0.9)
     for one in _others(result):
-        axes.plot(time, _response(one, time), color=_OTHER, lw=0.8, zorder=2, label=one.method)
+        axes.plot(time, _response(one, body, time), color=_OTHER, lw=0.8, zorder=2, label=one.method)
     shown = [exact]
     if best is not None:
-        own = _response(best, time)
+        own = _response(best, body, time)
         shown.append(own)
         (line,) = axes.plot(time, own, color=FIT, lw=3.2, zorder=3, label="equivalent")
         panel.lines.append(line)
@@ -154,7 +154,7 @@ def _errors(panel: Panel, result: Equivalents, body: System, time: Array) -> Non
     exact = body.step(time)
     largest = 0.0
     for one in (*_others(result), best):
-        error = 100.0 * (_response(one, time) - exact) / final
+        error = 100.0 * (_response(one, body, time) - exact) / final
         chosen = one is best
         largest = max(largest, float(np.abs(error).max())) if chosen else largest
         (line,) = axes.plot(

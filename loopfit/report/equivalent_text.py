@@ -5,18 +5,24 @@ from __future__ import annotations
 import math
 import textwrap
 
+import numpy as np
+
 from loopfit.core.quantity import Quantity
 from loopfit.equivalents.course import course_of
 from loopfit.equivalents.interchange import transfer_of_equivalent
 from loopfit.equivalents.response import figures_of
-from loopfit.equivalents.result import Equivalent, Equivalents, ExactFigures
+from loopfit.equivalents.result import Equivalent, Equivalents, ExactFigures, share_words
 from loopfit.equivalents.system import RationalSystem
 from loopfit.model.transfer import Complex
 
 _WIDTH, _LABEL = 100, 13
 _NAME, _UNIT, _VALUE = 28, 8, 12
 _METHOD, _CELL = 51, 10
+_ON_AXIS = 1e-10  # real part in relation to size: a pole on the imaginary axis, within rounding
+_UNSEEN = 0.01  # %: an overshoot that no recorder shows, and the figures that hang on it
 _ALIKE = 1e-6  # poles this near, in relation to their size, are shown as one repeated
+_OF_A_PEAK = ("overshoot_percent", "peak_time_s", "decay_ratio")
+_LEAST_DECAY = 0.001  # a second peak below a thousandth of the first
 _FIGURES = (
     ("overshoot", "%", "overshoot_percent"),
     ("rise time", "s", "rise_time_s"),
@@ -48,6 +54,8 @@ def answer(result: Equivalents) -> str:
     if best is None:
         return f"No equivalent of second order: {result.reasons[0] if result.reasons else 'no method gives one'}."
     first = f"{_model_words(best, integrating=result.system.integrating)}."
+    if not result.adequate and best.step_error_max_percent is not None:
+        first = f"NOT adequate; the nearest: {first}"
     return f"{first[0].upper()}{first[1:]}\n{_quality(result, best)}"
 
 
@@ -57,9 +65,9 @@ def pole_words(poles: Complex, *, most: int = 12) -> str:
     for one, count in repeated(poles):
         if one.imag < 0:
             continue
-        word = _digits(one.real)
+        word = _digits(one.real, 6)
         if one.imag > 0:
-            word += f" ± {_digits(one.imag)}j"
+            word += f" ± {_digits(one.imag, 6)}j"
         words.append(word if count == 1 else f"{word} ({count} times)")
     if len(words) > most:
         words = [*words[:most], f"and {len(words) - most} more"]
@@ -90,7 +98,8 @@ def equivalent_figures(result: Equivalents) -> ExactFigures | None:
 def _model_words(best: Equivalent, *, integrating: bool) -> str:
     lags = best.time_constants_s
     start = "unstable, " if any(lag < 0 for lag in lags or ()) or (best.damping_ratio or 0.0) < 0 else ""
-    start += "integrating, followed by " if integrating else ""
+    start += "integrating, " if integrating else ""
+    start += "followed by " if integrating and (lags or best.damping_ratio is not None) else ""
     if best.damping_ratio is not None and best.natural_frequency_rad_s is not None:
         text = f"damping ratio {_digits(best.damping_ratio)}, natural frequency {_digits(best.natural_frequency_rad_s)} rad/s"
         if lags:
@@ -114,11 +123,11 @@ def _quality(result: Equivalents, best: Equivalent) -> str:
     if largest is None or rms is None:
         return f"{_capital(best.method)}; it cannot be compared with the exact response: {verdict}."
     if largest == 0.0:
-        return f"{_capital(best.method)}: nothing is left out; {verdict}."
+        return f"{_capital(best.method)}: nothing that shows is left out; {verdict}."
     what = "final slope" if result.system.integrating else "final value"
     return (
-        f"By {best.method}: its step response is off by at most {largest:.2g} % of the {what}, "
-        f"{rms:.2g} % rms; {verdict}."
+        f"By {best.method}: its step response is off by at most {share_words(largest)} % of the {what}, "
+        f"{share_words(rms)} % rms; {verdict}."
     )
 
 
@@ -126,10 +135,13 @@ def _system(result: Equivalents) -> str:
     system = result.system
     lines = [] if result.expression is None else [_wrapped("system", result.expression)]
     kind = "integrating" if system.integrating else "stable" if system.stable else "UNSTABLE"
+    if kind == "UNSTABLE" and not np.any(system.poles.real > _ON_AXIS * np.abs(system.poles)):
+        kind = "NOT STABLE: undamped, it swings without end"
     lines.append(_wrapped("", f"{kind}, dead time {_digits(system.dead_time_s)} s"))
     if result.expression is None:
         lines[0] = _wrapped("system", lines[0].strip())
-    lines.append(_wrapped("poles", f"{pole_words(system.poles)}{' rad/s' if system.poles.size else ''}"))
+    more = " (those furthest to the right of infinitely many)" if system.denominator is None else ""
+    lines.append(_wrapped("poles", f"{pole_words(system.poles)}{' rad/s' if system.poles.size else ''}{more}"))
     lines.append(_wrapped("zeros", f"{pole_words(system.zeros)}{' rad/s' if system.zeros.size else ''}"))
     return "\n".join(lines)
 
@@ -138,7 +150,7 @@ def _figures(result: Equivalents) -> str:
     exact, own = result.response, equivalent_figures(result)
     rows = []
     for name, unit, field in _FIGURES:
-        cells = [_cell(getattr(exact, field)), "" if own is None else _cell(getattr(own, field))]
+        cells = [_shown(exact, field), "" if own is None else _shown(own, field)]
         if name == "settling time":
             name = f"{name} (±{result.band_percent:g} %)"
         if any(cell.strip("-") for cell in cells):
@@ -161,24 +173,32 @@ def _methods(result: Equivalents) -> str:
         numbers = (one.damping_ratio, one.natural_frequency_rad_s, one.gain, one.dead_time_s, one.zero_s)
         errors = (one.step_error_max_percent, one.step_error_rms_percent)
         cells = ["-" if value is None else _digits(value) for value in numbers]
-        cells += ["-" if value is None else f"{value:.2g}" for value in errors]
-        rows.append((f"{name:<{_METHOD}}" + "".join(f"{cell:>{_CELL}}" for cell in cells)).rstrip())
+        cells += ["-" if value is None else share_words(value) for value in errors]
+        rows.append((f"{name:<{_METHOD}}" + "".join(f" {cell:>{_CELL - 1}}" for cell in cells)).rstrip())
         if one.reason:
             rows.append(textwrap.fill(one.reason, 116, initial_indent=" " * 6, subsequent_indent=" " * 6))
     return "\n".join(rows)
 
 
-def _cell(quantity: Quantity | None) -> str:
-    return "-" if quantity is None else _digits(quantity.value)
+def _shown(figures: ExactFigures, field: str) -> str:
+    quantity: Quantity | None = getattr(figures, field)
+    if quantity is None:
+        return "-"
+    overshoot = figures.overshoot_percent
+    if overshoot is not None and 0.0 < overshoot.value < _UNSEEN and field in _OF_A_PEAK:
+        return f"< {_UNSEEN:g}" if field == "overshoot_percent" else "-"
+    if field == "decay_ratio" and quantity.value < _LEAST_DECAY:
+        return f"< {_LEAST_DECAY:g}"
+    return _digits(quantity.value)
 
 
-def _digits(value: float) -> str:
-    """Return four figures, without an exponent where that is readable."""
+def _digits(value: float, figures: int = 4) -> str:
+    """Return so many figures, without an exponent where that is readable."""
     if value == 0.0:
         return "0"
     if not 1e-4 <= abs(value) < 1e6:
-        return f"{value:.4g}"
-    places = max(3 - math.floor(math.log10(abs(value))), 0)
+        return f"{value:.{figures}g}"
+    places = max(figures - 1 - math.floor(math.log10(abs(value))), 0)
     text = f"{value:.{places}f}"
     return text.rstrip("0").rstrip(".") if "." in text else text
 

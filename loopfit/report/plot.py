@@ -24,7 +24,7 @@ from loopfit.report.plot_words import FONT, axis_words, below, located, readable
 from loopfit.report.text import step_words, stepped_signal
 
 _RECORD, _LONG_RECORD, _OUTPUT = INK, "#9c9c9c", "#5c5c5c"  # a long noisy record is an area: lighter
-_METADATA = {".png": {"Software": None}, ".svg": {"Date": None}, ".pdf": {"CreationDate": None}}
+METADATA = {".png": {"Software": None}, ".svg": {"Date": None}, ".pdf": {"CreationDate": None}}
 _FEW_ROWS = 400  # are drawn as larger dots
 _MANY_ROWS = 1500  # would hide the model, and are drawn behind it
 
@@ -44,12 +44,12 @@ def picture(analysis: Analysis, path: Path) -> None:
         If the ending is another one, or the file cannot be written.
     """
     ending = path.suffix.lower()
-    if ending not in _METADATA:
+    if ending not in METADATA:
         raise UsageError(f"{path}: the file name must end in .png, .svg or .pdf")
-    with _plain_style():
+    with plain_style():
         drawn = _drawn(analysis)
         try:
-            drawn.savefig(path, format=ending[1:], metadata=_METADATA[ending])
+            drawn.savefig(path, format=ending[1:], metadata=METADATA[ending])
         except OSError as error:
             raise UsageError(f"{path}: cannot be written ({error.strerror or error})") from None
 
@@ -59,12 +59,12 @@ def figure(analysis: Analysis) -> Figure:
 
     Without a model it shows the record and its steps.
     """
-    with _plain_style():
+    with plain_style():
         return _drawn(analysis)
 
 
 @contextmanager
-def _plain_style() -> Iterator[None]:
+def plain_style() -> Iterator[None]:
     """Keep a user's own matplotlib settings, and dollar signs in column names, out of the picture."""
     own: dict[Any, Any] = {
         "font.family": FONT,

@@ -13,7 +13,7 @@ from loopfit.report.plot_lines import band_width, begins, envelope_of, until
 from loopfit.report.plot_words import level
 from loopfit.report.text import in_words
 
-_FIT, _ALLOWED, _SETTLED = "#3f74c4", "#bcd0f0", "#ececec"
+FIT, _ALLOWED, SETTLED = "#3f74c4", "#bcd0f0", "#ececec"
 _CLEAR = 4.0  # times the noise: brackets stay out of the record
 
 
@@ -23,10 +23,10 @@ def draw_model(panel: Panel, analysis: Analysis, curve: FittedCurve) -> None:
     axes.fill_between(
         curve.time, curve.low, curve.high, color=_ALLOWED, lw=0, zorder=2, label="models the record allows"
     )
-    (line,) = axes.plot(curve.time, curve.value, color=_FIT, lw=2.4, zorder=4, label="model")
+    (line,) = axes.plot(curve.time, curve.value, color=FIT, lw=2.4, zorder=4, label="model")
     panel.lines.append(line)
     at_end = float(np.interp(axes.get_xlim()[1], curve.time, curve.value))
-    panel.ends.append(EndLabel(height=at_end, words=f"model ({analysis.confidence_percent:g} % band)", colour=_FIT))
+    panel.ends.append(EndLabel(height=at_end, words=f"model ({analysis.confidence_percent:g} % band)", colour=FIT))
     if curve.final_value is None:
         return
     strip, end = band_width(analysis, curve), until(analysis)
@@ -35,7 +35,7 @@ def draw_model(panel: Panel, analysis: Analysis, curve: FittedCurve) -> None:
     words = f"{'rest' if analysis.step is None else 'final'} value {level(analysis, curve, curve.final_value)}"
     if strip is not None:
         bounds = (curve.final_value - strip, curve.final_value + strip)
-        axes.axhspan(*bounds, xmax=share, color=_SETTLED, lw=0, zorder=0, label="band")
+        axes.axhspan(*bounds, xmax=share, color=SETTLED, lw=0, zorder=0, label="band")
         words += f"\nshaded: ±{analysis.band_percent:g} %{_late(analysis)}"
     axes.axhline(curve.final_value, xmax=share, color=INK, lw=0.7, ls=(0, (8, 2, 1, 2)), zorder=1, label="final value")
     if alone:
@@ -46,7 +46,7 @@ def draw_model(panel: Panel, analysis: Analysis, curve: FittedCurve) -> None:
     if envelope is None:
         return
     for side, name in ((envelope.high, "envelope"), (envelope.low, "lower envelope")):
-        (line,) = axes.plot(envelope.time, side, color=_FIT, lw=0.9, ls=(0, (1.2, 2.2)), zorder=3, label=name)
+        (line,) = axes.plot(envelope.time, side, color=FIT, lw=0.9, ls=(0, (1.2, 2.2)), zorder=3, label=name)
         panel.lines.append(line)
     period = None if analysis.model is None else analysis.model.damped_period_s
     if period is not None:
@@ -54,7 +54,7 @@ def draw_model(panel: Panel, analysis: Analysis, curve: FittedCurve) -> None:
         at = min(envelope.time[0] + 1.3 * period.value, float(np.interp(-0.15 * half[0], -half, envelope.time)))
         if at < axes.get_xlim()[1]:
             height = float(np.interp(at, envelope.time, envelope.high))
-            panel.points.append(PointLabel(time=at, height=height, words="envelope", colour=_FIT, above=True))
+            panel.points.append(PointLabel(time=at, height=height, words="envelope", colour=FIT, above=True))
 
 
 def _late(analysis: Analysis) -> str:

@@ -1,0 +1,1 @@
+"""Case files: record, controller, target and limits of one commissioning job."""

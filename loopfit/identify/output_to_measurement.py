@@ -1,0 +1,329 @@
+"""A plant from a closed-loop record with the controller's output: output -> measurement.
+
+The recorded output is the input, whatever made it: settings, limits and rounding of the controller drop out. What the
+model leaves over is then the disturbance itself, not what the loop made of it (output error; Ljung, System Identification,
+2nd ed. 1999, ch. 13: a direct fit is consistent in closed loop where the model of the noise is right, so the colour counts).
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from loopfit.core.arrays import Array
+from loopfit.fit.choose import choose, evidence
+from loopfit.fit.colour import whitener_of
+from loopfit.fit.columns import Columns, Input
+from loopfit.fit.estimate import Fit, Structure, Trace, fit_trace, inflation_by, neighbour_correlation, search
+from loopfit.fit.intervals import whitened
+from loopfit.fit.samples import gather, rows_as_samples
+from loopfit.fit.separable import combined, minimise, solve_linear
+from loopfit.fit.set_aside import row_residuals
+from loopfit.identify.plants import plants_of, times_of
+from loopfit.identify.posterior import degrees_of, drawn, lowest_of
+from loopfit.loop.plant import Plant
+from loopfit.model.chart import LAGS
+from loopfit.record.record import Record
+from loopfit.step.noise import noise_rms, resolution
+
+_OUTLIER = 7.0  # robust noise levels
+_OUTLIER_SHARE = 0.005  # of the range
+_OUTLIERS_AT_MOST = 0.02  # of the rows
+_COLOURED = 4.0  # standard errors of the residual's neighbour correlation
+_EVIDENCE = 10.0  # very strong (Kass & Raftery 1995)
+_BINS = 2000
+_DAMPINGS = (0.08, 0.4, 1.0, 3.0)
+_SLOWNESS = np.geomspace(0.008, 0.4, 8)  # 1 / omega_n over the span
+_DEAD_TIMES = (0.0, 1.5)  # in units of 1 / omega_n
+_INSTANTS = 4
+_FIRST = 9  # rows that tell the first level
+_CLEAR, _CLEAR_SHARE = 5.0, 0.05  # noise levels, share of the range
+_STARTS = 8
+_ROUNDS = 2
+_SLOW = 0.1  # spans: a load shows an integration less clearly
+_LONGEST = 100.0  # spans, of the lags
+_BEYOND = 2.0  # spans: a lag that long is an integration to the record
+
+
+def trace_of(record: Record, begins: float) -> Trace:
+    """Return output and measurement of a record as input and answer.
+
+    Parameters
+    ----------
+    record : Record
+        With its output.
+    begins : float
+        Where the setpoint steps, or the record begins, s.
+
+    Notes
+    -----
+    Before the first row the output had some constant level, which is not known: its first recorded value may be
+    the first move of the answer already, or off the balance by the noise that the controller passes on.
+    """
+    assert record.output is not None
+    output = record.output.values
+    rows = np.flatnonzero(np.diff(output) != 0.0) + 1
+    first = float(record.time[0])
+    return Trace(
+        time=record.time,
+        values=record.measurement.values,
+        input=Input(times=record.time[rows], sizes=np.diff(output)[rows - 1], unknown_from=first),
+        begins=max(begins, first),
+        step_row=int(np.searchsorted(record.time, begins)),
+    )
+
+
+def fitted(trace: Trace) -> Fit:
+    """Return the model of output -> measurement that the record asks for, under the likelihood of its own noise."""
+    noise, floor = noise_and_floor(trace.values)
+    best = _on_rows(choose(trace, max(noise, floor), noise_floor=floor), trace, floor)
+    best = whitened(_from_rest_or_not(best, trace, floor), trace, noise_floor=floor)
+    if best.structure.rungs != (2,) and float(best.columns.chart.lags(best.theta[None])[0][0]) > _BEYOND * trace.span:
+        rival = fit_trace(trace, Structure(rungs=(2,), first_order=True), noise_floor=floor)
+        rival = _from_rest_or_not(_on_rows(rival, trace, floor), trace, floor)
+        rival = whitened(rival, trace, noise_floor=floor)
+        if _integrates(rival.variance, best.variance, trace):
+            return rival
+    return best
+
+
+def _from_rest_or_not(fit: Fit, trace: Trace, floor: float) -> Fit:
+    """Return the fit, or one in which the plant moves already in the first row, where the record clearly says so."""
+    if fit.structure.moving_start or fit.colour * math.sqrt(fit.columns.target.size) < _COLOURED:
+        return fit
+    structure = replace(fit.structure, moving_start=True)
+    rival = _on_rows(fit_trace(trace, structure, noise_floor=floor), trace, floor)
+    return rival if evidence(rival, fit) > _EVIDENCE else fit
+
+
+def _on_rows(fit: Fit, trace: Trace, floor: float) -> Fit:
+    """Return the fit on the rows themselves, or on bins far narrower than those of a single step.
+
+    An output that moves all the time shows quick lags and the dead time at every row; bins that suit a slow plant's step
+    would hide them.
+    """
+    samples = gather(trace.time, trace.values, trace.span / _BINS, trace.step_row, even=trace.even)
+    if not samples.binned:
+        samples = rows_as_samples(trace.time, trace.values)
+    columns = replace(fit.columns, samples=samples)
+    found = search(columns, fit.theta[None], fit.free, tolerance=1e-6, rounds=60)
+    theta = found.theta[0]
+    solved = solve_linear(columns.evaluate(theta[None], derivatives=False)[0], columns.target)
+    n, sse = columns.target.size, float(solved.sse[0])
+    degrees = max(n - int(fit.free.sum()) - solved.linear.shape[1], 1)
+    colour = neighbour_correlation(solved.residual[0])
+    return replace(
+        fit,
+        columns=columns,
+        theta=theta,
+        linear=solved.linear[0],
+        sse=sse,
+        variance=max(sse / degrees, floor**2, 1e-300),
+        degrees=degrees,
+        colour=colour,
+        inflation=inflation_by(colour, n),
+        settled=bool(found.settled[0]),
+    )
+
+
+def _integrates(variance: float, against: float, trace: Trace) -> bool:
+    """Tell whether an integrating model with one coordinate fewer is as good (Schwarz 1978)."""
+    n = trace.values.size
+    return n * math.log(max(variance, 1e-300) / max(against, 1e-300)) < math.log(n) + 2.0
+
+
+def noise_and_floor(values: Array) -> tuple[float, float]:
+    """Return the fast noise of a row, rms, and the least noise that the resolution allows."""
+    noise, grid = noise_rms(values), resolution(values)
+    return noise, grid / math.sqrt(12.0) if noise < grid / 3.0 else 0.0  # undithered: sigma >= q / sqrt(12)
+
+
+def without_wild_rows(trace: Trace, fit: Fit) -> tuple[Trace, int]:
+    """Return the trace with isolated rows far from the model led over by their neighbours, and how many there are.
+
+    The spread is the median absolute residual (Hampel 1974). None where they are many. They are not left out: a
+    controller's output is known at even rows, and they stay even.
+    """
+    rest = row_residuals(trace, fit)
+    spread = float(np.median(np.abs(rest - np.median(rest)))) / 0.6745
+    local = rest.copy()
+    local[1:-1] -= 0.5 * (rest[:-2] + rest[2:])
+    least = max(_OUTLIER * spread, _OUTLIER_SHARE * float(np.ptp(trace.values)), 2.5 * resolution(trace.values))
+    far = np.flatnonzero((np.abs(rest) > least) & (np.abs(local) > 0.5 * np.abs(rest)))
+    if far.size == 0 or far.size > max(1.0, _OUTLIERS_AT_MOST * rest.size):
+        return trace, 0
+    near = np.delete(np.arange(rest.size), far)
+    values = trace.values.copy()
+    values[far] = np.interp(trace.time[far], trace.time[near], trace.values[near])
+    return replace(trace, values=values), int(far.size)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class LoadFit:
+    """A plant and the load that moved it: coordinates `theta` (4,), the last the instant at which the load is felt, s."""
+
+    columns: Columns
+    structure: Structure
+    theta: Array
+    linear: Array
+    variance: float
+    degrees: int
+
+    @property
+    def plant(self) -> Plant:
+        """The plant."""
+        times = times_of(self.columns)
+        return plants_of(self.columns.chart, self.structure, self.theta[None, :3], self.linear[None], times=times)[0]
+
+    @property
+    def load(self) -> float:
+        """Size of the load, output units."""
+        return float(self.linear[1] / self.linear[0])
+
+    @property
+    def explained(self) -> float:
+        """Share of the measurement's squares that the model explains."""
+        columns = replace(self.columns, whitener=None)
+        rest = columns.target - self.linear @ columns.evaluate(self.theta[None], derivatives=False)[0][0]
+        weights = columns.samples.root_count
+        mean = float(weights @ columns.target) / float(weights @ weights)
+        return 1.0 - float(rest @ rest) / max(float(np.sum((columns.target - mean * weights) ** 2)), 1e-300)
+
+    def draws(self, count: int, rng: np.random.Generator) -> list[Plant]:
+        """Return plants that the record allows, in proportion to their probability; their gains may be of either sign."""
+        degrees, factor = degrees_of(self.degrees, 1.0, self.columns.whitener)
+        theta, linear = drawn(
+            self.columns,
+            self.theta,
+            free=_free(self.structure),
+            lowest=np.append(lowest_of(self.columns, self.theta), _bounds(self.columns)[0][3]),
+            highest=_bounds(self.columns)[1],
+            variance=self.variance * factor,
+            degrees=degrees,
+            count=count,
+            rng=rng,
+        )
+        return plants_of(self.columns.chart, self.structure, theta[:, :3], linear, times=times_of(self.columns))
+
+
+def load_fitted(record: Record) -> LoadFit:
+    """Return the plant from a record in which a load moved the loop: a step of unknown size, felt at an unknown instant.
+
+    The output before that is taken to have balanced the loop, on the average: left free, its level and the load would
+    trade places.
+    """
+    trace = trace_of(record, float(record.time[0]))
+    assert trace.input is not None
+    assert record.output is not None
+    before = max(_moved(trace.values) - 1, 1)
+    first = float(record.output.values[0]) - float(np.mean(record.output.values[:before]))
+    balanced = Input(times=np.append(trace.time[0], trace.input.times), sizes=np.append(first, trace.input.sizes))
+    trace = replace(trace, input=balanced)
+    _, floor = noise_and_floor(trace.values)
+    best = _load_fit(trace, Structure(), floor)
+    longest = float(best.columns.chart.lags(best.theta[None])[0][0])
+    if longest > _SLOW * trace.span:
+        rival = _load_fit(trace, Structure(rungs=(2,), first_order=True), floor)
+        best = rival if _integrates(rival.variance, best.variance, trace) else best
+    return best
+
+
+def _free(structure: Structure) -> np.ndarray:
+    return np.array([True, not structure.first_order, True, True])
+
+
+def _bounds(columns: Columns) -> tuple[Array, Array]:
+    centres = columns.samples.centres
+    lowest = np.append(columns.chart.lowest, centres[0])
+    highest = np.array([np.log(_LONGEST * np.ptp(centres)), np.inf, 0.8 * np.ptp(centres), centres[-1]])
+    return lowest, highest
+
+
+def _load_fit(trace: Trace, structure: Structure, floor: float) -> LoadFit:
+    assert trace.input is not None
+    samples = gather(trace.time, trace.values, trace.span / _BINS, trace.step_row, even=trace.even)
+    if not samples.binned:
+        samples = rows_as_samples(trace.time, trace.values)
+    columns = Columns(samples=samples, chart=LAGS, input=trace.input, rungs=structure.rungs, load=True)
+    lowest, highest = _bounds(columns)
+    free = _free(structure)
+    theta = _load_starts(columns, trace)
+    if structure.first_order:
+        theta[:, 1] = lowest[1]
+
+    def caps(at: Array) -> Array:
+        T, r = LAGS.lags(at)
+        unit = T * (2.0 * np.sqrt(r) + 0.5)
+        return np.stack([np.full_like(T, 0.8), np.full_like(T, 1.2), unit, 2.0 * unit], axis=1)
+
+    for turn in range(1 + _ROUNDS):
+        found = minimise(
+            columns.evaluate,
+            columns.target,
+            theta,
+            lowest=lowest,
+            highest=highest,
+            free=free,
+            caps=caps,
+            tolerance=1e-6,
+            rounds=60,
+            thin=True,
+        )
+        theta = found.theta[np.argsort(found.sse)[:2]]
+        solved = solve_linear(columns.evaluate(theta[:1], derivatives=False)[0], columns.target)
+        if turn == _ROUNDS or np.ptp(np.diff(samples.centres)[1:-1]) > 0.02 * float(
+            np.median(np.diff(samples.centres))
+        ):
+            break
+        plain = replace(columns, whitener=None)
+        bare, bare_slopes = plain.evaluate(theta[:1])
+        moved = combined(solved.linear, bare_slopes)[0]
+        whitener = whitener_of(plain.target - solved.linear[0] @ bare[0], np.vstack([moved[free], bare[0]]))
+        if whitener is None:
+            break
+        columns = replace(columns, whitener=whitener)
+    degrees = max(columns.target.size - int(free.sum()) - solved.linear.shape[1], 1)
+    return LoadFit(
+        columns=columns,
+        structure=structure,
+        theta=theta[0],
+        linear=solved.linear[0],
+        variance=max(float(solved.sse[0]) / degrees, floor**2, 1e-300),
+        degrees=degrees,
+    )
+
+
+def _moved(values: Array) -> int:
+    """Return the row at which the measurement has clearly left its first level."""
+    noise, _ = noise_and_floor(values)
+    away = np.abs(values - np.median(values[:_FIRST])) > max(_CLEAR * noise, _CLEAR_SHARE * float(np.ptp(values)))
+    return int(np.argmax(away))
+
+
+def _load_starts(columns: Columns, trace: Trace) -> Array:
+    """Return the best of a grid of models and instants (S, 4)."""
+    span = float(trace.time[-1] - trace.time[0])
+    slows = span * _SLOWNESS
+    if trace.main_frequency is not None:
+        slows = np.append(slows, 1.0 / trace.main_frequency)
+    z, slow, dead = (axis.ravel() for axis in np.meshgrid(_DAMPINGS, slows, _DEAD_TIMES, indexing="ij"))
+    models = LAGS.locate(z, 1.0 / slow, dead * slow)
+    instants = trace.time[0] + span * (np.arange(_INSTANTS) + 0.5) / _INSTANTS
+    seen = float(trace.time[_moved(trace.values)])
+    instants = np.append(instants, [max(seen - share * span, trace.time[0]) for share in (0.0, 0.01, 0.04)])
+    theta = np.column_stack([np.repeat(models, instants.size, axis=0), np.tile(instants, models.shape[0])])
+    left = []
+    for first in range(0, theta.shape[0], 128):
+        matrix, _ = columns.evaluate(theta[first : first + 128], derivatives=False)
+        left.append(solve_linear(matrix, columns.target).sse)
+    out: Array = theta[np.argsort(np.concatenate(left))]
+    kept = [0]
+    for i in range(1, out.shape[0]):
+        apart = np.abs(out[i] - out[kept]) / np.array([0.5, 0.5, span, 0.05 * span])
+        if np.all(apart.max(axis=1) > 1.0):
+            kept.append(i)
+        if len(kept) == _STARTS:
+            break
+    return out[kept]
