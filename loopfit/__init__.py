@@ -5,6 +5,8 @@ from __future__ import annotations
 from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
+from loopfit.core.version import VERSION
+
 if TYPE_CHECKING:
     from loopfit.analysis.analyze import analyze
     from loopfit.analysis.interchange import to_control
@@ -19,7 +21,7 @@ if TYPE_CHECKING:
     from loopfit.loop.settings import Settings
     from loopfit.tuning.retune import retune
 
-__version__ = "0.1.0"
+__version__ = VERSION
 __all__ = [
     "Analysis",
     "Finding",

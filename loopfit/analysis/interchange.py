@@ -1,4 +1,4 @@
-"""The fitted model as a python-control system."""
+"""Whatever has a transfer function as a python-control system."""
 
 from __future__ import annotations
 
@@ -6,35 +6,50 @@ from typing import TYPE_CHECKING
 
 from loopfit.analysis.result import Analysis
 from loopfit.core.errors import UsageError
+from loopfit.equivalents.interchange import to_control as transfer_to_control
+from loopfit.equivalents.result import Equivalent, Equivalents
+from loopfit.loop.plant import Plant
+from loopfit.model.transfer import Transfer, transfer_of
 
 if TYPE_CHECKING:
     from control import TransferFunction
 
 
-def to_control(analysis: Analysis, *, pade_order: int | None = None) -> TransferFunction:
-    """Return the model's transfer function from the stepped signal to the measurement.
+def to_control(
+    system: Analysis | Transfer | Equivalent | Equivalents | Plant, *, pade_order: int | None = None
+) -> TransferFunction:
+    """Return a transfer function as a python-control system.
 
     Parameters
     ----------
-    analysis : Analysis
-        Of a step; a release has no gain.
+    system : Analysis, Transfer, Equivalent, Equivalents or Plant
+        Of an analysis, its model from the stepped signal to the measurement (a release has no gain). Of `Equivalents`,
+        the chosen one, with the integration of an integrating system.
     pade_order : int, optional
-        Order of the Padé approximation of the dead time; without it the dead time is left out, and a model
-        that has one is refused, since a loop judged without its dead time looks better than it is.
+        Order of the Padé approximation of the dead time. A system that has one is refused without it, since a loop
+        judged without its dead time looks better than it is.
 
     Raises
     ------
     UsageError
-        If there is no model, no gain, or a dead time and no order for it.
+        If there is no model, no gain, a dead time and no order for it, or it is something else.
     """
-    import control
+    if isinstance(system, Analysis):
+        return transfer_to_control(_of_model(system), pade_order=pade_order)
+    if isinstance(system, Plant):
+        return transfer_to_control(system.transfer, pade_order=pade_order)
+    if isinstance(system, Transfer | Equivalent | Equivalents):
+        return transfer_to_control(system, pade_order=pade_order)
+    raise UsageError(
+        f"{type(system).__name__} has no transfer function to give: an analysis, a plant, an equivalent or a Transfer has"
+    )
 
+
+def _of_model(analysis: Analysis) -> Transfer:
     model = analysis.model
     if model is None or model.gain is None:
         raise UsageError("only the model of a step test has a transfer function")
     dead = 0.0 if model.dead_time_s is None else model.dead_time_s.value
-    if dead > 0 and pade_order is None:
-        raise UsageError(f"the model has a dead time of {dead:.4g} s: give pade_order= to approximate it")
     lag = 0.0 if model.lag_plus_dead_time_s is None else model.lag_plus_dead_time_s.value - dead
     square = 0.0
     if model.kind == "integrating":
@@ -44,7 +59,4 @@ def to_control(analysis: Analysis, *, pade_order: int | None = None) -> Transfer
             square = model.natural_frequency_rad_s.value**-2
         denominator = [square, lag, 1.0]
     zero = 0.0 if model.zero_s is None else model.zero_s.value
-    system = control.tf([model.gain.value * zero, model.gain.value], denominator)
-    if dead > 0:
-        system = system * control.tf(*control.pade(dead, pade_order))
-    return system
+    return transfer_of([model.gain.value * zero, model.gain.value], denominator, dead)

@@ -157,7 +157,7 @@ class Analysis:
 
     def to_dict(self) -> dict[str, Any]:
         """Return the analysis as the JSON document's keys and plain values."""
-        from loopfit import __version__
+        from loopfit.core.version import VERSION
 
         record = self.record
         names = {
@@ -169,7 +169,7 @@ class Analysis:
         document = {
             "document": "loopfit analysis",
             "version": 1,
-            "loopfit": __version__,
+            "loopfit": VERSION,
             "record": {
                 "file": record.source,
                 "rows": record.rows,

@@ -15,9 +15,10 @@ from loopfit.equivalents.form import Form
 from loopfit.equivalents.half_rule import by_half_rule
 from loopfit.equivalents.moments import by_moments
 from loopfit.equivalents.response import figures_of
-from loopfit.equivalents.result import Equivalent, Equivalents, ExactFigures
+from loopfit.equivalents.result import Equivalent, Equivalents, ExactFigures, share_words
 from loopfit.equivalents.routh import by_routh, by_routh_array
 from loopfit.equivalents.system import RationalSystem, System
+from loopfit.equivalents.trust import cautions
 
 ITSELF = "the system itself"
 DOMINANT = "dominant poles (Davison)"
@@ -53,17 +54,30 @@ def equivalents_of(system: System, *, expression: str | None = None, band_percen
     figures: ExactFigures | None = None
     body = seen = system  # what the methods work on, and the exact system that they are judged by
     if isinstance(system, RationalSystem):
+        reasons += cautions(system)
         seen, left_out = system.without_fast
         body, removed = seen.without_cancellations
         reasons += [*left_out, *removed]
     if body.integrating:
         figures = _no_figures("the response of an integrating system comes to no final value: it has no figures")
-        if not isinstance(body, RationalSystem) or body.rest.integrating:
+        rest = body.rest if isinstance(body, RationalSystem) else None
+        if not isinstance(body, RationalSystem) or (rest is not None and rest.integrating):
+            how = "more than once" if isinstance(body, RationalSystem) else "and is no rational function"
+            reasons.append(f"the system integrates {how}: no second-order model stands for it")
+            return _result(system, expression, [], reasons, figures, band_percent)
+        if rest is None and body.order > 1:
             reasons.append(
-                "the system integrates more than once, or is not rational: no second-order model stands for it"
+                "the system integrates and also passes its input on at once: its response is a jump and a ramp, and no "
+                "second-order model with an integration makes that jump; give the lag that it has in truth"
             )
             return _result(system, expression, [], reasons, figures, band_percent)
-        body, seen = body.rest, seen.rest if isinstance(seen, RationalSystem) else seen
+        if rest is None:
+            found = [
+                replace(described(ITSELF, _ramp(body), (0.0, 0.0)), reason="an integration and a jump, without a lag")
+            ]
+            return _result(system, expression, found, reasons, figures, band_percent)
+        whole = seen.rest if isinstance(seen, RationalSystem) and seen is not body else None
+        body, seen = rest, rest if whole is None else whole
         reasons.append(
             "the system integrates: each equivalent is that of the rest, to be multiplied by 1/s, its gain is per second "
             "and its errors are in percent of the final slope of the step response"
@@ -82,6 +96,12 @@ def equivalents_of(system: System, *, expression: str | None = None, band_percen
         )
         figures = figures or _no_figures("the final value is 0: the figures are shares of it")
         return _result(system, expression, [], reasons, figures, band_percent)
+    if isinstance(body, RationalSystem) and body.biproper and body.order > 1:
+        reasons.append(
+            "the system passes its input on at once, and its response begins with a jump of "
+            f"{share_words(100.0 * body.numerator[0] / body.denominator[0] / final)} % of the final value, "
+            "which no model of this form makes"
+        )
     hidden = not seen.stable  # then a part that is not stable was removed: it does not show in the response
     seen = body if hidden else seen
     course = course_of(seen, final)
@@ -144,6 +164,12 @@ def itself(system: RationalSystem) -> Form:
     zero = top[-2] / top[-1] if len(top) > 1 else 0.0
     a2, a1 = [0.0, 0.0, *bottom[:-1]][-2:]
     return Form(gain=gain, a1=a1, a2=a2, dead_time=system.dead_time_s, zero=zero, note=_order_word(a1, a2))
+
+
+def _ramp(system: RationalSystem) -> Form:
+    """Return gain (zero s + 1) for a system gain (zero s + 1) / s."""
+    direct, slope = (value / system.denominator[0] for value in system.numerator)
+    return Form(gain=slope, a1=0.0, a2=0.0, dead_time=system.dead_time_s, zero=direct / slope)
 
 
 def _order_word(a1: float, a2: float) -> str | None:
@@ -217,8 +243,8 @@ def _result(
         what = "final slope" if system.integrating else "final value"
         side = "no more than" if within else "more than"
         reasons.append(
-            f"the step response of '{best.method}' is off by at most {best.step_error_max_percent:.2g} % of the {what} "
-            f"(rms {best.step_error_rms_percent:.2g} % over {window_s:.4g} s, from where on the exact one stays within "
+            f"the step response of '{best.method}' is off by at most {share_words(best.step_error_max_percent)} % of the {what} "
+            f"(rms {share_words(best.step_error_rms_percent or 0.0)} % over {window_s:.4g} s, from where on the exact one stays within "
             f"{100.0 * SETTLED:g} %): {side} the {ADEQUATE_PERCENT:g} % of an adequate one"
         )
         if best.method in _DIRECT:

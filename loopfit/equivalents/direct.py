@@ -16,6 +16,8 @@ _STARTS = 3
 _ROUNDS = 40
 _ENOUGH = 1e-7  # relative fall of the mean square in one round
 _DAMPING_RANGE = (np.log(1e-4), np.log(11.0))  # beyond 11 a second lag is not told from dead time
+_FASTER = 2.0  # times the fastest pole: beyond, where the samples lie too far apart for a swing, a model is damped
+_QUIET = float(np.log(0.5))
 _SAMPLES = 500
 _MANY_SAMPLES = 4000  # where many swings ask for them
 _STEP = 1e-6
@@ -82,13 +84,15 @@ class _Search:
         width = np.gradient(self.time) if self.time.size > 1 else np.ones(1)
         self.weight = np.sqrt(width / width.sum())
         self.span, self.zero = span, zero
+        self.fastest = float(np.log(_FASTER * np.abs(system.poles).max(initial=1.0 / span)))
 
     def within(self, at: Array) -> Array:
         """Return the points moved into what is allowed."""
         at = at.copy()
         at[:, 0] = np.clip(at[:, 0], 0.0, self.span)
         at[:, 1] = np.clip(at[:, 1], np.log(1e-2 / self.span), np.log(1e9 / self.span))
-        at[:, 2] = np.clip(at[:, 2], *_DAMPING_RANGE)
+        least = np.where(at[:, 1] > self.fastest, _QUIET, _DAMPING_RANGE[0])  # no ringing that the system has not
+        at[:, 2] = np.clip(at[:, 2], least, _DAMPING_RANGE[1])
         return at
 
     def residuals(self, at: Array) -> Array:

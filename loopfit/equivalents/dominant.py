@@ -31,6 +31,9 @@ def by_dominant_poles(system: System, course: Course) -> tuple[list[Form], str |
     if not known.any():
         return [], "all poles are repeated: they have no residues to keep"
     weight = np.where(known, np.abs(share / poles.real), -1.0)
+    dominant = -poles.real[np.argmax(weight)]
+    if np.any(-poles.real[~known] < dominant):
+        return [], "the slowest poles are repeated: they have no residues to keep"
     order = [int(k) for k in np.argsort(-weight, kind="stable") if known[k]]
     pairs = [k for k in order if poles[k].imag > 0][:2]
     real = [k for k in order if poles[k].imag == 0][:_MOST_REAL]

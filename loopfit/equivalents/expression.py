@@ -10,6 +10,8 @@ from fractions import Fraction
 
 from loopfit.core.errors import RecordError, UsageError
 from loopfit.equivalents.rational import AlgebraError, Rational
+from loopfit.equivalents.system import RationalSystem
+from loopfit.equivalents.trust import with_exact_roots
 from loopfit.model.transfer import Transfer, transfer_of
 
 MOST_CHARACTERS = 2_000
@@ -62,6 +64,16 @@ def transfer_of_expression(expression: str) -> Transfer:
         If it can be read but is no usable system: degree, division by zero, s in an exponent, a power of s that is not
         whole, terms with different dead times, prediction, more zeros than poles, numbers that are not finite.
     """
+    return _transfer(_exact(expression), expression)
+
+
+def system_of_expression(expression: str) -> RationalSystem:
+    """Return the same as a system, its poles and zeros from the exact coefficients; raises the same."""
+    exact = _exact(expression)
+    return with_exact_roots(_transfer(exact, expression), exact)
+
+
+def _exact(expression: str) -> Rational:
     if not isinstance(expression, str):
         raise UsageError(f"an expression in s is text, not {type(expression).__name__}")
     if len(expression) > MOST_CHARACTERS:
@@ -69,8 +81,7 @@ def transfer_of_expression(expression: str) -> Transfer:
             f"the expression has {len(expression)} characters; at most {MOST_CHARACTERS} are read. "
             "Give the coefficients instead"
         )
-    steps = _Reader(expression, _tokens(expression)).read()
-    return _transfer(_value(expression, steps), expression)
+    return _value(expression, _Reader(expression, _tokens(expression)).read())
 
 
 def _tokens(text: str) -> list[_Token]:

@@ -36,8 +36,10 @@ def roots_of(coefficients: Sequence[float]) -> Complex:
     while values.size > 1:  # a root far beyond the others is found apart: side by side, rounding would hide them
         with np.errstate(over="ignore", under="ignore"):
             root = -values[1] / values[0]
+            if root == 0.0:
+                break
             beside = np.sum(np.abs(values[2:]) * abs(root) ** -np.arange(1.0, values.size - 1))
-        if not beside <= _FAR * abs(values[1]) or root == 0.0:
+        if not beside <= _FAR * abs(values[1]):
             break
         if not np.isfinite(root):
             raise UsageError(f"the coefficients {values[0]:g} and {values[1]:g} of one polynomial are too far apart")
@@ -47,6 +49,7 @@ def roots_of(coefficients: Sequence[float]) -> Complex:
 
 
 def in_order(roots: Complex) -> Complex:
+    """Return roots, those furthest to the right first, of a pair the upper one first."""
     return roots[np.lexsort((-roots.imag, np.abs(roots.imag), -roots.real))]
 
 
@@ -143,4 +146,4 @@ def _remove(values: list[complex], value: complex) -> None:
 
 
 def _text(value: complex) -> str:
-    return f"{value.real:.4g}" if value.imag == 0 else f"{value.real:.4g} ± {abs(value.imag):.4g}i"
+    return f"{value.real:.6g}" if value.imag == 0 else f"{value.real:.6g} ± {abs(value.imag):.6g}j"

@@ -16,6 +16,7 @@ from loopfit.model.transfer import Complex
 _PRIME = 2**61 - 1
 _DIGITS, _MOST_DIGITS = 40, 400
 _MOST_ROUNDS = 100
+_SMALL = Decimal("1e-8")  # a step, relative, from which on the end may be near
 _ALIKE = 1e-7  # relative: two such roots are one, twice; putting both at their mean changes the rest by its square
 _Pair = tuple[Decimal, Decimal]  # real and imaginary part
 
@@ -132,7 +133,7 @@ def _together(values: list[Decimal], roots: list[_Pair], digits: int) -> bool:
         for k in sorted(moving):
             here = roots[k]
             value, slope = _value_and_slope(values, here)
-            if value == (0, 0):
+            if value[0] == 0 and value[1] == 0:
                 moving.discard(k)
                 continue
             newton = _quotient(value, slope)
@@ -143,9 +144,9 @@ def _together(values: list[Decimal], roots: list[_Pair], digits: int) -> bool:
             factor = 1.0 / (1.0 - complex(*newton) * pull)
             step = _times(newton, (Decimal(factor.real), Decimal(factor.imag)))
             roots[k] = (here[0] - step[0], here[1] - step[1])
-            size = max(abs(step[0]), abs(step[1]))
-            # Newton's step is below the rounding of the value, or below the digits
-            if size <= enough * max(abs(here[0]), abs(here[1])) * 10 ** _lost_digits(values, here):
+            share = max(abs(step[0]), abs(step[1])) / max(abs(here[0]), abs(here[1]))
+            # below the rounding of the value there is nothing more to find
+            if share < _SMALL and share <= enough * 10 ** _lost_digits(values, here):
                 moving.discard(k)
         if not moving:
             return True

@@ -67,9 +67,20 @@ def _is_top(values: Array, begin: int) -> NDArray[np.intp]:
 
 
 def _tops(deviation: Array, begin: int, count: int) -> list[int]:
-    """Return the first two overshoot peaks."""
-    tops = _is_top(deviation[:count], begin)
-    return [int(k) for k in tops[deviation[tops] > _SMALLEST_SWING][:2]]
+    """Return the first two overshoot peaks; between two the response falls by more than rounding."""
+    out: list[int] = []
+    for top in _is_top(deviation[:count], begin):
+        k = int(top)
+        if not deviation[k] > _SMALLEST_SWING:
+            continue
+        fall = float(min(deviation[out[-1]], deviation[k]) - deviation[out[-1] : k].min()) if out else 1.0
+        if fall > _SMALLEST_SWING:
+            if len(out) == 2:
+                break
+            out.append(k)
+        elif deviation[k] > deviation[out[-1]]:
+            out[-1] = k
+    return out
 
 
 def _tops_near(deviation: Array, begin: int, highest: float) -> list[int]:

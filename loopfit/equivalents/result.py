@@ -9,6 +9,8 @@ from loopfit.core.plain import plain, to_json
 from loopfit.core.quantity import Quantity
 from loopfit.equivalents.system import System
 
+_ROUNDING_PERCENT = 1e-9
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Equivalent:
@@ -107,6 +109,13 @@ class Equivalents:
     def to_json(self) -> str:
         """Return the JSON document."""
         return to_json(self.to_dict())
+
+
+def share_words(percent: float) -> str:
+    """Return a percentage in two figures, or all before the point, without an exponent; 0 for what is only rounding."""
+    if abs(percent) < _ROUNDING_PERCENT:
+        return "0"
+    return f"{percent:.0f}" if 99.5 <= abs(percent) < 1e6 else f"{percent:.2g}"
 
 
 def _pairs(values: Any) -> list[list[float]]:

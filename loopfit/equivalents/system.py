@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 from typing import Protocol
 
@@ -59,9 +59,17 @@ _FASTER = 1e12  # than the slowest pole: a lag that no response shows in the dig
 
 @dataclass(frozen=True)
 class RationalSystem:
-    """A rational transfer function with dead time, as a system."""
+    """A rational transfer function with dead time, as a system.
+
+    `known_poles` and `known_zeros`, in the order of `poles` and `zeros`, are those known better than the rounded
+    coefficients tell them; `rounded` says that the coefficients given were floats, so that what rounding does to
+    them is a doubt about the poles.
+    """
 
     transfer: Transfer
+    known_poles: tuple[complex, ...] | None = None
+    known_zeros: tuple[complex, ...] | None = None
+    rounded: bool = True
 
     @property
     def numerator(self) -> tuple[float, ...]:
@@ -86,12 +94,12 @@ class RationalSystem:
     @cached_property
     def poles(self) -> Complex:
         """Poles, rad/s, slowest first; repeated ones are equal to the last digit."""
-        return roots_of(self.denominator)
+        return roots_of(self.denominator) if self.known_poles is None else np.array(self.known_poles, dtype=complex)
 
     @cached_property
     def zeros(self) -> Complex:
         """Zeros, rad/s, nearest to the imaginary axis first."""
-        return roots_of(self.numerator)
+        return roots_of(self.numerator) if self.known_zeros is None else np.array(self.known_zeros, dtype=complex)
 
     @property
     def static_gain(self) -> float | None:
@@ -133,9 +141,19 @@ class RationalSystem:
         return np.where(since >= 0, step_of(self.realisation, np.maximum(since, 0.0)), 0.0)
 
     @property
-    def rest(self) -> RationalSystem:
-        """The system without one integration: s times this one."""
-        return RationalSystem(transfer_of(self.numerator, self.denominator[:-1], self.dead_time_s))
+    def biproper(self) -> bool:
+        """Whether the input passes to the output at once: as many zeros as poles."""
+        return len(self.numerator) == len(self.denominator)
+
+    @property
+    def rest(self) -> RationalSystem | None:
+        """The system without one integration: s times this one; None where that would differentiate."""
+        if self.biproper:
+            return None
+        transfer = transfer_of(self.numerator, self.denominator[:-1], self.dead_time_s)
+        poles = list(self.poles)
+        poles.remove(0j)
+        return replace(self, transfer=transfer, known_poles=tuple(poles), known_zeros=tuple(self.zeros))
 
     @cached_property
     def without_fast(self) -> tuple[RationalSystem, tuple[str, ...]]:
@@ -159,7 +177,8 @@ class RationalSystem:
         top = np.real(np.poly(zeros)) if zeros.size else np.ones(1)
         # the lowest coefficients that are not zero keep their ratio
         kept = _lowest(self.numerator) / _lowest(self.denominator) * _lowest(bottom) / _lowest(top)
-        return RationalSystem(transfer_of(list(top * kept), list(bottom), self.dead_time_s))
+        transfer = transfer_of(list(top * kept), list(bottom), self.dead_time_s)
+        return replace(self, transfer=transfer, known_poles=tuple(poles), known_zeros=tuple(zeros))
 
 
 def _lowest(coefficients: Array | tuple[float, ...]) -> float:

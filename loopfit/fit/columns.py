@@ -14,6 +14,7 @@ import numpy as np
 
 from loopfit.core.arrays import Array
 from loopfit.fit.colour import Whitener
+from loopfit.fit.convolution import Recorded, recorded_on
 from loopfit.fit.samples import Samples
 from loopfit.model.chart import Chart
 from loopfit.model.shape import ladder, ladder_by_shape
@@ -25,10 +26,14 @@ _REMEMBERED = 4
 
 @dataclass(frozen=True, kw_only=True, eq=False)
 class Input:
-    """A piecewise-constant input: changes of `sizes` (J,) at `times` (J,), s."""
+    """A piecewise-constant input: changes of `sizes` (J,) at `times` (J,), s.
+
+    `unknown_from`: instant, s, before which the level of the input is unknown: a step of unknown size there.
+    """
 
     times: Array
     sizes: Array
+    unknown_from: float | None = None
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -37,8 +42,10 @@ class Columns:
 
     `rungs`: which responses to the input: 1 the step response, 0 its slope (a zero in the transfer
     function), 2 its integral (an integrating plant; the column carries the time scale, so that its
-    linear parameter is a rate). `free_from`: where the free response begins, s, or None.
-    Linear parameters come in the order: rungs, displacement and push of the free response, offset, drift.
+    linear parameter is a rate). `free_from`: where the free response begins, s, or None. `load`: a step of unknown size
+    is felt at an unknown instant, s, which is then a fourth coordinate.
+    Linear parameters come in the order: rungs, unknown level of the input, load, displacement and push of the free
+    response, offset, drift.
     """
 
     samples: Samples
@@ -48,6 +55,7 @@ class Columns:
     free_from: float | None = None
     drift: bool = False
     whitener: Whitener | None = None
+    load: bool = False
 
     @cached_property
     def target(self) -> Array:
@@ -74,15 +82,16 @@ class Columns:
     @property
     def moving_count(self) -> int:
         """Number of columns that depend on the coordinates."""
-        return len(self.rungs) + (2 if self.free_from is not None else 0)
+        level = self.input is not None and self.input.unknown_from is not None
+        return len(self.rungs) + level + self.load + (2 if self.free_from is not None else 0)
 
     def evaluate(self, theta: Array, *, derivatives: bool = True) -> tuple[Array, Array]:
-        """Return the columns (B, q, n) and the derivatives (B, 3, m, n) of the first m of them.
+        """Return the columns (B, q, n) and the derivatives (B, p, m, n) of the first m of them.
 
         Parameters
         ----------
-        theta : (B, 3) array
-            Coordinates of B models in this chart.
+        theta : (B, p) array
+            Coordinates of B models in this chart; p is 3, with a load 4.
         """
         if theta.shape[0] > 1:
             return self._evaluated(theta, derivatives)
@@ -110,8 +119,17 @@ class Columns:
         blocks: list[Array] = []
         if self.input is not None and self.rungs:
             blocks.append(self._driven(theta, scale, shape, derivatives))
+            begin = self.input.unknown_from
+            if begin is not None:
+                blocks.append(self._stepped(begin + theta[:, 2], scale, shape, derivatives))
+        if self.load:
+            blocks.append(self._stepped(theta[:, 3], scale, shape, derivatives))
         if self.free_from is not None:
             blocks.append(self._free(scale, shape, derivatives))
+        if self.load and derivatives:
+            blocks = [np.concatenate([block, np.zeros_like(block[:, :1])], axis=1) for block in blocks]
+            felt = len(blocks) - (2 if self.free_from is not None else 1)
+            blocks[felt][:, [3, 4]] = blocks[felt][:, [4, 3]]  # a load is felt when it is, whatever the dead time
         moving = blocks[0] if len(blocks) == 1 else np.concatenate(blocks, axis=2)
         m = moving.shape[2]
         columns = np.empty((theta.shape[0], m + self.fixed.shape[0], moving.shape[3]))
@@ -129,11 +147,42 @@ class Columns:
         if J == 1:
             x = (self.samples.nodes - (times[0] + theta[:, 2:])) * (1.0 / scale[:, None])
             return self._weighed(self._rungs(x, scale, shape, self.rungs, derivatives), scale, self.rungs, sizes[0])
+        if self._recorded is not None:
+            return self._convolved(self._recorded, theta, scale, shape, derivatives)
         since = self.samples.nodes - (times[None, :, None] + theta[:, 2, None, None])
         x = (since / scale[:, None, None]).reshape(B * J, -1)
         each = self._rungs(x, np.repeat(scale, J), np.repeat(shape, J), self.rungs, derivatives)
         together = np.einsum("bjpqn,j->bpqn", each.reshape(B, J, *each.shape[1:]), sizes)
         return self._weighed(together, scale, self.rungs, 1.0)
+
+    @cached_property
+    def _recorded(self) -> Recorded | None:
+        """The input on the grid of the rows, where it changes there often."""
+        assert self.input is not None
+        return recorded_on(self.samples, self.input.times, self.input.sizes)
+
+    def _convolved(self, recorded: Recorded, theta: Array, scale: Array, shape: Array, derivatives: bool) -> Array:
+        """Return the same as a convolution of the input's changes with the response at every row's distance."""
+        samples = self.samples
+        out = np.empty((theta.shape[0], 4 if derivatives else 1, len(self.rungs), samples.values.size))
+        powers = np.array([1 if rung == 2 else 0 for rung in self.rungs])
+        for part in recorded.parts(theta.shape[0] * out.shape[1] * out.shape[2], theta.shape[0]):
+            x = (recorded.since - theta[part, 2:3]) * (1.0 / scale[part, None])
+            each = self._responses(x, scale[part], shape[part], self.rungs, derivatives, lift=0, correct=False)
+            rows = recorded.response(each)
+            factor = (scale[part, None] ** powers)[:, None, :, None]
+            if samples.binned:
+                first = np.rint(np.cumsum(samples.root_count**2) - samples.root_count**2).astype(np.intp)
+                out[part] = np.add.reduceat(rows, first, axis=-1) * (factor / samples.root_count)
+            else:
+                out[part] = rows * (factor * samples.root_count)
+        return out
+
+    def _stepped(self, begins: Array, scale: Array, shape: Array, derivatives: bool) -> Array:
+        """Return the response to a unit step at an instant (B,), and its derivatives (B, 4 or 1, 1, n), weighed."""
+        rung = self.rungs[:1]
+        x = (self.samples.nodes - begins[:, None]) * (1.0 / scale[:, None])
+        return self._weighed(self._rungs(x, scale, shape, rung, derivatives), scale, rung, 1.0)
 
     def _free(self, scale: Array, shape: Array, derivatives: bool) -> Array:
         """Return the free response and its derivatives (B, 4 or 1, 2, n), weighed."""
@@ -150,10 +199,26 @@ class Columns:
 
         Values at rows, or rises of the integral over bins.
         """
-        samples, chart = self.samples, self.chart
+        samples = self.samples
         lift = 1 if samples.binned else 0  # an average is a difference of the next integral
-        lowest, highest = min(rungs) + lift - 1, max(rungs) + lift
         correct = samples.binned and samples.row_interval > 0
+        out = self._responses(x, scale, shape, rungs, derivatives, lift=lift, correct=correct)
+        return samples.differences(out) if samples.binned else out
+
+    def _responses(
+        self,
+        x: Array,
+        scale: Array,
+        shape: Array,
+        rungs: tuple[int, ...],
+        derivatives: bool,
+        *,
+        lift: int,
+        correct: bool,
+    ) -> Array:
+        """Return the rungs, `lift` integrals further, at nodes x (B, M); x is changed."""
+        samples, chart = self.samples, self.chart
+        lowest, highest = min(rungs) + lift - 1, max(rungs) + lift
         a, b, a_by, b_by = chart.coefficients(shape)
         np.maximum(x, 0.0, out=x)
         response = chart.respond(x, shape, derivatives=derivatives)
@@ -175,7 +240,7 @@ class Columns:
                     np.negative(stretch, out=stretch)
                 np.multiply(G[k], chart.shape_slope(shape)[:, None], out=out[:, 2, i])
                 np.multiply(F[k - 1], -1.0 / scale[:, None], out=out[:, 3, i])
-        return samples.differences(out) if samples.binned else out
+        return out
 
     def _weighed(self, rises: Array, scale: Array, rungs: tuple[int, ...], size: float) -> Array:
         """Return the rises (B, p, len(rungs), n) in units of the measurement, weighed; in place."""

@@ -45,6 +45,11 @@ class Samples:
         """Width of each bin, s."""
         return self.differences(self.nodes)
 
+    @property
+    def interval(self) -> float:
+        """Mean time between rows, s."""
+        return float(self.nodes.max() - self.nodes.min()) / max(self.rows - (0 if self.binned else 1), 1)
+
 
 def is_even(time: Array) -> bool:
     """Tell whether the rows are evenly spaced, within 2 % of the interval."""

@@ -70,7 +70,10 @@ def fitted(transfer: Transfer, time: Array, output: Array, measurement: Array) -
     solution = np.linalg.lstsq(columns / size, measurement, rcond=1e-8)[0] / size
     residual = measurement - columns @ solution
     return CourseFit(
-        gain=float(solution[0]), offset=float(solution[1]), residual=residual, rms=math.sqrt(float(np.mean(residual**2)))
+        gain=float(solution[0]),
+        offset=float(solution[1]),
+        residual=residual,
+        rms=math.sqrt(float(np.mean(residual**2))),
     )
 
 

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Literal
 
@@ -22,6 +21,8 @@ _EXPLAINED = 0.75  # rms with such an element over without, below which it is ta
 _FARTHEST = 3.0  # natural logarithm of what width, lags and dead time may change by
 _MOST_OVER_NOISE = 10.0
 _WIDTHS = np.concatenate((np.geomspace(0.01, 0.1, 6), np.linspace(0.13, 0.9, 14)))  # of the output's range
+_JUMPS = (0.0, 0.5, 1.0)  # lost motion, and two that stick
+_STARTS = 1  # widths that are polished for each
 _TIMES_WIDTH = 3.0  # smallest step of the staircase in widths of the lost motion
 
 Cause = Literal["deadband", "sticking", "not linear"]
@@ -49,7 +50,9 @@ class LostMotion:
         return self.cause is not None
 
 
-def lost_motion_of(time: ArrayLike, output: ArrayLike, measurement: ArrayLike, plain: Plant, residual: ArrayLike) -> LostMotion:
+def lost_motion_of(
+    time: ArrayLike, output: ArrayLike, measurement: ArrayLike, plain: Plant, residual: ArrayLike
+) -> LostMotion:
     """Return what the residual of a linear model says of lost motion and sticking.
 
     Parameters
@@ -65,7 +68,7 @@ def lost_motion_of(time: ArrayLike, output: ArrayLike, measurement: ArrayLike, p
     -----
     The noise is that of second differences of the measurement, and at least that of its rounding. Refused: structure
     above 3 % of the range; above 1 % where lost motion or sticking brings the rms under 0.75 of itself, or where the rms
-    is over 10 times the noise. The better of the two elements names the cause. A single open step is blind to both (the element moves one way only): ask for `staircase_test`.
+    is over 10 times the noise. The best of the elements names the cause. A single open step is blind to both (the element moves one way only): ask for `staircase_test`.
     """
     t, u, y, left = (np.asarray(column, dtype=np.float64) for column in (time, output, measurement, residual))
     span = float(np.ptp(y))
@@ -73,15 +76,14 @@ def lost_motion_of(time: ArrayLike, output: ArrayLike, measurement: ArrayLike, p
     noise = max(noise_rms(y), resolution(y) / math.sqrt(12.0))
     structure = math.sqrt(max(rms**2 - noise**2, 0.0)) / span if span > 0.0 else 0.0
     over = rms / noise if noise > 0.0 else math.inf if rms > 0.0 else 0.0
-    width, ratio, named = 0.0, 1.0, "deadband"
+    width, ratio, jump = 0.0, 1.0, 0.0
     if structure > _LOOKED_AT:
-        found = [(*_best(element, plain, t, u, y), name) for name, element in _ELEMENTS.items()]
-        left_rms, width, named = min(found)
+        left_rms, width, jump = min((*_best(jump, plain, t, u, y), jump) for jump in _JUMPS)
         ratio = left_rms / rms
     explained = structure > _LOOKED_AT and ratio < _EXPLAINED
     if not (explained or structure > MOST_STRUCTURE or (over > _MOST_OVER_NOISE and structure > _LOOKED_AT)):
         return LostMotion(structure=structure, over_noise=over, width=width, ratio=ratio, cause=None, text=None)
-    cause: Cause = "not linear" if not explained else "sticking" if named == "sticking" else "deadband"
+    cause: Cause = "not linear" if not explained else "deadband" if jump == 0.0 else "sticking"
     text = f"{_WHY[cause].format(structure=100.0 * structure, width=width)}; {staircase_test(plain, u, width)}"
     return LostMotion(structure=structure, over_noise=over, width=width, ratio=ratio, cause=cause, text=text)
 
@@ -100,9 +102,6 @@ _WHY: dict[Cause, str] = {
         "sticking, or something else that acted during the record"
     ),
 }
-
-
-Element = Callable[[Array, float], Array]
 
 
 def staircase_test(plain: Plant, output: ArrayLike, width: float) -> str:
@@ -129,43 +128,38 @@ def holding_time_s(plain: Plant) -> float:
     return plain.dead_time_s + 4.0 * sum(-1.0 / float(pole.real) for pole in falling)
 
 
-def after_play(output: Array, width: float) -> Array:
-    """Return where an element with that much play, full width, comes to rest row by row, starting in the middle."""
-    half = 0.5 * width
+def element_course(output: Array, width: float, jump: float) -> Array:
+    """Return where an element stands row by row that rests until pushed by half the width, starting in the middle.
+
+    `jump`: the share of half the width that it jumps by when it gives way; 0 is lost motion, 1 a valve that sticks and
+    then goes all the way.
+    """
+    half, lags = 0.5 * width, 0.5 * width * (1.0 - jump)
     position = float(output[0])
     out = np.empty(len(output))
     for k, value in enumerate(output.tolist()):
-        position = min(max(position, value - half), value + half)
+        if value - position > half:
+            position = value - lags
+        elif position - value > half:
+            position = value + lags
         out[k] = position
     return out
 
 
-def after_sticking(output: Array, width: float) -> Array:
-    """Return where an element stands that rests until the output is half that width away, then jumps to it."""
-    half = 0.5 * width
-    position = float(output[0])
-    out = np.empty(len(output))
-    for k, value in enumerate(output.tolist()):
-        if not -half <= value - position <= half:
-            position = value
-        out[k] = position
-    return out
-
-
-def _best(element: Element, plain: Plant, time: Array, output: Array, measurement: Array) -> tuple[float, float]:
+def _best(jump: float, plain: Plant, time: Array, output: Array, measurement: Array) -> tuple[float, float]:
     """Least rms with that element before the plant, and its width, output units; the plant is fitted anew."""
     span = float(np.ptp(output))
     tried = []
     for share in _WIDTHS:
-        moved = element(output, share * span)
+        moved = element_course(output, share * span, jump)
         if float(np.ptp(moved)) > 0.0:
             tried.append((fitted(plain.transfer, time, moved, measurement).rms, float(share * span)))
     tried.sort()
-    return min(tried[0], *(_polished(element, plain, time, output, measurement, width) for _, width in tried[:2]))
+    return min(tried[0], *(_polished(jump, plain, time, output, measurement, width) for _, width in tried[:_STARTS]))
 
 
 def _polished(
-    element: Element, plain: Plant, time: Array, output: Array, measurement: Array, width: float
+    jump: float, plain: Plant, time: Array, output: Array, measurement: Array, width: float
 ) -> tuple[float, float]:
     """Width, poles and dead time together: the element bent those of the linear model."""
     from scipy.optimize import minimize
@@ -185,7 +179,7 @@ def _polished(
         return lags_and_pair((*(complex(root) for root in roots), *((0.0,) if plain.integrating else ())), later)
 
     def left(p: Array) -> float:
-        moved = element(output, width * math.exp(float(p[0])))
+        moved = element_course(output, width * math.exp(float(p[0])), jump)
         if not (float(np.ptp(moved)) > 0.0 and float(np.abs(p).max()) < _FARTHEST):
             return float(np.ptp(measurement))
         return fitted(changed(p), time, moved, measurement).rms
@@ -204,6 +198,3 @@ def _stretched(transfer: Transfer, by: float, dead_time_s: float) -> Transfer:
         return [value * by ** (last - k) for k, value in enumerate(coefficients)]
 
     return transfer_of(slower(transfer.numerator), slower(transfer.denominator), dead_time_s)
-
-
-_ELEMENTS: dict[str, Element] = {"deadband": after_play, "sticking": after_sticking}

@@ -38,6 +38,8 @@ _DAMPINGS = (0.08, 0.4, 1.0, 3.0)
 _SLOWNESS = np.geomspace(0.008, 0.4, 8)  # 1 / omega_n over the span
 _DEAD_TIMES = (0.0, 1.5)  # in units of 1 / omega_n
 _INSTANTS = 4
+_REST_ROWS, _REST_SHARE = 20, 0.4
+_LONGEST_DEAD = 0.8  # spans
 _FIRST = 9  # rows that tell the first level
 _CLEAR, _CLEAR_SHARE = 5.0, 0.05  # noise levels, share of the range
 _STARTS = 8
@@ -170,6 +172,7 @@ class LoadFit:
     linear: Array
     variance: float
     degrees: int
+    longest_dead: float  # bound of the dead time, s
 
     @property
     def plant(self) -> Plant:
@@ -180,7 +183,9 @@ class LoadFit:
     @property
     def load(self) -> float:
         """Size of the load, output units."""
-        return float(self.linear[1] / self.linear[0])
+        assert self.columns.input is not None
+        level = self.columns.input.unknown_from is not None
+        return float(self.linear[1 + level] / self.linear[0])
 
     @property
     def explained(self) -> float:
@@ -194,12 +199,13 @@ class LoadFit:
     def draws(self, count: int, rng: np.random.Generator) -> list[Plant]:
         """Return plants that the record allows, in proportion to their probability; their gains may be of either sign."""
         degrees, factor = degrees_of(self.degrees, 1.0, self.columns.whitener)
+        lowest, highest = _bounds(self.columns, self.longest_dead)
         theta, linear = drawn(
             self.columns,
             self.theta,
             free=_free(self.structure),
-            lowest=np.append(lowest_of(self.columns, self.theta), _bounds(self.columns)[0][3]),
-            highest=_bounds(self.columns)[1],
+            lowest=np.append(lowest_of(self.columns, self.theta), lowest[3]),
+            highest=highest,
             variance=self.variance * factor,
             degrees=degrees,
             count=count,
@@ -211,21 +217,29 @@ class LoadFit:
 def load_fitted(record: Record) -> LoadFit:
     """Return the plant from a record in which a load moved the loop: a step of unknown size, felt at an unknown instant.
 
-    The output before that is taken to have balanced the loop, on the average: left free, its level and the load would
-    trade places.
+    The level of the output before the record and the load are of one kind, and could trade places. They cannot where the
+    dead time is well below the time before the load; else the output is taken to have balanced the loop, on the average.
     """
     trace = trace_of(record, float(record.time[0]))
     assert trace.input is not None
     assert record.output is not None
     before = max(_moved(trace.values) - 1, 1)
+    if before >= _REST_ROWS:
+        limit = _REST_SHARE * float(trace.time[before] - trace.time[0])
+        found = _load_or_integrating(trace, limit)
+        if found.theta[2] < 0.95 * limit:
+            return found
     first = float(record.output.values[0]) - float(np.mean(record.output.values[:before]))
     balanced = Input(times=np.append(trace.time[0], trace.input.times), sizes=np.append(first, trace.input.sizes))
-    trace = replace(trace, input=balanced)
+    return _load_or_integrating(replace(trace, input=balanced), _LONGEST_DEAD * float(np.ptp(trace.time)))
+
+
+def _load_or_integrating(trace: Trace, longest_dead: float) -> LoadFit:
     _, floor = noise_and_floor(trace.values)
-    best = _load_fit(trace, Structure(), floor)
+    best = _load_fit(trace, Structure(), floor, longest_dead)
     longest = float(best.columns.chart.lags(best.theta[None])[0][0])
     if longest > _SLOW * trace.span:
-        rival = _load_fit(trace, Structure(rungs=(2,), first_order=True), floor)
+        rival = _load_fit(trace, Structure(rungs=(2,), first_order=True), floor, longest_dead)
         best = rival if _integrates(rival.variance, best.variance, trace) else best
     return best
 
@@ -234,22 +248,22 @@ def _free(structure: Structure) -> np.ndarray:
     return np.array([True, not structure.first_order, True, True])
 
 
-def _bounds(columns: Columns) -> tuple[Array, Array]:
+def _bounds(columns: Columns, longest_dead: float) -> tuple[Array, Array]:
     centres = columns.samples.centres
     lowest = np.append(columns.chart.lowest, centres[0])
-    highest = np.array([np.log(_LONGEST * np.ptp(centres)), np.inf, 0.8 * np.ptp(centres), centres[-1]])
+    highest = np.array([np.log(_LONGEST * np.ptp(centres)), np.inf, longest_dead, centres[-1]])
     return lowest, highest
 
 
-def _load_fit(trace: Trace, structure: Structure, floor: float) -> LoadFit:
+def _load_fit(trace: Trace, structure: Structure, floor: float, longest_dead: float) -> LoadFit:
     assert trace.input is not None
     samples = gather(trace.time, trace.values, trace.span / _BINS, trace.step_row, even=trace.even)
     if not samples.binned:
         samples = rows_as_samples(trace.time, trace.values)
     columns = Columns(samples=samples, chart=LAGS, input=trace.input, rungs=structure.rungs, load=True)
-    lowest, highest = _bounds(columns)
+    lowest, highest = _bounds(columns, longest_dead)
     free = _free(structure)
-    theta = _load_starts(columns, trace)
+    theta = np.clip(_load_starts(columns, trace), lowest, highest)
     if structure.first_order:
         theta[:, 1] = lowest[1]
 
@@ -292,6 +306,7 @@ def _load_fit(trace: Trace, structure: Structure, floor: float) -> LoadFit:
         linear=solved.linear[0],
         variance=max(float(solved.sse[0]) / degrees, floor**2, 1e-300),
         degrees=degrees,
+        longest_dead=longest_dead,
     )
 
 

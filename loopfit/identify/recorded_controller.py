@@ -108,7 +108,11 @@ def acting_controller(
     ends = [end for end in (float(output.min()), float(output.max())) if not free[output == end].all()]
     if limits is None:  # an extreme value that comes again and again while the measurement moves may be one
         unit = 3.0 * _rounding(measurement)
-        ends = [end for end in (output.min(), output.max()) if (output == end).sum() >= 3 and np.ptp(measurement[output == end]) > unit]
+        ends = [
+            end
+            for end in (output.min(), output.max())
+            if (output == end).sum() >= 3 and np.ptp(measurement[output == end]) > unit
+        ]
     ends += [end for end in limits or () if float(np.abs(output - end).min()) < _NEAR_LIMIT * float(np.ptp(output))]
     if not ends:
         return _acting(time, setpoint, measurement, output, free, hint_s)
@@ -210,7 +214,10 @@ def _best_filter(rows: _Rows, hint_s: float, refine: float | None = None) -> tup
 
         middle, reach = math.log(refine), math.log(_FILTERS[1] / _FILTERS[0])
         near = minimize_scalar(
-            lambda x: left(math.exp(x)), bounds=(middle - reach, middle + reach), method="bounded", options={"xatol": 1e-5}
+            lambda x: left(math.exp(x)),
+            bounds=(middle - reach, middle + reach),
+            method="bounded",
+            options={"xatol": 1e-5},
         )
         choices = [(float(near.fun), math.exp(float(near.x))), (left(refine), refine)]
         if hint_s > 0.0:

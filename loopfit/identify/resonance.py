@@ -19,7 +19,9 @@ _FASTEST = 0.7  # of the Nyquist frequency
 _STARTS = 3
 
 
-def resonance_of(time: ArrayLike, output: ArrayLike, measurement: ArrayLike, plain: Plant, residual: ArrayLike) -> Plant | None:
+def resonance_of(
+    time: ArrayLike, output: ArrayLike, measurement: ArrayLike, plain: Plant, residual: ArrayLike
+) -> Plant | None:
     """Return a plant with a lag and a resonance where the record shows one that the plain model has not, else None.
 
     Parameters
@@ -57,7 +59,9 @@ def statistic(plain_rms: float, resonant: CourseFit) -> float:
     return len(left) * ((plain_rms / resonant.rms) ** 2 - 1.0) * (1.0 - rho) / (1.0 + rho)
 
 
-def _fitted_resonance(time: Array, output: Array, measurement: Array, plain: Plant) -> tuple[Transfer, CourseFit] | None:
+def _fitted_resonance(
+    time: Array, output: Array, measurement: Array, plain: Plant
+) -> tuple[Transfer, CourseFit] | None:
     """Lag (or integration) x pair, started at many frequencies and at the plain model's slow pole and dead time."""
     from scipy.optimize import least_squares
 

@@ -33,6 +33,7 @@ _STARTS = 6
 _ROUNDS = 40
 _LEFT = 2  # starts that are followed to the end
 _STEP = 1e-5
+_STEP_AT_LIMITS = 3e-3  # anti-windup acts or not at a scan: small steps would see the smooth part alone
 _CAPS = np.array([0.7, 1.0, 0.5, 0.7])  # log T, shape, dead time over T, log gain
 _COLOURS = 2
 _BEYOND = 2.0  # spans
@@ -274,8 +275,9 @@ def _minimised(
 def _linearised(rows: Rows, structure: Structure, sign: float, theta: Array) -> tuple[Array, Array]:
     """Return residuals (B, n) and derivatives of the prediction (B, 4, n)."""
     B = theta.shape[0]
-    steps = np.full((B, 4), _STEP)
-    steps[:, 2] = _STEP * (np.exp(theta[:, 0]) + rows.scan_s)
+    size = _STEP if rows.output_limits is None else _STEP_AT_LIMITS
+    steps = np.full((B, 4), size)
+    steps[:, 2] = size * (np.exp(theta[:, 0]) + rows.scan_s)
     moved = theta[:, None, :] + np.concatenate([np.zeros((B, 1, 4)), steps[:, :, None] * np.eye(4)], axis=1)
     predicted = _finite(rows, _plants(moved.reshape(-1, 4), structure, sign, rows)).reshape(B, 5, -1)
     return rows.values - predicted[:, 0], (predicted[:, 1:] - predicted[:, :1]) / steps[:, :, None]

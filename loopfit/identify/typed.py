@@ -94,7 +94,9 @@ def check_typed(
     found = _as_settings(acting, typed, settings, standing)
     differs = [name for name, what in standing.items() if what == "differs"]
     if differs:
-        text = f"the recorded output does not obey the typed settings: {'; '.join(differences(settings, acting, differs))}"
+        text = (
+            f"the recorded output does not obey the typed settings: {'; '.join(differences(settings, acting, differs))}"
+        )
         return _checked(acting, "differ", text, found)
     unknown = [name for name in ("kp", "ki", "kd") if standing[name] == "unknown"]
     if unknown:
@@ -107,7 +109,9 @@ def check_typed(
 def _columns(*columns: ArrayLike) -> list[np.ndarray]:
     arrays = [np.asarray(column, dtype=np.float64) for column in columns]
     if len({array.shape for array in arrays}) != 1 or arrays[0].ndim != 1:
-        raise UsageError(f"time, setpoint, measurement and output are columns of one length, not {[a.shape for a in arrays]}")
+        raise UsageError(
+            f"time, setpoint, measurement and output are columns of one length, not {[a.shape for a in arrays]}"
+        )
     if not all(np.all(np.isfinite(array)) for array in arrays):
         raise UsageError("time, setpoint, measurement and output hold values that are not finite numbers")
     steps = np.diff(arrays[0])
@@ -147,7 +151,9 @@ def _standing(acting: Acting, typed: Gains, settings: Settings) -> dict[str, Sta
         nothing = _UNMOVED / acting.share[name] if acting.share[name] > 0.0 else math.inf
         allowed = _ALLOWED * max(abs(want), abs(got)) if want != 0.0 else nothing
         largest = max(abs(want), abs(got))
-        out[name] = _judged(abs(got - want), allowed, band, band <= _CERTAIN * largest or (want == 0.0 and band <= nothing))
+        out[name] = _judged(
+            abs(got - want), allowed, band, band <= _CERTAIN * largest or (want == 0.0 and band <= nothing)
+        )
     out["filter_s"] = out["setpoint_weight"] = out["on_error"] = "unknown"
     if typed.kd != 0.0 and acting.derivative:
         got, band = values["filter_s"], doubt["filter_s"]
@@ -173,7 +179,9 @@ def _judged(off: float, allowed: float, band: float, certain: bool) -> Standing:
 def _agreement(acting: Acting, typed: Gains, standing: dict[str, Standing]) -> str:
     used = [name for name in ("kp", "ki", "kd") if getattr(typed, name) != 0.0]
     within = max(max(acting.doubt[name] / abs(getattr(typed, name)) for name in used), _ALLOWED)
-    text = f"the recorded output obeys the typed settings: gains within {100.0 * within:.2g} %, R^2 {acting.r_squared:.5f}"
+    text = (
+        f"the recorded output obeys the typed settings: gains within {100.0 * within:.2g} %, R^2 {acting.r_squared:.5f}"
+    )
     open_ones = []
     if typed.kd != 0.0 and standing["filter_s"] == "unknown":
         open_ones.append("the derivative filter")

@@ -41,7 +41,10 @@ def differences(settings: Settings, acting: Acting, differs: list[str]) -> list[
         worst = max((off for _, off in each), default=math.inf)
         if phrase and miss <= worst + _TIE + min(_band(acting), _CLOSE):
             phrases.append(phrase)
-            if math.isfinite(weight) and abs(acting.values["setpoint_weight"] - weight) < 0.05 + acting.doubt["setpoint_weight"]:
+            if (
+                math.isfinite(weight)
+                and abs(acting.values["setpoint_weight"] - weight) < 0.05 + acting.doubt["setpoint_weight"]
+            ):
                 left.discard("setpoint_weight")
         else:
             phrases += [phrase for phrase, _ in each]
@@ -133,7 +136,9 @@ def _other_meanings(settings: Settings) -> list[tuple[str, Terms, float]]:
 
 def _band(acting: Acting) -> float:
     """The widest relative band of the gains that act."""
-    return max((acting.doubt[k] / abs(acting.values[k]) for k in ("kp", "ki", "kd") if acting.values[k] != 0.0), default=0.0)
+    return max(
+        (acting.doubt[k] / abs(acting.values[k]) for k in ("kp", "ki", "kd") if acting.values[k] != 0.0), default=0.0
+    )
 
 
 def _one_by_one(settings: Settings, acting: Acting) -> list[Named]:
@@ -157,7 +162,15 @@ def _one_by_one(settings: Settings, acting: Acting) -> list[Named]:
     both = band["ki"] + (0.0 if parallel else band["kp"])
     typed = settings.integral_gain_per_s if parallel else settings.integral_time_s
     unit = integral_unit_of(settings)
-    phrases += _one("integral", typed, integral, _integral_names(settings, gain), both, unit, rate=unit in PER_SECOND and not parallel)
+    phrases += _one(
+        "integral",
+        typed,
+        integral,
+        _integral_names(settings, gain),
+        both,
+        unit,
+        rate=unit in PER_SECOND and not parallel,
+    )
     both = band["kd"] + (0.0 if parallel else band["kp"])
     typed = settings.derivative_gain_s if parallel else settings.derivative_time_s
     phrases += _one("derivative", typed, derivative, _derivative_names(settings, gain), both, settings.derivative_unit)
@@ -188,7 +201,10 @@ def _gain(settings: Settings, got: float, band: float) -> list[Named]:
         given = "the action is the other one" if settings.action is not None else "the gain has the wrong sign"
         phrases.append((f"{given}: the output moves the other way", 0.0))
     names = [
-        ("that of a gain typed as a proportional band" if as_band else "that of a proportional band typed as a gain", 100.0 / size),
+        (
+            "that of a gain typed as a proportional band" if as_band else "that of a proportional band typed as a gain",
+            100.0 / size,
+        ),
         ("the inverse of the number", 1.0 / size),
         *((f"{word} it", factor * size) for factor, word in _FACTORS.items()),
     ]
@@ -227,7 +243,10 @@ def _integral_names(settings: Settings, gain: float) -> Iterable[Named]:
                 if one != bare:
                     yield f"{_UNITS[one]}, typed as {_UNITS[bare]}", x * seconds
                 yield f"repeats per {one}, typed as a time in {_UNITS[bare]}", seconds / x
-            yield f"an integral gain per {one}, typed as {'repeats' if rate else 'an integral time'}", gain * seconds / x
+            yield (
+                f"an integral gain per {one}, typed as {'repeats' if rate else 'an integral time'}",
+                gain * seconds / x,
+            )
         amount = settings.integral_time_s or 0.0
         yield "not tied to the gain: the parallel form for the typed one", gain * amount
     yield from ((f"{word} it", factor * amount) for factor, word in _FACTORS.items())
@@ -253,7 +272,14 @@ def _derivative_names(settings: Settings, gain: float) -> Iterable[Named]:
 
 
 def _one(
-    what: str, typed: float | None, got: float | None, names: Iterable[Named], band: float, unit: str, *, rate: bool = False
+    what: str,
+    typed: float | None,
+    got: float | None,
+    names: Iterable[Named],
+    band: float,
+    unit: str,
+    *,
+    rate: bool = False,
 ) -> list[Named]:
     def shown(value: float) -> str:
         return f"{in_unit(1.0 / value if rate else value, unit):.4g} {unit}"
@@ -268,7 +294,9 @@ def _one(
         return []
     if abs(abs(got) - abs(typed)) <= (0.05 + 2.0 * band) * max(abs(got), abs(typed)):
         return [(f"the {what} acts with the opposite sign", 0.0)]
-    return [_explained(f"the {what} that acts is {shown(got)}, not {shown(typed)}", abs(got), names, band, abs(got / typed))]
+    return [
+        _explained(f"the {what} that acts is {shown(got)}, not {shown(typed)}", abs(got), names, band, abs(got / typed))
+    ]
 
 
 def _explained(said: str, got: float, names: Iterable[Named], band: float, ratio: float) -> Named:
@@ -276,7 +304,9 @@ def _explained(said: str, got: float, names: Iterable[Named], band: float, ratio
     near = sorted((abs(math.log(got / value)), name) for name, value in names if value > 0.0)
     if not near or near[0][0] > _CLOSE + min(2.0 * band, 0.2):
         return f"{said}: {ratio:.3g} times", math.inf
-    alike = [name for off, name in near if off <= near[0][0] + 2.0 * band + _TIE and off <= _CLOSE + min(2.0 * band, 0.2)]
+    alike = [
+        name for off, name in near if off <= near[0][0] + 2.0 * band + _TIE and off <= _CLOSE + min(2.0 * band, 0.2)
+    ]
     return f"{said}: {' or '.join(alike[:3])}", near[0][0]
 
 

@@ -90,7 +90,9 @@ def margins_of(plant: Plant, gains: Gains) -> Margins:
     angles = [_wrapped(loop.at(w)[0]) for w in gain_at]
     smallest = min(angles, key=abs, default=math.inf if stable else None)
     if stable:
-        most, most_at = _least(loop, grid, np.asarray(1.0 + 1.0 / L), _inverse_return_difference, _ends(loop, _inverse_end))
+        most, most_at = _least(
+            loop, grid, np.asarray(1.0 + 1.0 / L), _inverse_return_difference, _ends(loop, _inverse_end)
+        )
     return Margins(
         stable=stable,
         positive_feedback=loop.at_rest * (-1.0) ** loop.unstable_poles < 0,
@@ -108,16 +110,16 @@ def margins_of(plant: Plant, gains: Gains) -> Margins:
     )
 
 
-def _with_turns(
-    loop: OpenLoop, grid: Array, gain: Array, phase: Array, slope: Array
-) -> tuple[Array, Array, Array]:
+def _with_turns(loop: OpenLoop, grid: Array, gain: Array, phase: Array, slope: Array) -> tuple[Array, Array, Array]:
     """Return the grid with the extremes of the phase added, so that the phase is monotone between its points."""
     turns = np.flatnonzero(slope[:-1] * slope[1:] < 0)
     near = [i for i in turns if abs(math.remainder(phase[i] - math.pi, 2 * math.pi)) < 1.0]  # the others cannot cross
     if not near:
         return grid, gain, phase
     extremes = [
-        root_between(lambda w: loop.at(w)[1].imag, float(grid[i]), float(grid[i + 1]), float(slope[i]), float(slope[i + 1]))
+        root_between(
+            lambda w: loop.at(w)[1].imag, float(grid[i]), float(grid[i + 1]), float(slope[i]), float(slope[i + 1])
+        )
         for i in near
     ]
     grid = np.unique(np.concatenate([grid, extremes]))

@@ -292,7 +292,7 @@ def _loop_value(pulse: _Pulse, gains: Gains, scan_s: float, s: Complex) -> Compl
     z = np.asarray(np.exp(s), dtype=complex)
     own, answer = _raised(pulse, z, pulse.early + np.multiply.outer(1.0 / z, pulse.late))
     above, below = _control(gains, scan_s, z)
-    return own * below + above * (answer + pulse.direct * own / z) * np.exp(-pulse.scans * s)
+    return np.asarray(own * below + above * (answer + pulse.direct * own / z) * np.exp(-pulse.scans * s), dtype=complex)
 
 
 def _control(gains: Gains, scan_s: float, z: Complex) -> tuple[Complex, Complex]:
@@ -306,7 +306,7 @@ def _control(gains: Gains, scan_s: float, z: Complex) -> tuple[Complex, Complex]
     return above, below
 
 
-def _raised(pulse: _Pulse, z: Complex, columns: Complex) -> tuple[Complex, Complex]:
+def _raised(pulse: _Pulse, z: Complex, columns: Array | Complex) -> tuple[Complex, Complex]:
     """det(z - step), and row adj(z - step) column as what a rank-one change adds to it; z (m,), columns (m, n)."""
     matrix = z[:, None, None] * np.eye(len(pulse.row)) - pulse.step
     own = np.linalg.det(matrix)

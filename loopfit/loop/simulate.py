@@ -230,7 +230,9 @@ def _number(name: str, value: float, *, least: float = -math.inf, above: float =
     if not isinstance(value, int | float | np.number) or isinstance(value, bool) or not math.isfinite(value):
         raise UsageError(f"{name} is a finite number, not {value!r}")
     if not (value >= least and value > above):
-        raise UsageError(f"{name} is {f'at least {least:g}' if above == -math.inf else f'above {above:g}'}, not {value:g}")
+        raise UsageError(
+            f"{name} is {f'at least {least:g}' if above == -math.inf else f'above {above:g}'}, not {value:g}"
+        )
     return float(value)
 
 
@@ -239,7 +241,9 @@ def _sequence(name: str, values: ArrayLike, scans: int, loops: int) -> Array:
     if array.ndim == 1:
         array = array[:, None]
     if array.ndim > 2 or (array.ndim == 2 and (array.shape[0] != scans or array.shape[1] not in (1, loops))):
-        raise UsageError(f"{name} is a number or has one value for each of the {scans} scans; its shape is {array.shape}")
+        raise UsageError(
+            f"{name} is a number or has one value for each of the {scans} scans; its shape is {array.shape}"
+        )
     if not np.all(np.isfinite(array)):
         raise UsageError(f"{name} holds values that are not finite numbers")
     return np.broadcast_to(array, (scans, loops))

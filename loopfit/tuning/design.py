@@ -30,6 +30,7 @@ _GRID = (240, 44, 20)  # points a knob, for one, two and three knobs
 _ZOOMS = 3
 _BISECTIONS = 7
 _LOWEST = 0.05
+_NEARLY = 0.95
 _UNSEEN, _FULL = 0.02, 0.1
 _POLISH = (0.05, 0.02, 0.007, 0.002)
 _SENSITIVITY_SLACK = 1.0005
@@ -251,8 +252,9 @@ def design(
         middle = 0.5 * (low + high)
         found = search.best(middle)
         low, high, kept = (middle, high, found) if found is not None else (low, middle, kept)
-    designed = _designed(search, kept[0], met=False)
-    return replace(designed, attainable_damping_ratio=low, obstacle=_obstacle(search, damping))
+    more = search.best(_NEARLY * low)  # for a little less damping there is often much more load rejection
+    designed = _designed(search, (more or kept)[0], met=False)
+    return replace(designed, obstacle=_obstacle(search, damping))
 
 
 def _polished_best(search: Search, damping: float) -> Array | None:

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 from loopfit.core.finding import Finding
 from loopfit.core.plain import plain, to_json
 from loopfit.core.quantity import Quantity
+from loopfit.core.version import VERSION
 from loopfit.identify.identified import Identified
 from loopfit.loop.gains import Gains
 from loopfit.loop.settings import Settings
@@ -24,7 +25,7 @@ class LoopFigures:
     None where a figure does not exist (an unstable loop has no overshoot). Overshoot, rise and settling are of a setpoint
     step, in percent of it and s; `load_integrated_error` is the area under the error after a load of one output unit,
     `load_absolute_error` that of its magnitude; `peak_output` the largest output change after a setpoint step of one
-    unit; `output_noise` how much the output moves per unit of fast noise in the measurement.
+    unit; `output_noise` the rms of the output over that of noise from scan to scan in the measurement.
     """
 
     stable: bool
@@ -90,14 +91,12 @@ class Retuning:
 
     def to_dict(self) -> dict[str, Any]:
         """Return the document as plain data; open bounds as None."""
-        import loopfit
-
         plant = self.identified.plant
         analysis = self.identified.analysis
         return {
             "document": "loopfit retune",
             "version": 1,
-            "loopfit": loopfit.__version__,
+            "loopfit": VERSION,
             "record": None if analysis is None else analysis.record.source,
             "plant": {
                 "kind": "integrating" if plant.integrating else "rational" if plant.rational is not None else "lags",

@@ -28,9 +28,7 @@ def noise_scale(plant: Plant) -> float:
 
 def lag_sum(plant: Plant) -> float:
     """Return the sum of the plant's lags, s, from the slope of its denominator at rest."""
-    denominator = np.array(plant.denominator)
-    if plant.integrating:
-        denominator = denominator[:-1]
+    denominator = np.trim_zeros(np.array(plant.denominator), "b")
     return float(denominator[-2] / denominator[-1]) if denominator.size > 1 else 0.0
 
 

@@ -72,7 +72,11 @@ def test_singular_values_agree_with_the_gramians_of_python_control(plant: tuple[
 
 
 @settings(max_examples=30)
-@given(lags=st.lists(st.floats(0.1, 10), min_size=3, max_size=6), damping=st.floats(0.1, 0.9), zero=st.floats(-2, 2))
+@given(
+    lags=st.lists(st.floats(0.1, 10), min_size=3, max_size=6),
+    damping=st.floats(0.1, 0.9),
+    zero=st.floats(-2, 2).filter(lambda value: value == 0.0 or abs(value) > 1e-6),
+)
 def test_error_stays_below_twice_the_singular_values_left_out(lags: list[float], damping: float, zero: float) -> None:
     """Frequency response error <= 2 sum of the others (Enns 1984; Glover 1984; Liu and Anderson 1989 for the states at rest)."""
     denominator = np.array([1.0, 2 * damping, 1.0])

@@ -81,3 +81,12 @@ def test_a_general_minimiser_finds_nothing_better(numerator: list[float], denomi
     ]
     best = min(float(minimize(rms, start, method="Nelder-Mead", options={"maxiter": 300}).fun) for start in starts)
     assert here <= best * 1.005 + 1e-6
+
+
+@pytest.mark.parametrize("zero", [False, True])
+def test_the_model_does_not_ring_where_the_system_cannot(zero: bool) -> None:
+    """A jump cannot be met: poles of 1 rad/s must not become a swing of many rad/s about it, between the samples."""
+    system = RationalSystem(transfer_of([1.0, 3.0, 1.0], [1.0, 1.2, 1.0]))
+    found = by_step_error(system, course_of(system, 1.0), [], zero=zero)
+    frequency = found.a2**-0.5
+    assert frequency < 2.0 or found.a1 / (2.0 * found.a2**0.5) >= 0.49

@@ -71,3 +71,11 @@ def test_a_pole_near_a_zero_is_not_dominant() -> None:
     found = equivalents_of(RationalSystem(transfer_of([10.0, 1.0], np.polymul(bottom, [0.1, 1]).tolist())))
     one = next(each for each in found.equivalents if each.method == DOMINANT)
     assert one.damping_ratio == pytest.approx(0.4, rel=1e-6)
+
+
+def test_a_fast_single_pole_does_not_stand_for_slow_repeated_ones() -> None:
+    system = RationalSystem(transfer_of([1.0], np.poly([-1.0] * 4 + [-20.0]).tolist()))
+    forms, reason = by_dominant_poles(system, course_of(system, system.static_gain or 0.0))
+    assert forms == []
+    assert reason is not None
+    assert "the slowest poles are repeated" in reason

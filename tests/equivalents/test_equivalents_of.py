@@ -13,7 +13,8 @@ from hypothesis import strategies as st
 
 from loopfit.equivalents import choose
 from loopfit.equivalents.choose import chosen_of, equivalents_of
-from loopfit.equivalents.result import Equivalent, Equivalents
+from loopfit.equivalents.interchange import transfer_of_equivalent
+from loopfit.equivalents.result import Equivalent, Equivalents, share_words
 from loopfit.equivalents.system import RationalSystem
 from loopfit.model.transfer import transfer_of
 
@@ -62,6 +63,7 @@ KINDS = [
     ("unstable of higher order", [1.0], product([1, -0.2, 1], [0.1, 1], [0.2, 1]), 0.0),
     ("one unstable lag", [1.0], product([1, -1], [1, 3, 2]), 0.0),
     ("two unstable lags", [1.0], product([1, -1], [1, -2], [1, 2]), 0.0),
+    ("undamped pair alone", [1.0], [1.0, 0.0, 1.0], 0.0),
     ("undamped", [1.0], product([1, 0, 1], [1, 1]), 0.0),
     ("no static gain", [1.0, 0.0], product(*[[1.0, 1.0]] * 3), 0.0),
     ("hidden unstable lag", product([1, -1]), product([1, -1], [1, 1], [1, 2], [1, 3]), 0.0),
@@ -108,7 +110,7 @@ def test_tenth_order_is_fast() -> None:
 @given(
     gain=st.sampled_from([-1.0, 1e-9, 4e6]),
     slower=st.sampled_from([1e-6, 0.01, 60.0, 3.15e7]),
-    which=st.sampled_from([0, 1, 4, 21]),
+    which=st.sampled_from([0, 1, 4, 22]),
 )
 def test_units_change_nothing(gain: float, slower: float, which: int) -> None:
     """Another unit of time or of the measurement gives the same equivalents in those units."""
@@ -243,3 +245,46 @@ def test_choice(errors: tuple[float, ...], chosen: str) -> None:
     best = chosen_of([entry(*pair) for pair in zip(methods, errors, strict=True)])
     assert best is not None
     assert best.method == chosen
+
+
+def test_an_integration_with_a_jump_is_its_own_equivalent() -> None:
+    """(3 s + 2) / (2 s) = (1.5 s + 1) / s by hand."""
+    found = found_for([3.0, 2.0], [2.0, 0.0], 0.7)
+    assert found.chosen == choose.ITSELF
+    assert found.adequate
+    best = found.best
+    assert best is not None
+    assert (best.gain, best.zero_s, best.dead_time_s) == pytest.approx((1.0, 1.5, 0.7))
+    assert best.time_constants_s == ()
+    own = transfer_of_equivalent(best, integrating=True)
+    assert own(np.array([0.3j])) == pytest.approx((0.45j + 1) / 0.3j * np.exp(-0.21j), rel=1e-12)
+    strict(found)
+
+
+def test_an_integration_with_a_jump_and_a_lag_has_a_reason() -> None:
+    found = found_for([1.0, 3.0, 2.0], [1.0, 3.0, 0.0])
+    assert found.best is None
+    assert not found.adequate
+    assert any("jump" in reason for reason in found.reasons)
+    strict(found)
+
+
+def test_a_jump_is_told() -> None:
+    """(2 s^2 + s + 4)/(s^2 + s + 1) begins at 2 and comes to 4, by hand: 50 %."""
+    found = found_for([2.0, 1.0, 4.0], [1.0, 1.0, 1.0])
+    assert any("a jump of 50 % of the final value" in reason for reason in found.reasons)
+
+
+def test_nothing_is_left_out_of_an_integration_with_two_lags() -> None:
+    found = found_for([2.0], product([1, 0], [1, 1], [0.3, 1]), 0.2)
+    assert found.chosen == choose.ITSELF
+    assert found.best is not None
+    assert found.best.step_error_max_percent == 0.0
+
+
+@pytest.mark.parametrize(
+    ("percent", "words"),
+    [(0.0, "0"), (6.7e-14, "0"), (0.0123, "0.012"), (4.96, "5"), (99.6, "100"), (4321.0, "4321"), (2e9, "2e+09")],
+)
+def test_a_share_in_two_figures(percent: float, words: str) -> None:
+    assert share_words(percent) == words

@@ -119,3 +119,20 @@ def test_largest_excursion_may_be_a_later_peak() -> None:
     assert value(found.peak_value) == pytest.approx(y.max(), rel=0, abs=1e-8)
     first = int(np.argmax((y[1:-1] > y[:-2]) & (y[1:-1] >= y[2:]) & (y[1:-1] > 1))) + 1
     assert value(found.peak_time_s) == pytest.approx(time[first], rel=0, abs=2 * time[1])
+
+
+def test_samples_that_only_rounding_tells_apart_are_no_second_peak() -> None:
+    """The lags have died out by the first peak (e^-9.7 = 6e-5), so that the decay is that of the pair: any text's closed form."""
+    found = figures([1.0, 2.0], np.polymul([1.0, 0.4, 1.0], [1.0, 8.0, 15.0]).tolist())
+    assert value(found.decay_ratio) == pytest.approx(math.exp(-2 * math.pi * 0.2 / math.sqrt(0.96)), rel=1e-3)
+
+
+@given(
+    damping=st.floats(0.05, 0.5),
+    fast=st.lists(st.sampled_from([6.0, 7.0, 9.0, 12.0, 15.0]), min_size=1, max_size=4, unique=True),
+)
+def test_decay_ratio_is_that_of_the_slow_pair(damping: float, fast: list[float]) -> None:
+    """Lags of at most 1/6 s beside a pair of 1 rad/s: at the first peak, 3 s or later, e^-18 is left of them."""
+    found = figures([1.0], np.polymul([1.0, 2 * damping, 1.0], np.poly([-rate for rate in fast])).tolist())
+    expected = math.exp(-2 * math.pi * damping / math.sqrt(1 - damping**2))
+    assert value(found.decay_ratio) == pytest.approx(expected, rel=1e-5)

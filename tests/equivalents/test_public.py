@@ -109,3 +109,20 @@ def test_plant_and_public_names() -> None:
     plant = loopfit.Plant(gain=2.0, time_constants_s=(3.0, 1.0, 0.5), dead_time_s=0.5)
     assert loopfit.equivalent(plant).chosen == loopfit.equivalent(TEXT).chosen
     assert sorted(loopfit.__all__) == loopfit.__all__ == sorted(loopfit._HOMES)
+
+
+def test_coefficients_of_few_digits_are_the_decimals_that_were_written() -> None:
+    """(s + 0.1)^3 (s + 0.2), multiplied out by hand, whose last digits no float has; and (s + 1) ... (s + 14)."""
+    found = loopfit.equivalent(([0.0002], [1.0, 0.5, 0.09, 0.007, 0.0002]))
+    assert found.system.poles == pytest.approx(np.array([-0.1, -0.1, -0.1, -0.2]), rel=3e-16)
+    assert found.expression == "(0.0002)/(s^4+0.5*s^3+0.09*s^2+0.007*s+0.0002)"
+    whole = np.poly(-np.arange(1.0, 15.0))  # whole numbers below 2^53: exact
+    found = loopfit.equivalent(([0.0, 1.0], whole.tolist()))
+    assert found.system.poles == pytest.approx(-np.arange(1.0, 15.0), rel=3e-16)
+    assert not any("rounding" in reason for reason in found.reasons)
+
+
+def test_cancelled_factors_of_s_in_coefficients() -> None:
+    found = loopfit.equivalent(([0.0, 1.0, 2.0, 0.0], [1.0, 4.0, 3.0, 0.0]))
+    assert found.system.poles == pytest.approx(np.array([-1.0, -3.0]), rel=1e-12)
+    assert found.system.zeros == pytest.approx(np.array([-2.0]), rel=1e-12)

@@ -61,7 +61,7 @@ def count_in_rectangle(plant: Plant, gains: Gains, sigma: float, precision: type
     """
     s = np.poly1d([1.0, 0.0])
     filtered = np.poly1d([gains.filter_s, 1.0])
-    acts = gains.kp * s * filtered + gains.ki * filtered + gains.kd * s * s
+    acts = float(gains.kp) * s * filtered + float(gains.ki) * filtered + float(gains.kd) * s * s
     a = (np.poly1d(plant.denominator) * s * filtered).coeffs
     b = np.abs((np.poly1d(plant.numerator) * acts).coeffs) * math.exp(-min(plant.dead_time_s * sigma, 0.0))
     sizes = np.abs(a).astype(float)

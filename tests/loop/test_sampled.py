@@ -218,6 +218,18 @@ def test_a_double_root_with_a_long_dead_time() -> None:
         assert exact.visible_swing < 0.005
 
 
+def test_a_root_next_to_a_pole_of_the_plant() -> None:
+    """exp(-20 s) / (s - 1) with a gain of 0.1: s = 1 - 0.1 exp(-20 s), 2e-10 from the pole, unstable with any scan."""
+    from loopfit.model.transfer import transfer_of
+
+    plant = Plant.of_transfer(transfer_of([-1.0], [-1.0, 1.0], 20.0))
+    for scan in (0.1, 0.5):  # 200 and 40 scans of dead time: both ways
+        swing = sampled_swing(plant, Gains(kp=-0.1), scan)
+        assert not swing.stable
+        assert swing.complete
+        assert swing.roots[0] == pytest.approx(1.0, abs=1e-6)
+
+
 def test_an_integrator_with_pi_in_scans() -> None:
     """(z - 1)^2 + k h (kp (z - 1) + ki h z) = 0 for k / s without dead time; by hand from the backward difference."""
     k, kp, ki, h = 0.7, 0.9, 0.5, 0.4

@@ -153,3 +153,17 @@ def test_file_that_cannot_be_written_is_told(tmp_path: Path, path: str) -> None:
 def test_no_window_system_is_touched() -> None:
     code = "import sys, loopfit.report.equivalent_plot; assert 'matplotlib.pyplot' not in sys.modules"
     subprocess.run([sys.executable, "-c", code], check=True)
+
+
+def test_an_integration_with_a_jump_is_drawn_with_its_ramp() -> None:
+    """(s + 1)/s: 1 at once, then 1 per s, for the exact system and for its equivalent, by hand."""
+    axes = figure(loopfit.equivalent("(s+1)/s")).axes[0]
+    for name in ("exact", "equivalent"):
+        (line,) = [each for each in axes.lines if each.get_label() == name]
+        time, value = (np.asarray(side, dtype=float) for side in line.get_data())
+        assert value[time >= 0] == pytest.approx(1.0 + time[time >= 0], abs=1e-9)
+
+
+def test_a_swing_without_end_is_drawn_for_several_periods() -> None:
+    axes = figure(loopfit.equivalent("1/(s^2+1)")).axes[0]
+    assert axes.get_xlim()[1] > 3 * 2 * np.pi

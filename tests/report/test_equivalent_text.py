@@ -103,3 +103,34 @@ def test_poles_in_words() -> None:
     assert pole_words(np.array([-1, -2 + 1j, -2 - 1j, -2 + 1j, -2 - 1j], complex)) == "-1, -2 ± 1j (2 times)"
     assert pole_words(np.empty(0, complex)) == "none"
     assert pole_words(-np.arange(1, 21).astype(complex)).endswith("-12, and 8 more")
+
+
+def test_a_peak_that_no_recorder_shows_has_no_time() -> None:
+    """Its equivalent has an overshoot of exp(-pi 0.976/0.218) = 1e-6 and less: a peak in name only."""
+    lines = page(loopfit.equivalent("(1-2*s)/((s+1)*(3*s+1)*(5*s+1))*exp(-1.5*s)")).split("\n")
+    row = next(line for line in lines if line.startswith("overshoot"))
+    assert row.split()[-2:] == ["<", "0.01"]
+    assert not any(line.startswith("peak time") for line in lines)
+
+
+def test_an_undamped_pair_is_called_so() -> None:
+    assert "NOT STABLE: undamped" in page(loopfit.equivalent("1/(s^2+1)"))
+    assert "UNSTABLE" in page(loopfit.equivalent("1/(s^2-0.1*s+1)"))
+
+
+def test_large_errors_have_no_exponent() -> None:
+    assert "e+0" not in page(loopfit.equivalent("100*(s+0.01)/((s+1)*(s+2)*(s+3))"))
+
+
+def test_a_model_that_is_not_adequate_is_called_so_at_once() -> None:
+    assert answer(loopfit.equivalent("(s^2+3*s+1)/(s^2+1.2*s+1)")).startswith(
+        "NOT adequate; the nearest: damping ratio"
+    )
+    assert answer(loopfit.equivalent("1/(s+1)^8")).startswith("Damping ratio")
+
+
+def test_of_a_loop_with_dead_time_not_all_poles_are_shown() -> None:
+    loop = loopfit.Loop(
+        loopfit.Plant(gain=2.0, time_constants_s=(5.0, 1.0), dead_time_s=0.8), loopfit.Gains(kp=1.5, ki=0.4)
+    )
+    assert "infinitely many" in " ".join(page(loopfit.equivalent(loop)).split())

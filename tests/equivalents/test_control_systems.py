@@ -134,3 +134,25 @@ def test_improper_and_zero() -> None:
         from_control(control.tf([1, 0, 0], [1, 1]))
     with pytest.raises(RecordError, match="zero"):
         from_control(control.ss([[-1.0]], [[0.0]], [[1.0]], [[0.0]]))
+
+
+def test_one_public_way_for_whatever_has_a_transfer_function() -> None:
+    """1/((2 s + 1)(s + 1)) by hand, from each kind."""
+    s = np.array([0.3j, 1.0 + 2.0j])
+    expected = 3.0 / ((2 * s + 1) * (s + 1))
+    found = loopfit.equivalent("3/((2*s+1)*(s+1))")
+    assert found.best is not None
+    plant = loopfit.Plant(gain=3.0, time_constants_s=(2.0, 1.0))
+    for kind in (found, found.best, plant, transfer_of([3.0], [2.0, 3.0, 1.0])):
+        assert loopfit.to_control(kind)(s) == pytest.approx(expected, rel=1e-12)
+    late = loopfit.Plant(gain=3.0, time_constants_s=(2.0, 1.0), dead_time_s=0.4)
+    with pytest.raises(UsageError, match="pade_order"):
+        loopfit.to_control(late)
+    # a Pade approximation of third order is off by about (0.4 |s|)^7 / 100800 (from memory): below 1e-6 here
+    approximate = loopfit.to_control(late, pade_order=3)(s)
+    assert approximate == pytest.approx(expected * np.exp(-0.4 * s), rel=1e-5)
+
+
+def test_what_has_no_transfer_function_is_told() -> None:
+    with pytest.raises(UsageError, match="str has no transfer function"):
+        loopfit.to_control("1/s")  # type: ignore[arg-type]
