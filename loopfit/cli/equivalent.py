@@ -39,7 +39,11 @@ class EquivalentCommand(TyperCommand):
 def equivalent_command(
     expression: Annotated[
         str | None,
-        typer.Argument(help="The system in s, as 2*exp(-0.5*s)/((3*s+1)*(s+1)).", show_default=False),
+        typer.Argument(
+            metavar="EXPRESSION-OR-CASE",
+            help="The system in s, as 2*exp(-0.5*s)/((3*s+1)*(s+1)); or a case (.toml), for its closed loop.",
+            show_default=False,
+        ),
     ] = None,
     json: Annotated[bool, typer.Option("--json", help="One JSON document on standard output.")] = False,
     plot: Annotated[Path | None, typer.Option(help="Write a picture: .png, .svg or .pdf.")] = None,
@@ -64,7 +68,13 @@ def equivalent_command(
         coefficients = None
         if numerator is not None and denominator is not None:
             coefficients = (_numbers("--numerator", numerator), _numbers("--denominator", denominator))
-        result = equivalent(expression, coefficients=coefficients, dead_time_s=dead_time, band_percent=band)
+        system: Any = expression
+        if expression is not None and expression.lower().endswith(".toml"):
+            from loopfit.case.load import load_case
+            from loopfit.case.loop import loop_of
+
+            system = loop_of(load_case(expression))
+        result = equivalent(system, coefficients=coefficients, dead_time_s=dead_time, band_percent=band)
         if plot is not None:
             from loopfit.report.equivalent_plot import picture
 

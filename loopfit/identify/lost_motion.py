@@ -18,6 +18,8 @@ from loopfit.step.noise import noise_rms, resolution
 MOST_STRUCTURE = 0.03  # of the measurement's range: more is no linear plant
 _LOOKED_AT = 0.01  # the same, from which lost motion and sticking are tried
 _EXPLAINED = 0.75  # rms with such an element over without, below which it is taken to be there
+_NOISE_AGAIN = 4.0  # times the noise: what a deadband leaves once it is modelled; sticking leaves more
+_ALL = 0.15  # the same as a ratio
 _FARTHEST = 3.0  # natural logarithm of what width, lags and dead time may change by
 _MOST_OVER_NOISE = 10.0
 _WIDTHS = np.concatenate((np.geomspace(0.01, 0.1, 6), np.linspace(0.13, 0.9, 14)))  # of the output's range
@@ -68,7 +70,8 @@ def lost_motion_of(
     -----
     The noise is that of second differences of the measurement, and at least that of its rounding. Refused: structure
     above 3 % of the range; above 1 % where lost motion or sticking brings the rms under 0.75 of itself, or where the rms
-    is over 10 times the noise. The best of the elements names the cause. A single open step is blind to both (the element moves one way only): ask for `staircase_test`.
+    is over 10 times the noise. The best of the elements names the cause:
+    lost motion where it leaves little more than noise, else sticking. A single open step is blind to both (the element moves one way only): ask for `staircase_test`.
     """
     t, u, y, left = (np.asarray(column, dtype=np.float64) for column in (time, output, measurement, residual))
     span = float(np.ptp(y))
@@ -83,7 +86,7 @@ def lost_motion_of(
     explained = structure > _LOOKED_AT and ratio < _EXPLAINED
     if not (explained or structure > MOST_STRUCTURE or (over > _MOST_OVER_NOISE and structure > _LOOKED_AT)):
         return LostMotion(structure=structure, over_noise=over, width=width, ratio=ratio, cause=None, text=None)
-    cause: Cause = "not linear" if not explained else "deadband" if jump == 0.0 else "sticking"
+    cause: Cause = "not linear" if not explained else "deadband" if jump == 0.0 and (ratio * over < _NOISE_AGAIN or ratio < _ALL) else "sticking"
     text = f"{_WHY[cause].format(structure=100.0 * structure, width=width)}; {staircase_test(plain, u, width)}"
     return LostMotion(structure=structure, over_noise=over, width=width, ratio=ratio, cause=cause, text=text)
 

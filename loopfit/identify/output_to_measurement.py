@@ -84,7 +84,11 @@ def fitted(trace: Trace) -> Fit:
     best = whitened(_from_rest_or_not(best, trace, floor), trace, noise_floor=floor)
     if best.structure.rungs != (2,) and float(best.columns.chart.lags(best.theta[None])[0][0]) > _BEYOND * trace.span:
         rival = fit_trace(trace, Structure(rungs=(2,), first_order=True), noise_floor=floor)
-        rival = _from_rest_or_not(_on_rows(rival, trace, floor), trace, floor)
+        near = np.array([math.log(_quick_lag(best.columns, best.theta)), LAGS.lowest[1], best.theta[2]])
+        rival = min(
+            (_on_rows(replace(rival, theta=at), trace, floor) for at in (rival.theta, near)), key=lambda fit: fit.sse
+        )
+        rival = _from_rest_or_not(rival, trace, floor)
         rival = whitened(rival, trace, noise_floor=floor)
         if _integrates(rival.variance, best.variance, trace):
             return rival
@@ -128,6 +132,12 @@ def _on_rows(fit: Fit, trace: Trace, floor: float) -> Fit:
         inflation=inflation_by(colour, n),
         settled=bool(found.settled[0]),
     )
+
+
+def _quick_lag(columns: Columns, theta: Array) -> float:
+    """Return the quicker lag of a model, s, no shorter than a hundredth of a row."""
+    T, r = (float(value[0]) for value in columns.chart.lags(theta[None]))
+    return max(2.0 * T * r / (1.0 + math.sqrt(max(1.0 - 4.0 * r, 0.0))), 0.01 * columns.samples.interval)
 
 
 def _integrates(variance: float, against: float, trace: Trace) -> bool:
@@ -239,7 +249,9 @@ def _load_or_integrating(trace: Trace, longest_dead: float) -> LoadFit:
     best = _load_fit(trace, Structure(), floor, longest_dead)
     longest = float(best.columns.chart.lags(best.theta[None])[0][0])
     if longest > _SLOW * trace.span:
-        rival = _load_fit(trace, Structure(rungs=(2,), first_order=True), floor, longest_dead)
+        near = best.theta.copy()
+        near[0], near[1] = math.log(_quick_lag(best.columns, best.theta)), LAGS.lowest[1]
+        rival = _load_fit(trace, Structure(rungs=(2,), first_order=True), floor, longest_dead, near)
         best = rival if _integrates(rival.variance, best.variance, trace) else best
     return best
 
@@ -255,7 +267,9 @@ def _bounds(columns: Columns, longest_dead: float) -> tuple[Array, Array]:
     return lowest, highest
 
 
-def _load_fit(trace: Trace, structure: Structure, floor: float, longest_dead: float) -> LoadFit:
+def _load_fit(
+    trace: Trace, structure: Structure, floor: float, longest_dead: float, near: Array | None = None
+) -> LoadFit:
     assert trace.input is not None
     samples = gather(trace.time, trace.values, trace.span / _BINS, trace.step_row, even=trace.even)
     if not samples.binned:
@@ -266,6 +280,8 @@ def _load_fit(trace: Trace, structure: Structure, floor: float, longest_dead: fl
     theta = np.clip(_load_starts(columns, trace), lowest, highest)
     if structure.first_order:
         theta[:, 1] = lowest[1]
+    if near is not None:
+        theta = np.vstack([theta, near])
 
     def caps(at: Array) -> Array:
         T, r = LAGS.lags(at)

@@ -9,7 +9,6 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from loopfit.core.arrays import Array
-from loopfit.step.noise import noise_rms
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -22,7 +21,7 @@ _ACTS = 40.0  # likelihood ratio, rows corrected for colour, from which a deriva
 _ALIKE = 9.0  # the same ratio below which two lags fit alike
 _EXACT = 4.0  # times the rounding of the columns: the residual of a record of exactly this controller
 _NEAR_LIMIT = 0.06  # of the range of the output: rows that are left out at first
-_LIVELY = 3.0  # times the rounding of the measurement: its movement from row to row, without which thinning is not seen
+_WHITE = 0.2  # correlation from row to row
 _TERMS = ("kp", "weighted", "ki", "kd", "setpoint_kd")
 
 
@@ -41,7 +40,8 @@ class Acting:
     lag_scans: float
     scan_s: float
     held: bool  # the output rests for several rows at a time
-    exact: bool  # the residual is no more than rounding, and rows in between would have made it more
+    exact: bool  # the residual is no more than rounding
+    white: bool  # the residual is like the noise of a recorder
     derivative: bool
 
 
@@ -162,7 +162,7 @@ def _acting(
                 doubt[name] += abs(value - best.values[name])
     return Acting(
         values=best.values, doubt=doubt, share=best.share, r_squared=best.r_squared,
-        lag_scans=lag / rows_a_scan, scan_s=rows.scan_s, held=rows_a_scan > 1, exact=best.exact, derivative=best.derivative,
+        lag_scans=lag / rows_a_scan, scan_s=rows.scan_s, held=rows_a_scan > 1, exact=best.exact, white=best.white, derivative=best.derivative,
     )  # fmt: skip
 
 
@@ -237,7 +237,7 @@ def _described(rows: _Rows, filter_s: float, unit: float, measured_unit: float, 
     solution, left, used = _solved(levels, wanted, use)
     residual = wanted - levels[:, used] @ solution
     n = len(wanted)
-    rho = _lag_one(residual)
+    rho = min(max(_correlation(residual), 0.0), 0.98)
     spread = math.sqrt(left / max(n - len(used) - 1, 1) * (1.0 + rho) / (1.0 - rho))
     slope = np.zeros(len(raw))
     if derivative:  # joint with the filter time: the derivative of the fit to its logarithm
@@ -277,7 +277,7 @@ def _described(rows: _Rows, filter_s: float, unit: float, measured_unit: float, 
             "setpoint_weight": weight_doubt, "on_error": on_error_doubt,
         },
         share=share, r_squared=1.0 - left / float(wanted @ wanted), lag_scans=0.0, scan_s=rows.scan_s, held=False,
-        exact=math.sqrt(left / n) < _EXACT * rounding / math.sqrt(12.0) and noise_rms(rows.measurement) > _LIVELY * measured_unit,
+        exact=math.sqrt(left / n) < _EXACT * rounding / math.sqrt(12.0), white=abs(_correlation(residual)) < _WHITE,
         derivative=derivative,
     )  # fmt: skip
 
@@ -298,9 +298,10 @@ def _errors(columns: Array, slope: Array, spread: float) -> tuple[Array, float]:
     return error[: columns.shape[1]], float(error[-1]) if joint.shape[1] > columns.shape[1] else math.inf
 
 
-def _lag_one(residual: Array) -> float:
+def _correlation(residual: Array) -> float:
+    """Of neighbouring rows."""
     size = float(residual @ residual)
-    return min(max(float(residual[1:] @ residual[:-1]) / size, 0.0), 0.98) if size > 0.0 else 0.0
+    return float(residual[1:] @ residual[:-1]) / size if size > 0.0 else 0.0
 
 
 def _rounding(values: Array) -> float:

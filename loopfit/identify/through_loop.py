@@ -31,7 +31,10 @@ _DEAD_SHARES = (0.0, 0.3, 0.8)  # of the sum of the lags: several for the same l
 _GAINS = (0.2, 0.6, 2.0, 6.0)  # of the loop at the frequency 1 / (sum of the lags)
 _STARTS = 6
 _ROUNDS = 40
-_LEFT = 2  # starts that are followed to the end
+_LEFT = 3  # starts that are followed to the end
+_THINNED = (4, 8, 12)  # rounds after which copies are dropped
+_FIRST_ORDER = 0.02  # r below which dead time may hide a lag
+_UNLIKE, _ALIKE = 0.4, 0.05  # coordinates (dead time over T) by which starts differ, and those that lead apart
 _STEP = 1e-5
 _STEP_AT_LIMITS = 3e-3  # anti-windup acts or not at a scan: small steps would see the smooth part alone
 _CAPS = np.array([0.7, 1.0, 0.5, 0.7])  # log T, shape, dead time over T, log gain
@@ -142,6 +145,8 @@ def _fit(rows: Rows, structure: Structure, sign: float, floor: float) -> LoopFit
     theta = _starts(rows, structure, sign)
     whitener: Whitener | None = None
     found = _minimised(rows, structure, sign, theta, _identity)
+    if free[1] and LAGS.shape(found[0][None])[0] < _FIRST_ORDER:
+        found = min((found, _minimised(rows, structure, sign, _hidden_lag(found[0]), _identity)), key=_squares)
     for _ in range(_COLOURS):
         theta, rest, J = found
         whitener = whitener_of(rest, J[free])
@@ -162,6 +167,18 @@ def _fit(rows: Rows, structure: Structure, sign: float, floor: float) -> LoopFit
         degrees=degrees,
         whitener=whitener,
     )
+
+
+def _hidden_lag(theta: Array) -> Array:
+    """Return starts (2, 4) where a second lag takes the place of dead time: that valley is apart from the first-order one."""
+    out = np.repeat(theta[None], 2, axis=0)
+    out[:, 1] = math.log(0.2 + R_SHIFT)
+    out[:, 2] *= np.array([0.3, 0.7])
+    return out
+
+
+def _squares(found: tuple[Array, Array, Array]) -> float:
+    return float(found[1] @ found[1])
 
 
 def _identity(values: Array) -> Array:
@@ -211,16 +228,20 @@ def _starts(rows: Rows, structure: Structure, sign: float) -> Array:
     if structure.first_order:
         theta[:, 1] = LAGS.lowest[1]
     rest = rows.values - _finite(rows, _plants(theta, structure, sign, rows))
-    out: Array = theta[np.argsort(np.einsum("bn,bn->b", rest, rest))]
-    kept = [0]
-    for i in range(1, out.shape[0]):
-        apart = np.abs(out[i] - out[kept])
-        apart[:, 2] *= np.exp(-out[kept, 0])
-        if np.all(apart.max(axis=1) > 0.4):
+    return theta[_apart(theta, np.einsum("bn,bn->b", rest, rest), _UNLIKE, _STARTS)]
+
+
+def _apart(theta: Array, sse: Array, distance: float, most: int) -> list[int]:
+    """Return the best members that differ from each other by a distance in some coordinate."""
+    kept: list[int] = []
+    for i in np.argsort(sse).tolist():
+        apart = np.abs(theta[i] - theta[kept])
+        apart[:, 2] *= np.exp(-theta[kept, 0])
+        if np.all(apart.max(axis=1, initial=0.0) > distance):
             kept.append(i)
-        if len(kept) == _STARTS:
+        if len(kept) == most:
             break
-    return out[kept]
+    return kept
 
 
 def _minimised(
@@ -262,8 +283,9 @@ def _minimised(
         J = np.where(better[:, None, None], new_J, J)
         damping = np.where(better, 0.2 * damping, damping * growth)
         growth = np.where(better, 2.0, 2.0 * growth)
-        if turn in (4, 8) and theta.shape[0] > _LEFT:
-            keep = np.argsort(np.einsum("bn,bn->b", whitened(rest), whitened(rest)))[:_LEFT]
+        if turn in _THINNED and theta.shape[0] > 1:
+            left = whitened(rest)
+            keep = _apart(theta, np.einsum("bn,bn->b", left, left), _ALIKE, _LEFT)
             theta, rest, J, damping, growth = theta[keep], rest[keep], J[keep], damping[keep], growth[keep]
         if damping.min() > 1e10:
             break

@@ -21,7 +21,10 @@ _ALLOWED_FILTER = 0.15  # of the filter time: a tenth of the derivative time is 
 _ALLOWED_WEIGHT = 0.05
 _CERTAIN = 0.15  # of a gain: a wider band leaves it unchecked
 _THINNED = 1.5  # rows further apart than this many scans
-_THINNED_DOUBT = 0.1  # of a gain, where the record is not exactly that of the controller
+_THINNED_DOUBT = 0.05  # of a gain then
+_NOISY_DOUBT = 0.06  # of a gain, where what is left is more than rounding
+_UNLIKE_DOUBT = 0.25  # of a gain, where what is left is neither rounding nor noise
+_UNFILTERED = 0.25  # scans: a derivative filter as short as this is none
 _UNMOVED = 0.01  # of the output's standard deviation: an action as small as this is none
 
 Verdict = Literal["agree", "differ", "cannot be checked"]
@@ -89,7 +92,10 @@ def check_typed(
             f"{acting.r_squared:.3f}); {why}"
         )
         return _checked(acting, "cannot be checked", text)
-    acting = _doubted(acting, settings, every)
+    wary = _doubted(acting, typed, settings, every)
+    if isinstance(wary, str):
+        return _checked(acting, "cannot be checked", f"the typed settings cannot be checked: {wary}")
+    acting = wary
     standing = _standing(acting, typed, settings)
     found = _as_settings(acting, typed, settings, standing)
     differs = [name for name, what in standing.items() if what == "differs"]
@@ -131,16 +137,32 @@ def _not_checked(text: str) -> TypedCheck:
     return TypedCheck(verdict="cannot be checked", text=text)
 
 
-def _doubted(acting: Acting, settings: Settings, every: float) -> Acting:
-    """Wider bands where the rows are further apart than the scans and the fit is not exact."""
-    if acting.exact or settings.scan_s is None or not every > _THINNED * settings.scan_s:
+def _doubted(acting: Acting, typed: Gains, settings: Settings, every: float) -> Acting | str:
+    """Wider bands where something stands between controller and record, or why nothing can be said then.
+
+    A measurement that was filtered before it was stored looks like a derivative without a filter, a filtered output
+    like one of the wrong sign; rows further apart than the scans hide what a derivative did between them.
+    """
+    values = acting.values
+    thinned = not acting.held and settings.scan_s is not None and every > _THINNED * settings.scan_s
+    unlike = acting.derivative and (values["kd"] * values["kp"] <= 0.0 or values["filter_s"] < _UNFILTERED * acting.scan_s)
+    if unlike and values["kd"] * typed.kd < 0.0 and values["kp"] * typed.kp < 0.0:  # the whole sign is wrong
+        unlike = values["kd"] * values["kp"] <= 0.0
+    typed_alike = typed.kd * typed.kp < 0.0 or 0.0 < typed.filter_s < 2.0 * _UNFILTERED * acting.scan_s
+    filtered = unlike and not typed_alike
+    if acting.exact and not thinned and not filtered:
         return acting
-    doubt = dict(acting.doubt)
-    for name in ("kp", "ki"):
-        doubt[name] += _THINNED_DOUBT * abs(acting.values[name])
-    for name in ("kd", "filter_s", "setpoint_weight", "on_error"):
-        doubt[name] = math.inf  # a slope between distant rows says nothing of it
-    return replace(acting, doubt=doubt)
+    if acting.white and not thinned and not filtered:  # noise of the recorder, as far as one can see
+        doubt = {name: acting.doubt[name] + _NOISY_DOUBT * abs(values[name]) for name in ("kp", "ki", "kd")}
+        doubt |= {"setpoint_weight": acting.doubt["setpoint_weight"] + 2.0 * _NOISY_DOUBT, "filter_s": math.inf}
+        return replace(acting, doubt=acting.doubt | doubt)
+    if acting.derivative or typed.kd != 0.0:
+        if thinned:
+            return f"a row every {every:.3g} s does not show the derivative of a controller that scans every {settings.scan_s:.3g} s"
+        return "the measurement or the output seems to have been filtered or thinned before it was stored"
+    share = _THINNED_DOUBT if acting.exact or acting.white else _UNLIKE_DOUBT
+    doubt = {name: acting.doubt[name] + share * abs(values[name]) for name in ("kp", "ki")}
+    return replace(acting, doubt=acting.doubt | doubt | {"setpoint_weight": math.inf})
 
 
 def _standing(acting: Acting, typed: Gains, settings: Settings) -> dict[str, Standing]:
@@ -164,9 +186,10 @@ def _standing(acting: Acting, typed: Gains, settings: Settings) -> dict[str, Sta
     if typed.kp != 0.0 and math.isfinite(doubt["setpoint_weight"]):
         off, band = abs(values["setpoint_weight"] - typed.setpoint_weight), doubt["setpoint_weight"]
         out["setpoint_weight"] = _judged(off, _ALLOWED_WEIGHT, band, band < _CERTAIN)
-    if settings.scan_s is not None and (acting.exact or acting.held):
-        off = abs(acting.scan_s / settings.scan_s - 1.0)
-        out["scan_s"] = "differs" if off > _ALLOWED else "agrees"
+    if settings.scan_s is not None:
+        slower, faster = acting.scan_s > (1.0 + _ALLOWED) * settings.scan_s, acting.scan_s < (1.0 - _ALLOWED) * settings.scan_s
+        # rows far apart alone may be a thinned record; a held output, or one that moves between the scans, is not
+        out["scan_s"] = "differs" if (slower and acting.held) or (faster and acting.exact) else "agrees"
     return out
 
 

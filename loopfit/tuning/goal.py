@@ -8,6 +8,7 @@ from dataclasses import dataclass, field
 from types import MappingProxyType
 from typing import Literal
 
+from loopfit.core.arrays import Array
 from loopfit.core.errors import UsageError
 from loopfit.loop.visible import Swing
 
@@ -21,14 +22,15 @@ _DESIGN_SHORT = 0.02
 _MOST_SENSITIVITY = (1.05, 3.0)
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Goal:
     """The wanted damping ratio and the limits that hold besides.
 
     `noise_gain`: largest |plant gain| (kp + kd / filter). `move`: the settings that may change (all, when None);
     `at_least`, `at_most`: bounds on gain (its magnitude), integral_time_s, derivative_time_s, ideal form.
     `confidence`: the probability with which the true loop is to meet the goal; None for the fitted plant alone.
-    `series`: only settings that exist in series form.
+    `series`: only settings that exist in series form. `disc`: (2, n) frequency, rad/s, and how far the plant may be from its
+    model there, in its own unit: the loop keeps its distance for every plant in it.
     """
 
     damping_ratio: float = CRITICAL
@@ -42,6 +44,7 @@ class Goal:
     at_most: Mapping[str, float] = field(default_factory=lambda: MappingProxyType({}))
     confidence: float | None = 0.9
     series: bool = False
+    disc: Array | None = None
 
     def __post_init__(self) -> None:
         if not 0.0 < self.damping_ratio <= 1.0:

@@ -24,6 +24,7 @@ from loopfit.tuning.goal import Goal
 _BEYOND = 0.4  # of the share that may fail, demanded of the draws: 94 % for 90 %
 _APART = 0.985  # worth of the next setting that is tried
 _ROUNDS = 3
+_HELD_BACK = 1.3
 _LESS = (0.85, 0.65, 0.45, 0.25)
 
 
@@ -71,6 +72,7 @@ def swing_on(plant: Plant, gains: Gains, scan_s: float | None, *, late: bool) ->
 def probable(
     plant: Plant, goal: Goal, draws: Sequence[Plant], fresh: Sequence[Plant], *, present: Gains | None = None,
     scan_s: float | None = None, late: bool = False, coupled: bool = True, also: Also | None = None,
+    disc: bool = False,
 ) -> Probable:  # fmt: skip
     """Return the settings of greatest load rejection that meet the goal with the probability asked for.
 
@@ -82,7 +84,18 @@ def probable(
         Its `confidence` None: the nominal design.
     draws, fresh : sequences of Plant
         Two independent sets; none: the nominal design.
+    disc : bool
+        Whether the goal's disc is to be used; else it is weighed against a lower sensitivity limit.
     """
+    if goal.disc is not None and not disc:
+        # two protections against what the record did not excite: the disc, or a lower sensitivity; whichever costs less
+        by_disc = probable(plant, goal, draws, fresh, present=present, scan_s=scan_s, late=late, coupled=coupled, also=also,
+                           disc=True)  # fmt: skip
+        calmer = replace(goal, disc=None, max_sensitivity=min(goal.max_sensitivity, _HELD_BACK))
+        held_back = probable(
+            plant, calmer, draws, fresh, present=present, scan_s=scan_s, late=late, coupled=coupled, also=also
+        )
+        return max(by_disc, held_back, key=lambda one: (one.designed.met, one.designed.worth))
     kwargs: dict[str, object] = {"present": present, "scan_s": scan_s, "late": late, "coupled": coupled, "also": also}
     nominal = design(plant, goal, **kwargs)  # type: ignore[arg-type]
     if not draws or not fresh:

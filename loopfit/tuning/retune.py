@@ -121,9 +121,10 @@ def identified_from(
         return Identified(plant=source, how="given")
     if isinstance(source, Identified):
         return source
+    from loopfit.identify.protections import protected
     from loopfit.identify.source import identify_source
 
-    return identify_source(source, settings, confidence=confidence, reading=reading)
+    return protected(identify_source(source, settings, confidence=confidence, reading=reading))
 
 
 def retune_identified(
@@ -137,6 +138,8 @@ def retune_identified(
 ) -> Retuning:
     """Return new settings for a plant that has been identified; see `retune`."""
     plant = identified.plant
+    if identified.disc is not None:
+        goal = replace(goal, disc=identified.disc)
     present = None if settings is None else settings.gains
     findings = list(identified.findings)
     if present is not None and present.kp * plant.gain < 0:

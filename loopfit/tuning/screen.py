@@ -17,6 +17,7 @@ _CHUNK = 4_000
 _TINY = 1e-12
 _GRID_SLACK = 1.003  # the grid can miss a peak by about that
 _FINE = 2_000
+_DISTANCE = 0.4  # of any plant in the disc from the limit of stability
 
 
 def noise_scale(plant: Plant) -> float:
@@ -97,11 +98,22 @@ def stable_of(plant: Plant, goal: Goal, gains: Array, filter_s: float) -> NDArra
     return out
 
 
+def keeps_distance(plant: Plant, goal: Goal, knobs: Knobs, gains: Array) -> NDArray[np.bool_]:
+    """Return for which settings (n, 3) every plant in the goal's disc keeps |1 + L| at least 0.4."""
+    if goal.disc is None:
+        return np.ones(gains.shape[0], dtype=bool)
+    s = 1j * goal.disc[0]
+    action = gains @ knobs.action(s).T
+    distance = np.abs(1.0 + action * plant_at(plant, s)) - np.abs(action) * goal.disc[1]
+    return np.asarray(distance.min(axis=1) >= _DISTANCE)
+
+
 def screened(plant: Plant, goal: Goal, knobs: Knobs, gains: Array) -> NDArray[np.intp]:
     """Return which settings (n, 3) are within the cheap limits and the sensitivity limit, best objective first."""
     index = np.flatnonzero(within_limits(plant, goal, gains, knobs.filter_s))
     if index.size == 0:
         return index
     index = index[sensitivity(plant, knobs, gains[index]) <= goal.max_sensitivity * _GRID_SLACK]
+    index = index[keeps_distance(plant, goal, knobs, gains[index])]
     worth = gains[index, 1] if goal.integral else gains[index, 0]
     return index[np.argsort(-worth, kind="stable")]

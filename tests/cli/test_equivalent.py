@@ -183,3 +183,14 @@ def test_help_loads_no_numbers() -> None:
         "assert not {'numpy', 'scipy', 'matplotlib', 'control'} & set(sys.modules), sorted(sys.modules)"
     )
     subprocess.run([sys.executable, "-c", code], check=True)
+
+
+def test_loop_of_a_case_has_its_equivalent() -> None:
+    """The ringing spray pressure: its damping as `analyze` finds it from the record, within the two intervals' reach."""
+    root = Path(__file__).resolve().parents[2]
+    result = CliRunner().invoke(app, ["equivalent", str(root / "cases" / "spray-pressure.toml"), "--json"])
+    assert result.exit_code == 0, result.output
+    document = json.loads(result.stdout)
+    chosen = next(one for one in document["equivalents"] if one["method"] == document["chosen"])
+    assert chosen["damping_ratio"] == pytest.approx(0.136, abs=0.03)
+    assert document["adequate"] is True

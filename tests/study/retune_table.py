@@ -141,7 +141,7 @@ def _times(items: Sequence[Item]) -> list[str]:
     rows += [(f"nominal, {d:g} {t}", [s.seconds for s in swept if (s.damping, s.terms) == (d, t)]) for d, t in TARGETS]
     rows += [(f"90 %, forecast, {d:g} {t}", [o.seconds for o in asked if (o.damping, o.terms) == (d, t)]) for d, t in TARGETS]
     whole = {item.number: item.seconds for item in known}
-    rows.append(("whole, without reading", [whole[o.number] + o.seconds for o in asked]))
+    rows.append(("whole, without reading", [whole[o.number] + o.seconds for o in asked if o.number in whole]))
     lines = ["", "Processor time, s", f"{'':<40}{'n':>6}{'median':>9}{'p90':>9}{'most':>9}"]
     for name, seconds in rows:
         if seconds:

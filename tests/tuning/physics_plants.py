@@ -159,7 +159,7 @@ def _reactor(x: Array, v: float) -> Array:
 
 def _servo(x: Array, v: float) -> Array:
     """Current, speed, gear lag and angle of a drive with viscous friction; the input is a voltage."""
-    current, speed, out, angle = x
+    current, speed, out, _ = x
     return np.array([
         (v - 1.2 * current - 0.08 * speed) / 0.004,
         (0.08 * current - 2e-4 * speed) / 3e-4,
@@ -216,7 +216,7 @@ SMOOTH = [
     Physics(name="exchanger with transport", motion=_exchanger, see=lambda x: float(x[5]), guess=(30.0,) * 12, level=50.0,
             scan_s=0.5, step_out=8.0, step_set=2.0, noise=0.03, transport_s=6.0, substeps=2),
     Physics(name="stirred reactor", motion=_reactor, see=lambda x: float(x[1]), guess=(0.5, 350.0, 345.0), level=60.0,
-            scan_s=10.0, step_out=4.0, step_set=3.0, noise=0.05),
+            scan_s=4.0, step_out=4.0, step_set=3.0, noise=0.05),
     Physics(name="servo with a gear lag", motion=_servo, see=_last, guess=(0.0,) * 4, level=0.0, scan_s=0.002,
             step_out=2.0, step_set=0.5, noise=0.002, integrating=True, substeps=2),
     Physics(name="heated rod", motion=_rod, see=lambda x: float(x[8]), guess=(20.0,) * 16, level=40.0, scan_s=1.5,
