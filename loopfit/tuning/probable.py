@@ -18,8 +18,9 @@ from loopfit.loop.gains import Gains
 from loopfit.loop.plant import Plant
 from loopfit.loop.sampled import sampled_swing
 from loopfit.loop.visible import Swing, swing_of
-from loopfit.tuning.design import Also, Designed, Search, design
+from loopfit.tuning.design import Designed, design
 from loopfit.tuning.goal import Goal
+from loopfit.tuning.search import Also, Search
 
 _BEYOND = 0.4  # of the share that may fail, demanded of the draws: 94 % for 90 %
 _APART = 0.985  # worth of the next setting that is tried

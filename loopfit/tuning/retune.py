@@ -17,12 +17,12 @@ from loopfit.loop.settings import Settings
 from loopfit.loop.visible import Swing, damping_with_overshoot
 from loopfit.model.transfer import Transfer
 from loopfit.tuning.cautions import cautions
-from loopfit.tuning.design import Also
 from loopfit.tuning.entered import entered
 from loopfit.tuning.forecast import forecast, step_figures
 from loopfit.tuning.goal import Goal, Terms
 from loopfit.tuning.probable import Draws, Probable, probable
 from loopfit.tuning.result import Move, Retuning, Side
+from loopfit.tuning.search import Also
 from loopfit.tuning.typed_settings import about_typed, typed_of
 from loopfit.tuning.way import way
 

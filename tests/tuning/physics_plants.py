@@ -143,7 +143,9 @@ def _exchanger(x: Array, v: float) -> Array:
     cold, wall = x[:6], x[6:]
     into = np.concatenate([[15.0], cold[:-1]])
     hot = 80.0 - 0.4 * np.arange(5, -1, -1) * (100.0 - v) / 50.0
-    return np.concatenate([(into - cold) / 2.0 + 0.25 * (wall - cold), 0.12 * (hot - wall) * (v / 50.0) - 0.2 * (wall - cold)])
+    return np.concatenate(
+        [(into - cold) / 2.0 + 0.25 * (wall - cold), 0.12 * (hot - wall) * (v / 50.0) - 0.2 * (wall - cold)]
+    )
 
 
 def _reactor(x: Array, v: float) -> Array:

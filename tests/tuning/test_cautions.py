@@ -157,7 +157,9 @@ def test_derivative_noise_is_said_with_the_derivative_only() -> None:
     with_derivative = Gains(kp=1.5, ki=0.1, kd=1.5, filter_s=0.5)
     # kp + kd / Tf = 4.5 against 1.5, by hand
     assert said(truths(LAG, CALM, with_derivative), "derivative passes", "by 4.5", "present settings 1.5")
-    scanned = said(truths(LAG, CALM, with_derivative, scan_s=0.1, noise=0.2), "derivative passes", "standard deviations")
+    scanned = said(
+        truths(LAG, CALM, with_derivative, scan_s=0.1, noise=0.2), "derivative passes", "standard deviations"
+    )
     assert scanned is not None
     # by hand: b = 1.5 / 0.6 = 2.5, a = 0.5 / 0.6; 4^2 + 6.25 (1 / 11) = 16.57, its root 4.07, times 0.2 = 0.814
     assert "by 0.814" in scanned
@@ -172,7 +174,12 @@ def test_a_long_scan_interval_is_said() -> None:
 
 
 def test_dead_time_that_dominates() -> None:
-    assert said(truths(Plant(gain=1.0, time_constants_s=(2.0,), dead_time_s=3.0), None, Gains(kp=0.2, ki=0.1)), "Dead time", "3 s", "2 s")
+    assert said(
+        truths(Plant(gain=1.0, time_constants_s=(2.0,), dead_time_s=3.0), None, Gains(kp=0.2, ki=0.1)),
+        "Dead time",
+        "3 s",
+        "2 s",
+    )
     assert said(truths(LAG, None, CALM), "Dead time") is None
     assert said(truths(Plant(gain=1.0, integrating=True, dead_time_s=3.0), None, Gains(kp=0.1)), "Dead time") is None
 

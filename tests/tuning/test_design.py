@@ -16,8 +16,9 @@ from loopfit.loop.plant import Plant
 from loopfit.loop.sampled import sampled_swing
 from loopfit.loop.visible import swing_of
 from loopfit.tuning import family
-from loopfit.tuning.design import Search, counted_damping, design
+from loopfit.tuning.design import design
 from loopfit.tuning.goal import Goal
+from loopfit.tuning.search import Search, counted_damping
 
 PLANTS = [
     Plant(gain=2.0, time_constants_s=(8.0, 3.0), dead_time_s=1.5),

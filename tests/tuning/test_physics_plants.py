@@ -8,7 +8,6 @@ from __future__ import annotations
 
 import functools
 import math
-import time
 from collections.abc import Iterator
 from dataclasses import dataclass
 
@@ -99,7 +98,7 @@ def judged(plant: Physics, gains: Gains) -> Seen:
 def present_of(plant: Physics, start: str, derivative: bool) -> loopfit.Settings:
     """Return badly tuned settings: ringing, or sluggish; common practice from the ultimate gain and period."""
     ultimate, period = plant.ultimate
-    share, ti = (0.4, 0.9 * period) if start == "ringing" else (0.12, 2.0 * period)
+    share, ti = (0.4, 0.6 * period) if start == "ringing" else (0.12, 2.0 * period)
     while True:
         kp = share * ultimate
         td = 0.12 * period if derivative else None
@@ -128,7 +127,11 @@ def record_of(plant: Physics, kind: str, settings: loopfit.Settings, seed: int) 
             settled = _settled(answer - answer[-1])
     else:
         answer, _ = plant.run(_LONG, _of(settings), setpoint=plant.step_set, rounded=False)
-        settled = _settled(answer - answer[-1]) if not (plant.stick or plant.play) else 20.0 * plant.ultimate[1] / plant.scan_s
+        settled = (
+            _settled(answer - answer[-1])
+            if not (plant.stick or plant.play)
+            else 20.0 * plant.ultimate[1] / plant.scan_s
+        )
     scans = _BEFORE + min(max(round(1.3 * settled), 200), _LONG)
     on = np.where(np.arange(scans) < _BEFORE, 0.0, 1.0)
     noise = plant.noise * np.random.default_rng(seed).standard_normal(scans)
@@ -166,3 +169,81 @@ def rounds(plants: list[Physics]) -> Iterator[Round]:
             for start in ("ringing", "sluggish"):
                 for terms in ("PI", "PID"):
                     yield retuned(plant, kind, start, terms)
+
+
+def good(one: Round) -> bool:
+    """Tell whether a proposal that was said to meet the target is well damped and overshoots as predicted."""
+    assert one.after is not None
+    return one.after.damping >= WELL and abs(one.after.overshoot - one.predicted) <= POINTS
+
+
+def worse(one: Round) -> bool:
+    """Tell whether a retuning made a loop worse: less damped than before, and not well damped either."""
+    return one.after is not None and one.after.damping < min(one.before.damping, WELL) - 0.02
+
+
+BY_NAME = {plant.name: plant for plant in SMOOTH}
+
+
+@pytest.mark.parametrize(
+    ("name", "kind", "start", "terms"),
+    [
+        ("two tanks", "closed", "ringing", "PI"),
+        ("two tanks", "open", "sluggish", "PID"),
+        ("exchanger with transport", "open", "ringing", "PID"),
+        ("heated rod", "closed", "ringing", "PI"),
+        ("eight mixers", "open", "sluggish", "PI"),
+    ],
+)
+def test_one_round(name: str, kind: str, start: str, terms: str) -> None:
+    one = retuned(BY_NAME[name], kind, start, terms)
+    assert one.found is not None, one.refused
+    assert one.found.met, one.words
+    assert good(one), one.words
+    assert not worse(one), one.words
+
+
+@pytest.mark.xfail(strict=True, reason="the resonance is not looked for yet: every design on it is unstable")
+@pytest.mark.parametrize("kind", ["open", "closed"])
+def test_two_masses_on_a_shaft(kind: str) -> None:
+    """A resonance beyond the model's two lags: never made worse, and never said to be met where it is not."""
+    one = retuned(SHAFT, kind, "sluggish", "PI")
+    assert not worse(one), one.words
+    assert one.found is not None, one.refused
+    assert not one.found.met or good(one), one.words
+
+
+@pytest.mark.xfail(strict=True, reason="sticking and lost motion are not looked for yet")
+@pytest.mark.parametrize("plant", [STICKING, PLAY], ids=lambda plant: plant.name)
+@pytest.mark.parametrize("start", ["ringing", "sluggish"])
+def test_valves_that_stick_or_play_are_refused(plant: Physics, start: str) -> None:
+    one = retuned(plant, "closed", start, "PI")
+    assert one.after is None, one.words
+    assert "stick" in one.refused or "lost motion" in one.refused, one.refused
+
+
+def test_rest_and_small_signals_of_a_plant() -> None:
+    """Eight equal lags of 3 s and gain 0.6: the ultimate period is 2 pi 3 / tan(pi / 8), the gain sec(pi / 8)^8 / 0.6.
+
+    Textbook: each lag turns by 22.5 degrees. The held output adds half a scan of dead time: 0.25 s of about 45.5.
+    """
+    gain, period = BY_NAME["eight mixers"].ultimate
+    assert BY_NAME["eight mixers"].rest == pytest.approx(24.0, rel=1e-6)
+    assert period == pytest.approx(2.0 * math.pi * 3.0 / math.tan(math.pi / 8.0), rel=0.02)
+    assert gain == pytest.approx(1.0 / math.cos(math.pi / 8.0) ** 8 / 0.6, rel=0.03)
+
+
+@pytest.mark.study
+def test_smooth_plants() -> None:
+    """One round from every record: 95 % good where said to be met, none made worse."""
+    done = list(rounds(SMOOTH))
+    print()
+    for one in done:
+        print(("" if one.after is None or good(one) else "NOT GOOD ") + one.words)
+    proposed = [one for one in done if one.found is not None and one.after is not None]
+    met = [one for one in proposed if one.found is not None and one.found.met]
+    bad = [one.words for one in met if not good(one)]
+    print(f"{len(done)} records, {len(proposed)} proposals, {len(met)} met, {len(met) - len(bad)} good")
+    assert not [one.words for one in proposed if worse(one)]
+    assert len(bad) <= (1.0 - SHARE) * len(met), bad
+    assert len(proposed) >= SHARE * len(done)

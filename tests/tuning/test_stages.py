@@ -105,7 +105,9 @@ def test_no_stage_and_nothing_between_is_unstable(plant: Plant, present: Gains, 
 @pytest.mark.parametrize(("plant", "present", "proposed"), PAIRS)
 def test_no_stage_changes_a_gain_or_time_much_more_than_twofold(plant: Plant, present: Gains, proposed: Gains) -> None:
     staged = stages(plant, present, proposed)
-    whole = max(abs(math.log(y / x)) for x, y in zip(settings_of(present), settings_of(proposed), strict=True) if x and y)
+    whole = max(
+        abs(math.log(y / x)) for x, y in zip(settings_of(present), settings_of(proposed), strict=True) if x and y
+    )
     # where five stages are too few, and in the lattice, a stage may take two fifths of the whole
     most = max(math.log(2.0), 0.4 * whole) + 1e-9
     points = [present, *(stage.gains for stage in staged.stages)]
@@ -231,7 +233,9 @@ def test_a_gain_of_the_opposite_sign_has_no_gradual_way() -> None:
 
 def test_a_way_that_cannot_but_dip_says_so() -> None:
     # only the derivative moves, and the damping between the ends is worse than at both (found by search)
-    plant = Plant(gain=1.0, damping_ratio=0.9145095984701521, natural_frequency_rad_s=1.0, dead_time_s=1.3343389343208196)
+    plant = Plant(
+        gain=1.0, damping_ratio=0.9145095984701521, natural_frequency_rad_s=1.0, dead_time_s=1.3343389343208196
+    )
     present = Gains(kp=0.3538649147711413, ki=0.05353222756192466, kd=0.4838438041910398, filter_s=0.07003016802962458)
     proposed = replace(present, kd=1.9318354660484096 * present.kd)
     staged = stages(plant, present, proposed)
@@ -246,7 +250,9 @@ def test_a_way_that_cannot_but_dip_says_so() -> None:
 
 def test_the_lattice_finds_a_way_that_the_plain_paths_miss() -> None:
     # found by search: geometric, straight and straight in the times dip, one gain after the other does not
-    plant = Plant(gain=1.0, damping_ratio=3.128422168353202, natural_frequency_rad_s=1.0, dead_time_s=0.7280655390755237)
+    plant = Plant(
+        gain=1.0, damping_ratio=3.128422168353202, natural_frequency_rad_s=1.0, dead_time_s=0.7280655390755237
+    )
     staged = stages(plant, Gains(kp=0.11484292, ki=0.05608368), Gains(kp=2.3758253, ki=0.66931617))
     share = [
         (math.log(stage.gains.kp / 0.11484292) / math.log(2.3758253 / 0.11484292),
