@@ -6,18 +6,17 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from functools import partial
-from typing import Literal
 
 import numpy as np
 
 from loopfit.analysis.analyze import analyze_record
 from loopfit.analysis.result import Analysis
-from loopfit.core.arrays import Array
 from loopfit.core.errors import RecordError
 from loopfit.core.finding import Finding
-from loopfit.identify.gaps import gaps_in, without_gaps
+from loopfit.identify.gaps import without_gaps
 from loopfit.identify.identified import Identified
-from loopfit.identify.output_to_measurement import fitted, load_fitted, noise_and_floor, trace_of, without_wild_rows
+from loopfit.identify.load_step import load_fitted
+from loopfit.identify.output_to_measurement import fitted, noise_and_floor, trace_of, without_wild_rows
 from loopfit.identify.plants import plant_of
 from loopfit.identify.posterior import draws_of
 from loopfit.identify.refusals import (
@@ -33,23 +32,17 @@ from loopfit.identify.refusals import (
     wild_rows,
 )
 from loopfit.identify.through_loop import Rows, through_loop
+from loopfit.identify.way import SLOWER, setpoint_steps, way_of
 from loopfit.loop.plant import Plant
 from loopfit.loop.settings import Settings
-from loopfit.record.record import Record
-from loopfit.step.detect import find_steps
+from loopfit.record.record import Record, Signal
 
 _SEED = 60351
-_FEW = 20  # changes of an output that a person makes by hand
-_HELD = 2.0  # noise levels of an output that rests between its moves
-_APART = 3  # rows within which changes are one
-_ALIKE = 0.9  # of the rows in which a setpoint that follows the measurement equals it
-_SLOWER = 1.5  # scans in a row from which the output was not seen at the scan rate
 _EVERY = 0.9
 _FEWEST_ROWS = 30
 _WHOLE = 0.02
 _OFF_REST = 5.0  # standard errors
 
-Way = Literal["open step", "closed", "load", "through the loop"]
 DrawnBy = Callable[[int, np.random.Generator], list[Plant]]
 
 
@@ -105,9 +98,19 @@ def identify(
     analysis = record if isinstance(record, Analysis) else None
     rows = record.record if isinstance(record, Analysis) else record
     wanted = Wanted(draws=draws, fresh=fresh, seed=seed)
+    stated = analysis is not None and any(finding.code == "stated_step" for finding in analysis.findings)
+    if stated and analysis is not None and analysis.step is not None:
+        if analysis.step.signal == "output":
+            return _open_step(analysis, settings, confidence, wanted)
+        levels = np.where(rows.time >= analysis.step.time_s, analysis.step.to, analysis.step.from_)
+        rows = replace(rows, setpoint=Signal(name="stated step", unit=None, values=levels))
     way = way_of(rows, settings)
     if way == "open step":
-        return _open_step(analyze_record(rows) if analysis is None else analysis, settings, confidence, wanted)
+        if analysis is None or analysis.step is None or analysis.step.signal == "setpoint":
+            analysis = analyze_record(
+                replace(rows, setpoint=None)
+            )  # what follows the measurement in manual is no input
+        return _open_step(analysis, settings, confidence, wanted)
     rows, filled = without_gaps(rows)
     if rows.time.size < _FEWEST_ROWS:
         raise RecordError(
@@ -124,83 +127,6 @@ def identify(
     return replace(found, findings=(*found.findings, rows_filled(filled))) if filled else found
 
 
-def way_of(record: Record, settings: Settings | None) -> Way:
-    """Return the way in which a record tells its plant.
-
-    Raises
-    ------
-    RecordError
-        If there is none.
-    """
-    stepped = _setpoint_steps(record) is not None
-    output = None if record.output is None else record.output.values
-    if output is None:
-        if not stepped:
-            raise RecordError(
-                record.source,
-                "nothing that moves the plant was recorded: record the controller's output, or step the setpoint in automatic "
-                "and give the controller's settings",
-            )
-        if settings is None:
-            raise RecordError(
-                record.source,
-                "a closed-loop record without the controller's output tells the plant only with the settings of the "
-                "controller during the record: give them, or record the output at every scan",
-            )
-        _check_even(record)
-        return "through the loop"
-    if np.ptp(output) == 0.0:
-        raise RecordError(
-            record.source,
-            "the output is the same in every row: "
-            + ("the setpoint steps, but the controller is in manual" if stepped else "nothing was moved")
-            + ", or the wrong column was taken (choose with --output); step the output in manual, or the setpoint in "
-            "automatic",
-            column=None if record.output is None else record.output.name,
-        )
-    if not stepped and _by_hand(record.time, output):
-        return "open step"
-    _check_even(record)
-    scan = None if settings is None else settings.scan_s
-    if scan is not None and stepped and record.sample_interval_s > _SLOWER * scan:
-        return "through the loop"
-    return "closed" if stepped else "load"
-
-
-def _check_even(record: Record) -> None:
-    if gaps_in(record) is None:
-        raise RecordError(
-            record.source,
-            "the rows are at uneven times, so that the output between them is not known: log at even times, best at every scan",
-        )
-
-
-def _setpoint_steps(record: Record) -> float | None:
-    """Return where the setpoint steps first, s; None where it does not, or merely follows the measurement in manual."""
-    if record.setpoint is None:
-        return None
-    values = record.setpoint.values
-    span = float(np.ptp(record.measurement.values))
-    if np.mean(np.abs(values - record.measurement.values) <= 1e-9 * span) > _ALIKE:
-        return None
-    found = find_steps(record.time, values, "setpoint")
-    if found.steps:
-        return found.steps[0].time_s
-    moves = np.flatnonzero(np.diff(values))
-    return float(record.time[moves[0] + 1]) if found.always_moving and moves.size else None
-
-
-def _by_hand(time: Array, output: Array) -> bool:
-    """Tell whether an output is held between a few moves: the controller is in manual."""
-    found = find_steps(time, output, "output")
-    if not found.steps:
-        return False
-    if found.noise == 0.0:
-        return 1 + int(np.sum(np.diff(found.rows) > _APART)) <= _FEW
-    held = np.concatenate([part - part.mean() for part in np.split(output, found.rows)])  # its sensor is noisy
-    return float(np.std(held)) < _HELD * found.noise
-
-
 def _open_step(analysis: Analysis, settings: Settings | None, confidence: float, wanted: Wanted) -> Identified:
     if analysis.step is None or analysis.fit.columns.input is None:
         raise RecordError(analysis.record.source, "a release tells no gain: step the output in manual and record it")
@@ -215,7 +141,7 @@ def _open_step(analysis: Analysis, settings: Settings | None, confidence: float,
 
 
 def _closed(record: Record, settings: Settings | None, confidence: float, wanted: Wanted) -> Identified:
-    begins = _setpoint_steps(record)
+    begins = setpoint_steps(record)
     assert begins is not None
     trace = trace_of(record, begins)
     fit = fitted(trace)
@@ -297,7 +223,7 @@ def _about_rate(record: Record, settings: Settings | None) -> list[Finding]:
     """Return what must be said of how often the output was recorded."""
     assert record.output is not None
     if settings is not None and settings.scan_s is not None:
-        return [slower_than_scan()] if record.sample_interval_s > _SLOWER * settings.scan_s else []
+        return [slower_than_scan()] if record.sample_interval_s > SLOWER * settings.scan_s else []
     return [once_a_row()] if np.mean(np.diff(record.output.values) != 0.0) > _EVERY else []
 
 

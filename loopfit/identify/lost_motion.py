@@ -19,12 +19,13 @@ MOST_STRUCTURE = 0.03  # of the measurement's range: more is no linear plant
 _LOOKED_AT = 0.01  # the same, from which lost motion and sticking are tried
 _EXPLAINED = 0.75  # rms with such an element over without, below which it is taken to be there
 _NOISE_AGAIN = 4.0  # times the noise: what a deadband leaves once it is modelled; sticking leaves more
-_ALL = 0.15  # the same as a ratio
+_FAR_BETTER = 0.5  # times what sticking leaves: lost motion for sure
 _FARTHEST = 3.0  # natural logarithm of what width, lags and dead time may change by
 _MOST_OVER_NOISE = 10.0
 _WIDTHS = np.concatenate((np.geomspace(0.01, 0.1, 6), np.linspace(0.13, 0.9, 14)))  # of the output's range
 _JUMPS = (0.0, 0.5, 1.0)  # lost motion, and two that stick
 _STARTS = 1  # widths that are polished for each
+_ROUNDS = 4
 _TIMES_WIDTH = 3.0  # smallest step of the staircase in widths of the lost motion
 
 Cause = Literal["deadband", "sticking", "not linear"]
@@ -35,8 +36,8 @@ class LostMotion:
     """What is left of a linear model, and what explains it.
 
     `structure`: what is left beyond noise, of the measurement's range; `over_noise`: rms left over that of the noise;
-    `ratio`: rms left with lost motion or sticking of `width` (output units, full width) over that without; `cause` and `text` None where
-    a linear model will do.
+    `ratio`: rms left with lost motion or sticking of `width` (output units, full width) over that without; `cause` and
+    `text` None where a linear model will do.
     """
 
     structure: float
@@ -71,7 +72,7 @@ def lost_motion_of(
     The noise is that of second differences of the measurement, and at least that of its rounding. Refused: structure
     above 3 % of the range; above 1 % where lost motion or sticking brings the rms under 0.75 of itself, or where the rms
     is over 10 times the noise. The best of the elements names the cause:
-    lost motion where it leaves little more than noise, else sticking. A single open step is blind to both (the element moves one way only): ask for `staircase_test`.
+    lost motion where it leaves little more than noise or far less than sticking does, else sticking. A single open step is blind to both (the element moves one way only): ask for `staircase_test`.
     """
     t, u, y, left = (np.asarray(column, dtype=np.float64) for column in (time, output, measurement, residual))
     span = float(np.ptp(y))
@@ -79,14 +80,17 @@ def lost_motion_of(
     noise = max(noise_rms(y), resolution(y) / math.sqrt(12.0))
     structure = math.sqrt(max(rms**2 - noise**2, 0.0)) / span if span > 0.0 else 0.0
     over = rms / noise if noise > 0.0 else math.inf if rms > 0.0 else 0.0
-    width, ratio, jump = 0.0, 1.0, 0.0
+    width, ratio, lost = 0.0, 1.0, False
     if structure > _LOOKED_AT:
-        left_rms, width, jump = min((*_best(jump, plain, t, u, y), jump) for jump in _JUMPS)
+        play, *sticks = (_best(jump, plain, t, u, y) for jump in _JUMPS)
+        stick = min(sticks)
+        left_rms, width = min(play, stick)
         ratio = left_rms / rms
+        lost = play <= stick and (left_rms < _NOISE_AGAIN * noise or left_rms < _FAR_BETTER * stick[0])
     explained = structure > _LOOKED_AT and ratio < _EXPLAINED
     if not (explained or structure > MOST_STRUCTURE or (over > _MOST_OVER_NOISE and structure > _LOOKED_AT)):
         return LostMotion(structure=structure, over_noise=over, width=width, ratio=ratio, cause=None, text=None)
-    cause: Cause = "not linear" if not explained else "deadband" if jump == 0.0 and (ratio * over < _NOISE_AGAIN or ratio < _ALL) else "sticking"
+    cause: Cause = "not linear" if not explained else "deadband" if lost else "sticking"
     text = f"{_WHY[cause].format(structure=100.0 * structure, width=width)}; {staircase_test(plain, u, width)}"
     return LostMotion(structure=structure, over_noise=over, width=width, ratio=ratio, cause=cause, text=text)
 
@@ -189,8 +193,13 @@ def _polished(
 
     order = 4 if two else 3
     simplex = np.vstack((np.zeros(order), np.diag([0.25, 0.7, -0.4, 0.4][:order])))
-    found = minimize(left, np.zeros(order), method="Nelder-Mead", options={"maxfev": 160, "initial_simplex": simplex})
-    return float(found.fun), width * math.exp(float(found.x[0]))
+    at, rms = np.zeros(order), math.inf
+    for _ in range(_ROUNDS):  # a simplex that has shrunk too early is spread again
+        found = minimize(left, at, method="Nelder-Mead", options={"maxfev": 160, "initial_simplex": at + simplex})
+        at, gained, rms = found.x, rms - float(found.fun), float(found.fun)
+        if gained < 0.05 * rms:
+            break
+    return rms, width * math.exp(float(at[0]))
 
 
 def _stretched(transfer: Transfer, by: float, dead_time_s: float) -> Transfer:

@@ -20,6 +20,7 @@ from loopfit.loop.plant import Plant
 from loopfit.loop.simulate import simulate
 from loopfit.record.record import Record
 
+HELD_BACK = 1.3  # maximum sensitivity that a plant may be designed for whose fast part was not recorded
 _FEWEST_ROWS = 60
 
 
@@ -29,9 +30,16 @@ def protected(found: Identified) -> Identified:
     Parameters
     ----------
     found : Identified
-        From the recorded output to the measurement; others are returned as they are.
+        From the recorded output to the measurement, or through the loop; others are returned as they are.
     """
     record = found.record
+    if found.how == "through the loop" and found.refused is None:
+        text = (
+            f"The plant was fitted without the output of every scan: the design keeps the sensitivity at most {HELD_BACK:g}, "
+            "since the record cannot show what the plant does at a faster pace than the present loop's."
+        )
+        finding = Finding(code="held_back", severity="note", text=text)
+        return replace(found, most_sensitivity=HELD_BACK, findings=(*found.findings, finding))
     if found.how != "output to measurement" or found.refused is not None or record is None or record.output is None:
         return found
     if record.time.size < _FEWEST_ROWS or even_grid(record.time) is None:

@@ -141,6 +141,9 @@ def _acting(
         rows = _rows(setpoint, measurement, output, free, every, rows_a_scan, phase, lag)
         if rows is not None:
             tried[lag] = (rows, *_best_filter(rows, hint_s))
+    tried = {
+        lag: found for lag, found in tried.items() if float(np.ptp(found[0].within(found[0].output[:, None]))) > 0.0
+    }
     if not tried:
         return "too few rows in a row with the output off its limits"
     floor = _rounding(output) ** 2 / 50.0

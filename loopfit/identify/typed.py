@@ -24,7 +24,7 @@ _THINNED = 1.5  # rows further apart than this many scans
 _THINNED_DOUBT = 0.05  # of a gain then
 _NOISY_DOUBT = 0.06  # of a gain, where what is left is more than rounding
 _UNLIKE_DOUBT = 0.25  # of a gain, where what is left is neither rounding nor noise
-_UNFILTERED = 0.25  # scans: a derivative filter as short as this is none
+_UNFILTERED = 0.12  # scans: a derivative filter as short as this is none
 _UNMOVED = 0.01  # of the output's standard deviation: an action as small as this is none
 
 Verdict = Literal["agree", "differ", "cannot be checked"]
@@ -79,7 +79,6 @@ def check_typed(
     if isinstance(acting, str):
         return _not_checked(f"the typed settings cannot be checked: {acting}")
     every = float(np.median(np.diff(t)))
-
     if not acting.r_squared > _LEAST_R_SQUARED:
         thinned = settings.scan_s is not None and every > _THINNED * settings.scan_s
         why = (
@@ -103,6 +102,8 @@ def check_typed(
         text = (
             f"the recorded output does not obey the typed settings: {'; '.join(differences(settings, acting, differs))}"
         )
+        if (within := _known_within(acting)) > _ALLOWED:
+            text += f"; gains known to within {100.0 * within:.2g} %"
         return _checked(acting, "differ", text, found)
     unknown = [name for name in ("kp", "ki", "kd") if standing[name] == "unknown"]
     if unknown:
@@ -145,7 +146,9 @@ def _doubted(acting: Acting, typed: Gains, settings: Settings, every: float) -> 
     """
     values = acting.values
     thinned = not acting.held and settings.scan_s is not None and every > _THINNED * settings.scan_s
-    unlike = acting.derivative and (values["kd"] * values["kp"] <= 0.0 or values["filter_s"] < _UNFILTERED * acting.scan_s)
+    unlike = acting.derivative and (
+        values["kd"] * values["kp"] <= 0.0 or values["filter_s"] < _UNFILTERED * acting.scan_s
+    )
     if unlike and values["kd"] * typed.kd < 0.0 and values["kp"] * typed.kp < 0.0:  # the whole sign is wrong
         unlike = values["kd"] * values["kp"] <= 0.0
     typed_alike = typed.kd * typed.kp < 0.0 or 0.0 < typed.filter_s < 2.0 * _UNFILTERED * acting.scan_s
@@ -174,7 +177,7 @@ def _standing(acting: Acting, typed: Gains, settings: Settings) -> dict[str, Sta
         allowed = _ALLOWED * max(abs(want), abs(got)) if want != 0.0 else nothing
         largest = max(abs(want), abs(got))
         out[name] = _judged(
-            abs(got - want), allowed, band, band <= _CERTAIN * largest or (want == 0.0 and band <= nothing)
+            abs(got - want), allowed, band, band <= _CERTAIN * largest or (want == 0.0 and band <= 5.0 * nothing)
         )
     out["filter_s"] = out["setpoint_weight"] = out["on_error"] = "unknown"
     if typed.kd != 0.0 and acting.derivative:
@@ -187,7 +190,10 @@ def _standing(acting: Acting, typed: Gains, settings: Settings) -> dict[str, Sta
         off, band = abs(values["setpoint_weight"] - typed.setpoint_weight), doubt["setpoint_weight"]
         out["setpoint_weight"] = _judged(off, _ALLOWED_WEIGHT, band, band < _CERTAIN)
     if settings.scan_s is not None:
-        slower, faster = acting.scan_s > (1.0 + _ALLOWED) * settings.scan_s, acting.scan_s < (1.0 - _ALLOWED) * settings.scan_s
+        slower, faster = (
+            acting.scan_s > (1.0 + _ALLOWED) * settings.scan_s,
+            acting.scan_s < (1.0 - _ALLOWED) * settings.scan_s,
+        )
         # rows far apart alone may be a thinned record; a held output, or one that moves between the scans, is not
         out["scan_s"] = "differs" if (slower and acting.held) or (faster and acting.exact) else "agrees"
     return out
@@ -199,9 +205,14 @@ def _judged(off: float, allowed: float, band: float, certain: bool) -> Standing:
     return "agrees" if certain and off <= allowed + band else "unknown"
 
 
+def _known_within(acting: Acting) -> float:
+    """The widest relative band of the gains that act."""
+    acts = [name for name in ("kp", "ki", "kd") if abs(acting.values[name]) * acting.share[name] > _UNMOVED]
+    return max((acting.doubt[name] / abs(acting.values[name]) for name in acts), default=0.0)
+
+
 def _agreement(acting: Acting, typed: Gains, standing: dict[str, Standing]) -> str:
-    used = [name for name in ("kp", "ki", "kd") if getattr(typed, name) != 0.0]
-    within = max(max(acting.doubt[name] / abs(getattr(typed, name)) for name in used), _ALLOWED)
+    within = max(_known_within(acting), _ALLOWED)
     text = (
         f"the recorded output obeys the typed settings: gains within {100.0 * within:.2g} %, R^2 {acting.r_squared:.5f}"
     )
@@ -221,9 +232,12 @@ def _as_settings(acting: Acting, typed: Gains, settings: Settings, standing: dic
     kd = acting.values["kd"] if acting.derivative else typed.kd if standing["kd"] == "unknown" else 0.0
     filter_s = acting.values["filter_s"] if take["filter_s"] or typed.filter_s == 0.0 else typed.filter_s
     on_error = acting.values["on_error"] > 0.5 if take["on_error"] else typed.derivative_on_error
+    acts = {name: abs(acting.values[name]) * acting.share[name] > _UNMOVED for name in ("kp", "ki")}
+    if not any(acts.values()) and kd == 0.0:
+        return typed
     gains = Gains(
-        kp=acting.values["kp"] if typed.kp != 0.0 or standing["kp"] == "differs" else 0.0,
-        ki=acting.values["ki"] if typed.ki != 0.0 or standing["ki"] == "differs" else 0.0,
+        kp=acting.values["kp"] if acts["kp"] and (typed.kp != 0.0 or standing["kp"] == "differs") else 0.0,
+        ki=acting.values["ki"] if acts["ki"] and (typed.ki != 0.0 or standing["ki"] == "differs") else 0.0,
         kd=kd,
         filter_s=filter_s if kd != 0.0 else 0.0,
         setpoint_weight=acting.values["setpoint_weight"] if take["setpoint_weight"] else typed.setpoint_weight,

@@ -215,7 +215,11 @@ def _gain(settings: Settings, got: float, band: float) -> list[Named]:
     if abs(abs(got) - size) <= (0.05 + 2.0 * band) * max(abs(got), size):
         return phrases
     said = f"the gain that acts is {got:.4g}, not {typed:.4g}"
-    return [*phrases, _explained(said, abs(got), names, band, abs(got) / size)]
+    named = _explained(said, abs(got), names, band, abs(got) / size)
+    if math.isinf(named[1]) and settings.measurement_range is None:
+        spans = f", as in %/% where the span of the output over that of the measurement is {abs(got) / size:.3g}"
+        named = named[0] + spans, math.inf
+    return [*phrases, named]
 
 
 def _integral_names(settings: Settings, gain: float) -> Iterable[Named]:
@@ -249,6 +253,8 @@ def _integral_names(settings: Settings, gain: float) -> Iterable[Named]:
             )
         amount = settings.integral_time_s or 0.0
         yield "not tied to the gain: the parallel form for the typed one", gain * amount
+        if bare == "s" and not rate:
+            yield "seconds already, converted as if from minutes", amount / 60.0
     yield from ((f"{word} it", factor * amount) for factor, word in _FACTORS.items())
 
 
@@ -258,6 +264,8 @@ def _derivative_names(settings: Settings, gain: float) -> Iterable[Named]:
     if typed is None:
         return
     unit, gain, amount = settings.derivative_unit, abs(gain), abs(typed)
+    if unit == "s" and not parallel:
+        yield "seconds already, converted as if from minutes", amount / 60.0
     for one, seconds in SECONDS.items():
         factor = seconds / SECONDS[unit]
         if one != unit:

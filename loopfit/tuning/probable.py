@@ -14,6 +14,7 @@ import numpy as np
 
 from loopfit.core.arrays import Array
 from loopfit.core.errors import UsageError
+from loopfit.identify.protections import HELD_BACK
 from loopfit.loop.gains import Gains
 from loopfit.loop.plant import Plant
 from loopfit.loop.sampled import sampled_swing
@@ -25,7 +26,6 @@ from loopfit.tuning.search import Also, Search
 _BEYOND = 0.4  # of the share that may fail, demanded of the draws: 94 % for 90 %
 _APART = 0.985  # worth of the next setting that is tried
 _ROUNDS = 3
-_HELD_BACK = 1.3
 _LESS = (0.85, 0.65, 0.45, 0.25)
 
 
@@ -92,7 +92,7 @@ def probable(
         # two protections against what the record did not excite: the disc, or a lower sensitivity; whichever costs less
         by_disc = probable(plant, goal, draws, fresh, present=present, scan_s=scan_s, late=late, coupled=coupled, also=also,
                            disc=True)  # fmt: skip
-        calmer = replace(goal, disc=None, max_sensitivity=min(goal.max_sensitivity, _HELD_BACK))
+        calmer = replace(goal, disc=None, max_sensitivity=min(goal.max_sensitivity, HELD_BACK))
         held_back = probable(
             plant, calmer, draws, fresh, present=present, scan_s=scan_s, late=late, coupled=coupled, also=also
         )

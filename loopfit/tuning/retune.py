@@ -140,6 +140,8 @@ def retune_identified(
     plant = identified.plant
     if identified.disc is not None:
         goal = replace(goal, disc=identified.disc)
+    if identified.most_sensitivity is not None:
+        goal = replace(goal, max_sensitivity=min(goal.max_sensitivity, identified.most_sensitivity))
     present = None if settings is None else settings.gains
     findings = list(identified.findings)
     if present is not None and present.kp * plant.gain < 0:
