@@ -79,6 +79,8 @@ def retune_command(
         case = _case_of(records)
         settings = controls.settings_from(options, case)
         wanted = controls.target_from(options, case)
+        if case is not None and case.limits:
+            wanted["limits"] = case.limits
         how = reading.reading_of(options, case)
         sources = records if case is None else list(case.records)
         from loopfit.tuning.retune import retune
@@ -88,7 +90,7 @@ def retune_command(
             if json:
                 typer.echo(retuning.to_json())
             say(f"loopfit: {', '.join(sources)}: {retuning.refused or retuning.obstacle}")
-            raise typer.Exit(UNUSABLE_INPUT)
+            raise typer.Exit(UNUSABLE_INPUT if retuning.refused else ANSWER_IS_NO)
         if settings is not None and not quiet:
             for line in settings.in_words():
                 say(f"settings: {line}")

@@ -19,13 +19,16 @@ from loopfit.identify.load_step import load_fitted
 from loopfit.identify.output_to_measurement import fitted, noise_and_floor, trace_of, without_wild_rows
 from loopfit.identify.plants import plant_of
 from loopfit.identify.posterior import draws_of
+from loopfit.identify.protections import checked_by_levels, with_every_step
 from loopfit.identify.refusals import (
     about_gain,
     against_action,
     limits_left_out,
+    measurement_flat,
     no_output,
     not_at_rest,
     once_a_row,
+    outputs_at_limit,
     rows_filled,
     slower_than_scan,
     unstable,
@@ -36,6 +39,7 @@ from loopfit.identify.way import SLOWER, setpoint_steps, way_of
 from loopfit.loop.plant import Plant
 from loopfit.loop.settings import Settings
 from loopfit.record.record import Record, Signal
+from loopfit.step.limits import rows_at_limit
 
 _SEED = 60351
 _EVERY = 0.9
@@ -58,6 +62,10 @@ class Wanted:
         """Return two independent generators."""
         first, second = np.random.SeedSequence(self.seed).spawn(2)
         return np.random.default_rng(first), np.random.default_rng(second)
+
+    def another_rng(self) -> np.random.Generator:
+        """Return a third."""
+        return np.random.default_rng(np.random.SeedSequence(self.seed).spawn(3)[2])
 
 
 def identify(
@@ -124,17 +132,41 @@ def identify(
         found = _through(rows, settings, confidence, wanted)
     else:
         found = (_closed if way == "closed" else _load)(rows, settings, confidence, wanted)
-    return replace(found, findings=(*found.findings, rows_filled(filled))) if filled else found
+    findings = [*found.findings, *_noticed(rows, settings, way)]
+    if filled:
+        findings.append(rows_filled(filled))
+    return replace(found, findings=tuple(findings))
+
+
+def _noticed(record: Record, settings: Settings | None, way: str) -> list[Finding]:
+    """Return what reading warned of, and where measurement or output lay at the end of a range."""
+    findings = [finding for finding in record.findings if finding.severity != "note"]
+    values = record.measurement.values
+    flat = rows_at_limit(values)
+    if flat.size:
+        findings.append(measurement_flat(flat.size, float(values[flat[0]])))
+    if record.output is not None:
+        output = record.output.values
+        limits = None if settings is None else settings.output_limits
+        clamped = rows_at_limit(output)
+        if limits is not None and not clamped.size:
+            clamped = np.flatnonzero((output <= limits[0]) | (output >= limits[1]))
+        if clamped.size:
+            known = way != "through the loop" or limits is not None
+            findings.append(outputs_at_limit(clamped.size, float(output[clamped[0]]), placed=known))
+    return findings
 
 
 def _open_step(analysis: Analysis, settings: Settings | None, confidence: float, wanted: Wanted) -> Identified:
     if analysis.step is None or analysis.fit.columns.input is None:
         raise RecordError(analysis.record.source, "a release tells no gain: step the output in manual and record it")
     fit = analysis.fit
-    found = Identified(plant=plant_of(fit), how="open step", fit=fit, analysis=analysis)
+    warned = tuple(finding for finding in analysis.findings if finding.severity != "note")
+    found = Identified(plant=plant_of(fit), how="open step", fit=fit, analysis=analysis, findings=warned)
     if analysis.model is None:
         return replace(found, refused=analysis.refusal)
     found = _with_draws(found, partial(draws_of, fit), wanted, settings, confidence)
+    found = with_every_step(found, analysis, wanted.another_rng())
     if found.refused is None and not analysis.model.adequate:
         return replace(found, refused=f"The model does not stand for the plant: {analysis.model.reasons[0]}.")
     return found
@@ -172,7 +204,8 @@ def _through(record: Record, settings: Settings, confidence: float, wanted: Want
     found = Identified(plant=fit.plant, how="through the loop", findings=tuple(findings))
     rest = rows.values - rows.values.mean()
     explained = 1.0 - float(fit.residual @ fit.residual) / max(float(rest @ rest), 1e-300)
-    return _with_draws(found, fit.draws, wanted, settings, confidence, explained)
+    found = _with_draws(found, fit.draws, wanted, settings, confidence, explained)
+    return checked_by_levels(found, record, wanted.another_rng())
 
 
 def _rows(record: Record, settings: Settings) -> tuple[Rows, list[Finding]]:

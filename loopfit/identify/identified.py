@@ -23,7 +23,7 @@ class Identified:
 
     `draws` and `fresh`: plants that the record allows as well, in proportion to their probability, two independent
     sets (none for a plant that was given); `refused`: why no settings may be proposed, in one sentence, or None;
-    `disc`: (2, n) frequency, rad/s, and relative uncertainty of the plant there, or None;
+    `disc`: (2, n) frequency, rad/s, and how far the plant may be from its model there, in its own unit, or None;
     `most_sensitivity`: limit of the sensitivity that a design must keep because of what the record cannot show, or None;
     `record`: what was read, None for a plant that was given or told by several records.
     """

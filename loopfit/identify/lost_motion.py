@@ -16,8 +16,9 @@ from loopfit.model.transfer import Transfer, transfer_of
 from loopfit.step.noise import noise_rms, resolution
 
 MOST_STRUCTURE = 0.03  # of the measurement's range: more is no linear plant
-_LOOKED_AT = 0.01  # the same, from which lost motion and sticking are tried
-_EXPLAINED = 0.75  # rms with such an element over without, below which it is taken to be there
+_HINT = 0.006  # the same, from which they are tried
+_LOOKED_AT = 0.01  # the same, from which a small part that such an element explains is enough
+_EXPLAINED, _PARTLY = 0.75, 0.9  # rms with such an element over without; of linear records never under 0.95
 _NOISE_AGAIN = 4.0  # times the noise: what a deadband leaves once it is modelled; sticking leaves more
 _FAR_BETTER = 0.5  # times what sticking leaves: lost motion for sure
 _FARTHEST = 3.0  # natural logarithm of what width, lags and dead time may change by
@@ -70,9 +71,10 @@ def lost_motion_of(
     Notes
     -----
     The noise is that of second differences of the measurement, and at least that of its rounding. Refused: structure
-    above 3 % of the range; above 1 % where lost motion or sticking brings the rms under 0.75 of itself, or where the rms
-    is over 10 times the noise. The best of the elements names the cause:
-    lost motion where it leaves little more than noise or far less than sticking does, else sticking. A single open step is blind to both (the element moves one way only): ask for `staircase_test`.
+    above 3 % of the range; above 1 % where lost motion or sticking brings the rms under 0.9 of itself, or where the rms
+    is over 10 times the noise; above 0.6 % where it brings the rms under 0.75. The best of the elements names the
+    cause: lost motion where it leaves little more than noise or far less than sticking does, else sticking. A single
+    open step is blind to both (the element moves one way only): ask for `staircase_test`.
     """
     t, u, y, left = (np.asarray(column, dtype=np.float64) for column in (time, output, measurement, residual))
     span = float(np.ptp(y))
@@ -81,13 +83,13 @@ def lost_motion_of(
     structure = math.sqrt(max(rms**2 - noise**2, 0.0)) / span if span > 0.0 else 0.0
     over = rms / noise if noise > 0.0 else math.inf if rms > 0.0 else 0.0
     width, ratio, lost = 0.0, 1.0, False
-    if structure > _LOOKED_AT:
+    if structure > _HINT:
         play, *sticks = (_best(jump, plain, t, u, y) for jump in _JUMPS)
         stick = min(sticks)
         left_rms, width = min(play, stick)
         ratio = left_rms / rms
         lost = play <= stick and (left_rms < _NOISE_AGAIN * noise or left_rms < _FAR_BETTER * stick[0])
-    explained = structure > _LOOKED_AT and ratio < _EXPLAINED
+    explained = ratio < (_PARTLY if structure > _LOOKED_AT else _EXPLAINED)
     if not (explained or structure > MOST_STRUCTURE or (over > _MOST_OVER_NOISE and structure > _LOOKED_AT)):
         return LostMotion(structure=structure, over_noise=over, width=width, ratio=ratio, cause=None, text=None)
     cause: Cause = "not linear" if not explained else "deadband" if lost else "sticking"

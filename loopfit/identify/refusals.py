@@ -125,6 +125,61 @@ def once_a_row() -> Finding:
     return Finding(
         code="output_once_a_row",
         severity="note",
-        text="The output changes at every row, and is taken to be written once a row; state the scan interval if the controller "
-        "is faster.",
+        text="No scan interval was given: the controller is taken as continuous, and the recorded output as held from row to row. "
+        "State the scan interval if the output moves between the rows.",
     )
+
+
+def outputs_at_limit(rows: int, level: float, *, placed: bool) -> Finding:
+    """The output lay at a limit; `placed`: the fit knows of it."""
+    text = f"The output lay at a limit, {level:.4g}, for {rows} rows: the loop was open there. "
+    text += (
+        "The plant is fitted with it; the figures of the present settings are those without a limit."
+        if placed
+        else "The fit through the loop knows of no such limit: give the limits of the output."
+    )
+    return Finding(code="output_clamped", severity="note" if placed else "warning", text=text)
+
+
+def measurement_flat(rows: int, level: float) -> Finding:
+    """The measurement lay at the end of its range."""
+    text = (
+        f"The measurement lies flat at {level:.4g} for {rows} rows: it is at the end of its range, where the plant does not show; "
+        "the plant is less certain than its draws say. Make a smaller step."
+    )
+    return Finding(code="measurement_saturated", severity="warning", text=text)
+
+
+def steps_disagree(gains: Sequence[float]) -> Finding:
+    """The steps of one record gave plants of their own."""
+    text = (
+        f"The settings are designed for the plants of all {len(gains)} steps alike, with gains from {min(gains):.3g} to "
+        f"{max(gains):.3g}, and the probability counts each step as much as the others; the figures shown are those of the plant "
+        "of the first."
+    )
+    return Finding(code="every_step_counts", severity="warning", text=text)
+
+
+def levels_refuse(fitted: float, interval: tuple[float, float], gain: float, half: float) -> str:
+    """Return why a plant is refused whose gain is not that of the recorded levels."""
+    return (
+        f"The settings as typed were not those in the controller: the fit through them gives a plant gain of {fitted:.3g} "
+        f"({interval[0]:.3g} to {interval[1]:.3g}), and the recorded output and measurement moved from rest to rest by a gain "
+        f"of {gain:.3g} ({gain - half:.3g} to {gain + half:.3g}); check the settings and their units, and that nothing else "
+        "moved the measurement."
+    )
+
+
+def levels_agree(fitted: float, gain: float) -> Finding:
+    """The levels at rest give the fitted gain."""
+    text = f"The plant gain fitted through the settings as typed, {fitted:.3g}, agrees with that of the recorded levels at rest, {gain:.3g}."
+    return Finding(code="levels_agree", severity="note", text=text)
+
+
+def levels_differ(fitted: float, gain: float) -> Finding:
+    """The levels at rest give another gain than the fit, within what may pass."""
+    text = (
+        f"The plant gain fitted through the settings as typed is {fitted:.3g}; the recorded levels at rest give {gain:.3g}. Half of "
+        "the plants that the record allows are taken with the one, half with the other."
+    )
+    return Finding(code="levels_differ", severity="warning", text=text)

@@ -22,11 +22,17 @@ from loopfit.identify.plants import plants_of, times_of
 from loopfit.identify.posterior import degrees_of, drawn, lowest_of
 from loopfit.loop.plant import Plant
 from loopfit.model.chart import LAGS
+from loopfit.record.record import Record, Signal
+from loopfit.record.units import split_unit
+from loopfit.record.words import weight as role_weight
+from loopfit.record.words import words_of
 
 _SEED = 61131
 _SLACK = 1.25  # several comparisons at 95 % each: intervals are stretched before they are called apart
 _CHANCE = 3.3  # chi-squared over its degrees of freedom, 99 % for four
 _TAILS = (0.025, 0.975)
+_STATED = 2  # weight of a name that states its role and no quantity: it may stand for any
+_TAG_DIGITS = 3  # of the number of a loop in a tag; shorter ones count sensors or columns
 _WORDS = ("gain", "sum of lags and dead time", "dead time")
 
 
@@ -74,6 +80,44 @@ def together(found: Sequence[Identified]) -> Identified:
         fresh=_side_by_side([one.fresh for one in usable]),
         findings=(*own, *left_out, _differ(len(usable), apart)),
     )
+
+
+def of_one_loop(records: Sequence[Record]) -> None:
+    """Check that records can be of one loop.
+
+    Raises
+    ------
+    UsageError
+        If their measurements or outputs have different units, or names that cannot be of one signal.
+    """
+    for role in ("measurement", "output"):
+        signals = [signal for record in records if (signal := getattr(record, role)) is not None]
+        for i, one in enumerate(signals):
+            for other in signals[i + 1 :]:
+                if _of_another_loop(one, other, role):
+                    raise UsageError(
+                        f"the records are not of one loop: the {role} is {_named(one)} in one and {_named(other)} in another; "
+                        "several records must have the same signals in the same units"
+                    )
+
+
+def _named(signal: Signal) -> str:
+    return repr(signal.name) if signal.unit is None else f"{signal.name!r} in {signal.unit}"
+
+
+def _of_another_loop(one: Signal, other: Signal, role: str) -> bool:
+    if one.unit is not None and other.unit is not None and one.unit != other.unit:
+        return True
+    words = [words_of(split_unit(signal.name)[0]) for signal in (one, other)]
+    tags = [{word for word in each if word.isdigit() and len(word) >= _TAG_DIGITS} for each in words]
+    if all(tags) and tags[0] != tags[1]:
+        return True
+    if _STATED in (role_weight(one.name, role), role_weight(other.name, role)):
+        return False
+    letters = [[word for word in each if word.isalpha() and len(word) > 1] for each in words]
+    # "temp" and "temperature" are alike
+    alike = any(a.startswith(b) or b.startswith(a) for a in letters[0] for b in letters[1])
+    return all(letters) and not alike
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)

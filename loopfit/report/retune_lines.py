@@ -8,20 +8,20 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from loopfit.analysis.result import Analysis
 from loopfit.core.arrays import Array
 from loopfit.core.errors import UsageError
 from loopfit.loop.loop import Loop
 from loopfit.loop.plant import Plant
 from loopfit.loop.simulate import simulate
+from loopfit.report.retune_recorded import RecordedStep, recorded_step
 from loopfit.tuning.result import Retuning, Side
 
-_DRAWS = 40  # plants that a band is taken over
+DRAWS = 40  # plants that a band is taken over
 _SPANS = 12.0  # time constants of the slowest root: more than enough, and cut to what moves
 _OF_OTHER = 4.0  # times the view that the proposed settings need, shown of the present ones
 _SCANS, _MOST_SCANS = 1200, 6000
 _AT_REST, _MORE = 0.015, 1.25  # of the change; and of the time until then that is shown
-_FAR = 1e6
+_FAR = 1e12  # what runs away; the picture clips it
 _BEFORE = 0.06  # of the view, before the step
 
 
@@ -55,29 +55,19 @@ class Curves:
     proposed: SideCurves | None
 
 
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class Overlay:
-    """The recorded step and what the fitted plant does with the present settings, on the record's clock, s."""
-
-    recorded_time: Array
-    recorded: Array
-    time: Array
-    setpoint: Array
-    predicted: Band
-
-
 def curves_of(retuning: Retuning) -> Curves:
     """Return the curves of the present and the proposed settings over a common time."""
     plant = retuning.identified.plant
-    step, confidence = _setpoint_step(retuning), _confidence(retuning)
+    found, confidence = recorded_step(retuning), confidence_of(retuning)
+    step = 1.0 if found is None else found.to - found.from_
     sides = (retuning.current, retuning.proposed)
     spans = [None if side is None else _span(plant, side) for side in sides]
     known = [span for span in spans if span is not None]
     end = max(known, default=_SPANS * (plant.dead_time_s + sum(plant.time_constants_s or (1.0,))))
     if spans[0] is not None and spans[1] is not None:
         end = min(end, _OF_OTHER * spans[1])
-    plants = [plant, *retuning.identified.draws[:_DRAWS]]
-    limits = _limits(retuning)
+    plants = [plant, *retuning.identified.draws[:DRAWS]]
+    limits = _limits(retuning, found)
     drawn = [None if side is None else _side_curves(plants, side, step, end, confidence, limits) for side in sides]
     shown = [_until(time, curves) for item in drawn if item is not None for time, curves in (item,)]
     end = min(end, max(shown, default=end))
@@ -88,76 +78,21 @@ def curves_of(retuning: Retuning) -> Curves:
     return Curves(time=time, setpoint_step=step, limits=limits, present=present, proposed=proposed)
 
 
-def overlay_of(retuning: Retuning) -> Overlay | None:
-    """Return the record over its prediction; None unless it is one of a setpoint step with known settings.
-
-    The loop is simulated from rest before the step, with the recorded setpoint and the output's limits.
-    """
-    found, current = retuning.identified, retuning.current
-    analysis = found.analysis
-    if analysis is None or current is None or analysis.step is None or analysis.step.signal != "setpoint":
+def _limits(retuning: Retuning, found: RecordedStep | None) -> tuple[float, float] | None:
+    """Return how far the output can go either way from where it rested before the recorded step."""
+    current = retuning.current
+    if found is None or found.record.output is None or current is None or current.settings.output_limits is None:
         return None
-    record, step = analysis.record, analysis.step
-    seen = (record.time >= analysis.window_s[0]) & (record.time <= analysis.window_s[1])
-    time, measured = record.time[seen], record.measurement.values[seen]
-    before = time < step.time_s
+    before = found.record.time < found.time_s
     if not before.any():
         return None
-    span = float(time[-1] - time[0])
-    interval, scans = _scanning(found.plant, current, span)
-    at = time[0] + interval * np.arange(scans)
-    if record.setpoint is None:
-        setpoint = np.where(at < step.time_s, step.from_, step.to)
-    else:
-        rows = np.searchsorted(time, at + 1e-9 * span, side="right") - 1
-        setpoint = record.setpoint.values[seen][np.maximum(rows, 0)]
-    output = None if record.output is None else float(np.mean(record.output.values[seen][before]))
-    limits = current.settings.output_limits if output is not None else None
-    try:
-        ran = simulate(
-            [found.plant, *found.draws[:_DRAWS]],
-            current.gains,
-            scan_s=interval,
-            scans=scans,
-            setpoint=setpoint,
-            initial_measurement=float(np.mean(measured[before])),
-            initial_setpoint=float(setpoint[0]),
-            initial_output=output or 0.0,
-            output_limits=limits,
-        )
-    except UsageError:
-        return None
-    inside = at <= time[-1]
-    return Overlay(
-        recorded_time=time,
-        recorded=measured,
-        time=at[inside],
-        setpoint=setpoint[inside],
-        predicted=_band(ran.controlled[inside], _confidence(retuning)),
-    )
-
-
-def _setpoint_step(retuning: Retuning) -> float:
-    analysis: Analysis | None = retuning.identified.analysis
-    if analysis is None or analysis.step is None or analysis.step.signal != "setpoint":
-        return 1.0
-    return analysis.step.size
-
-
-def _limits(retuning: Retuning) -> tuple[float, float] | None:
-    """Return how far the output can go either way from where it rested before the recorded step."""
-    analysis, current = retuning.identified.analysis, retuning.current
-    if analysis is None or analysis.step is None or analysis.record.output is None or current is None:
-        return None
-    before = analysis.record.time < analysis.step.time_s
-    if current.settings.output_limits is None or not before.any():
-        return None
-    rest = float(np.mean(analysis.record.output.values[before]))
+    rest = float(np.mean(found.record.output.values[before]))
     low, high = (limit - rest for limit in current.settings.output_limits)
     return (low, high) if low < 0.0 < high else None
 
 
-def _confidence(retuning: Retuning) -> float:
+def confidence_of(retuning: Retuning) -> float:
+    """Return the confidence of the bands, a fraction."""
     analysis = retuning.identified.analysis
     return 0.95 if analysis is None else analysis.confidence_percent / 100.0
 
@@ -174,7 +109,7 @@ def _span(plant: Plant, side: Side) -> float | None:
     return plant.dead_time_s + _SPANS * slowest
 
 
-def _scanning(plant: Plant, side: Side, span: float) -> tuple[float, int]:
+def scanning_of(plant: Plant, side: Side, span: float) -> tuple[float, int]:
     """Return scan interval and count: the controller's own, or so fine that it is nearly continuous."""
     scan = side.settings.scan_s
     interval = span / _SCANS if scan is None else scan
@@ -195,7 +130,7 @@ def _side_curves(
     limits: tuple[float, float] | None,
 ) -> tuple[Array, SideCurves]:
     count = len(plants)
-    interval, scans = _scanning(plants[0], side, end)
+    interval, scans = scanning_of(plants[0], side, end)
     setpoint = np.zeros((scans, 2 * count))
     load = np.zeros((scans, 2 * count))
     setpoint[:, :count], load[:, count:] = step, 1.0
@@ -209,14 +144,14 @@ def _side_curves(
         halves = [(a[:, :1], b[:, :1]) for a, b in halves]
     (stepped, loaded), (stepped_output, loaded_output) = halves
     return ran.time, SideCurves(
-        setpoint_measurement=_band(stepped, confidence),
-        setpoint_output=_band(stepped_output, confidence),
-        load_measurement=_band(loaded, confidence),
-        load_output=_band(loaded_output, confidence),
+        setpoint_measurement=band_of(stepped, confidence),
+        setpoint_output=band_of(stepped_output, confidence),
+        load_measurement=band_of(loaded, confidence),
+        load_output=band_of(loaded_output, confidence),
     )
 
 
-def _band(values: Array, confidence: float) -> Band:
+def band_of(values: Array, confidence: float) -> Band:
     """Return the first column of (n, P) with the bounds over all; what runs away ends far outside the picture."""
     safe = np.clip(np.nan_to_num(values, nan=_FAR, posinf=_FAR, neginf=-_FAR), -_FAR, _FAR)
     tail = 0.5 * (1.0 - confidence)

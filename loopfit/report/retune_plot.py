@@ -16,15 +16,17 @@ from loopfit.report.plot import METADATA, plain_style
 from loopfit.report.plot_figures import FIT
 from loopfit.report.plot_labels import INK, STEP, EndLabel, Panel, end_labels, settle
 from loopfit.report.plot_words import readable
-from loopfit.report.retune_lines import Band, Curves, SideCurves, curves_of, overlay_of
+from loopfit.report.retune_lines import Band, Curves, SideCurves, curves_of
+from loopfit.report.retune_overlay import overlay_of
 from loopfit.report.retune_record import PRESENT, PRESENT_BAND, draw_alone, draw_record, named
+from loopfit.report.retune_numbers import figure_words, with_unit
+from loopfit.report.retune_recorded import record_of, record_units
 from loopfit.report.retune_words import (
-    NOT_SEEN,
+    first_findings,
     key_in_words,
     overshoot_warning,
+    printed_cautions,
     proposes,
-    quantity_words,
-    record_units,
     refusal_words,
     target_words,
 )
@@ -33,7 +35,8 @@ from loopfit.tuning.result import Retuning
 _PROPOSED_BAND = "#bcd0f0"
 _TITLE_WIDTH, _SMALL_WIDTH = 112, 160  # characters that fit across the picture
 _HEIGHT, _RECORD_HEIGHT, _LINE_HEIGHT = 5.6, 2.4, 0.15  # inches
-_BEYOND = 0.6  # of what the proposed settings need, shown of present ones that run away
+_BEYOND = 2.0  # times the height of the proposed curve, that a present one is shown beyond it on either side
+_RUNS_AWAY, _AWAY = 20.0, 4.0  # steps: a curve that goes so far runs away, and so far is it shown
 _LONG, _LEAST = 110, 40  # characters of a caution: from which it is cut, and what is kept at least
 
 
@@ -73,7 +76,7 @@ def figure(retuning: Retuning) -> Figure:
 def short_cautions(retuning: Retuning) -> str:
     """Return every caution in short, its first sentence or the first clause of a long one, in one paragraph."""
     short = []
-    for caution in retuning.cautions:
+    for caution in printed_cautions(retuning):
         sentence = re.split(r"(?<=[^\W\d]{2})\.(?:\s|$)", caution.strip(), maxsplit=1)[0].rstrip(".")
         if len(sentence) > _LONG:
             cut = re.search(r"[;:] ", sentence[_LEAST:])
@@ -159,7 +162,8 @@ def _words(retuning: Retuning) -> tuple[list[str], list[str]]:
     keys = key_in_words(retuning.proposed, retuning)
     titles = (keys, target) if retuning.met else (target, keys)
     above = [line for words in titles for line in textwrap.wrap(words, _TITLE_WIDTH)]
-    below = [] if warning is None else textwrap.wrap(warning, _SMALL_WIDTH)
+    warnings = [*first_findings(retuning), *([] if warning is None else [warning])]
+    below = [line for words in warnings for line in textwrap.wrap(words, _SMALL_WIDTH)]
     below += textwrap.wrap(short_cautions(retuning), _SMALL_WIDTH)
     below = [readable(line, "see the page of text") for line in below]
     return [readable(line, "see the page of text") for line in above], below
@@ -168,17 +172,15 @@ def _words(retuning: Retuning) -> tuple[list[str], list[str]]:
 def _figures(retuning: Retuning, kind: str) -> str:
     """Return the figures that the panel lets one see: ": overshoot 29 % now, 0.2 % proposed"."""
     sides = [(side, word) for side, word in ((retuning.current, "now"), (retuning.proposed, "proposed")) if side]
-    field, name, most = (
-        ("overshoot_percent", "overshoot", 1) if kind == "setpoint" else ("damping_ratio", "damping ratio", 2)
-    )
+    field, name = ("overshoot_percent", "overshoot") if kind == "setpoint" else ("damping_ratio", "damping ratio")
     unit = " %" if kind == "setpoint" else ""
     parts = []
     for side, word in sides:
         if not side.figures.stable:
             parts.append(f"{word} UNSTABLE")
             continue
-        shown = quantity_words(getattr(side.figures, field), most_decimals=most, interval=False, endless=NOT_SEEN)
-        parts.append(f"{shown}{unit} {word}")
+        shown = figure_words(getattr(side.figures, field), field, interval=False)
+        parts.append(f"{with_unit(shown, unit)} {word}")
     return f"{name} {', '.join(parts)}"
 
 
@@ -187,6 +189,8 @@ def _response(panel: Panel, curves: Curves, name: str) -> None:
     axes = panel.axes
     axes.axhline(0.0, color=INK, lw=0.5, zorder=1)
     axes.axvline(0.0, color=STEP, lw=0.8, zorder=1)
+    least, most = _heights(curves, name)
+    outside = 0.5 * (most - least)  # what is beyond is not drawn: a curve that runs away has no end
     for side, colour, allowed, word, width in (
         (curves.present, PRESENT, PRESENT_BAND, "now", 1.5),
         (curves.proposed, FIT, _PROPOSED_BAND, "proposed", 2.1),
@@ -194,15 +198,18 @@ def _response(panel: Panel, curves: Curves, name: str) -> None:
         if side is None:
             continue
         band: Band = getattr(side, name)
-        if not np.array_equal(band.low, band.high):
+        low, value, high = (
+            np.clip(each, least - outside, most + outside) for each in (band.low, band.value, band.high)
+        )
+        if not np.array_equal(low, high):
             axes.fill_between(
-                curves.time, band.low, band.high, color=allowed, alpha=0.75, lw=0, zorder=2, label=f"{word}, allowed"
+                curves.time, low, high, color=allowed, alpha=0.75, lw=0, zorder=2, label=f"{word}, allowed"
             )
-        (line,) = axes.plot(curves.time, band.value, color=colour, lw=width, zorder=3, label=word)
+        (line,) = axes.plot(curves.time, value, color=colour, lw=width, zorder=3, label=word)
         panel.lines.append(line)
-        panel.ends.append(EndLabel(height=float(band.value[-1]), words=word, colour=colour))
+        panel.ends.append(EndLabel(height=float(value[-1]), words=word, colour=colour))
     axes.set_xlim(curves.time[0], curves.time[-1])
-    axes.set_ylim(*_heights(curves, name))
+    axes.set_ylim(least, most)
     for limit in curves.limits or () if name.endswith("output") else ():
         if axes.get_ylim()[0] < limit < axes.get_ylim()[1]:
             axes.axhline(limit, color=INK, lw=0.7, ls=":", label="limit")
@@ -210,35 +217,42 @@ def _response(panel: Panel, curves: Curves, name: str) -> None:
 
 
 def _heights(curves: Curves, name: str) -> tuple[float, float]:
-    spans = [_reach(side, name) for side in (curves.present, curves.proposed) if side is not None]
-    low, high = min(span[0] for span in spans), max(span[1] for span in spans)
-    if curves.proposed is not None and curves.present is not None:
-        least, most = _reach(curves.proposed, name)
-        now = _reach(curves.present, name)
-        if now[1] - now[0] > 20.0 * (most - least):  # it runs away
-            room = _BEYOND * (most - least)
-            low, high = least - room, most + room
+    """Return the axis: the proposed curve whole, the present one as far as five times that lets it be seen."""
+    sides = [side for side in (curves.proposed, curves.present) if side is not None]
+    size = abs(curves.setpoint_step) if name == "setpoint_measurement" else None
+    low, high = _reach(sides[0], name, size)
+    for side in sides[1:]:
+        now, room = _reach(side, name, size), _BEYOND * (high - low)
+        low, high = max(min(low, now[0]), low - room), min(max(high, now[1]), high + room)
     if name == "setpoint_measurement":
         low, high = min(low, curves.setpoint_step), max(high, curves.setpoint_step)
     room = (high - low) or 1.0
     return low - 0.08 * room, high + 0.08 * room
 
 
-def _reach(side: SideCurves, name: str) -> tuple[float, float]:
-    """Return the least and greatest value of a curve and 0, with so much of its band as is not out of all proportion."""
+def _reach(side: SideCurves, name: str, size: float | None) -> tuple[float, float]:
+    """Return the least and greatest value of a curve and 0, with so much of its band as is not out of all proportion.
+
+    Where the setpoint step has a `size`, no further than so many steps as a loop that holds could take; else what runs
+    away is seen as far as its first fifth.
+    """
     band: Band = getattr(side, name)
-    low, high = min(float(band.value.min()), 0.0), max(float(band.value.max()), 0.0)
+    value = band.value
+    if float(np.abs(value).max()) > _RUNS_AWAY * (size or float(np.abs(value[: value.size // 5]).max()) or 1.0):
+        most = _AWAY * size if size is not None else float(np.abs(value[: value.size // 5]).max())
+        value = np.clip(value, -most, most)
+    low, high = min(float(value.min()), 0.0), max(float(value.max()), 0.0)
     room = high - low
     return max(float(band.low.min()), low - 0.3 * room), min(float(band.high.max()), high + 0.3 * room)
 
 
 def _refused(retuning: Retuning) -> Figure:
     """Draw the record alone: there are no settings to show."""
-    analysis = retuning.identified.analysis
+    record = record_of(retuning)
     words = refusal_words(retuning)
-    if analysis is None:
+    if record is None:
         raise UsageError(f"there is nothing to draw. {words}")
     above = [readable(line, "see the page of text") for line in textwrap.wrap(words, _TITLE_WIDTH)]
     out = _empty(_HEIGHT, above, [])
-    _finish(out, draw_alone(out, analysis, retuning))
+    _finish(out, draw_alone(out, record, retuning))
     return out

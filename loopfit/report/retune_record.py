@@ -6,12 +6,12 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 
-from loopfit.analysis.result import Analysis
+from loopfit.record.record import Record
 from loopfit.report.plot_labels import INK, STEP, EndLabel, Panel
-from loopfit.report.plot_lines import thinned, view_of
+from loopfit.report.plot_lines import thinned
 from loopfit.report.plot_words import readable
-from loopfit.report.retune_lines import Overlay
-from loopfit.report.retune_words import record_units
+from loopfit.report.retune_overlay import Overlay
+from loopfit.report.retune_recorded import record_units
 from loopfit.tuning.result import Retuning
 
 PRESENT, PRESENT_BAND = "#7d6f64", "#e3dcd6"
@@ -20,10 +20,7 @@ _FEW_ROWS = 400
 
 def draw_record(panel: Panel, retuning: Retuning, overlay: Overlay) -> None:
     """Draw the recorded step over what the fitted plant does with the present settings."""
-    axes, analysis = panel.axes, retuning.identified.analysis
-    assert analysis is not None
-    predicted = overlay.predicted
-    view = view_of(analysis)
+    axes, predicted, view = panel.axes, overlay.predicted, overlay.view_s
     shown = (overlay.recorded_time >= view[0]) & (overlay.recorded_time <= view[1])
     dots = overlay.recorded_time.size
     time, values = thinned(overlay.recorded_time, overlay.recorded)
@@ -65,9 +62,8 @@ def _measurement_axis(axes: Axes, retuning: Retuning) -> None:
     axes.set_xlabel("Time of the record (s)", fontsize=9)
 
 
-def draw_alone(out: Figure, analysis: Analysis, retuning: Retuning) -> list[Panel]:
+def draw_alone(out: Figure, record: Record, retuning: Retuning) -> list[Panel]:
     """Draw the record's signals and return their panels."""
-    record = analysis.record
     signals = [
         ("measurement", record.measurement, INK),
         ("setpoint", record.setpoint, STEP),

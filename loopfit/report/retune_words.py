@@ -7,15 +7,15 @@ import re
 import textwrap
 from dataclasses import dataclass
 
-from loopfit.core.quantity import Quantity
-from loopfit.core.rounding import decimals_for, decimals_of, number
+from loopfit.core.finding import Finding
 from loopfit.loop.gains import Gains
 from loopfit.loop.settings import Settings
+from loopfit.report.retune_numbers import NOT_SEEN, figure_words, with_unit
+from loopfit.report.retune_recorded import record_units
 from loopfit.tuning.result import Retuning, Side
 
 WIDTH, LABEL = 100, 13
 NO_UNITS = "output per measurement"  # of a gain whose units are not known
-NOT_SEEN = "longer than was simulated"
 _EXACT, _SHOWN = 6, 4  # significant digits: a number that has no more than six is shown as it is
 _SURPRISE_PERCENT = 5.0  # overshoot beyond that of the target damping, from which it is said first
 _TIMES = {"s": "s", "min": "min", "h": "h", "ms": "ms"}
@@ -106,61 +106,39 @@ def form_words(settings: Settings) -> str:
 
 def action_words(settings: Settings, plant_gain: float) -> str:
     """Return the action, and whether its sign is right for the plant."""
-    words = _ACTIONS.get(
-        settings.action or "", "key in the gain with its sign: positive is reverse acting, negative direct"
-    )
+    words = _ACTIONS[settings.action or sense(settings)]
+    if settings.action is None and settings.proportional_band_percent is None:
+        words = signed_words(settings)
     sign = "positive" if plant_gain > 0 else "negative"
     if feeds_back_positively(settings.gains, plant_gain):
         return f"{words}; WRONG for this plant, whose gain is {sign}: the loop would run away"
     return f"{words}; right for this plant, whose gain is {sign}"
 
 
+def sense(settings: Settings) -> str:
+    """Return "reverse" or "direct": the action, by the sign of the gain where none was said."""
+    return settings.action or ("reverse" if _first(settings.gains) > 0.0 else "direct")
+
+
+def signed_words(settings: Settings) -> str:
+    """Return what the sign of the gain is, where the controller has no action to choose."""
+    acting = sense(settings)
+    return f"the gain is {'positive' if acting == 'reverse' else 'negative'} here ({acting} acting)"
+
+
 def feeds_back_positively(gains: Gains, plant_gain: float) -> bool:
     """Tell whether the controller drives the plant the wrong way."""
-    first = next(value for value in (gains.kp, gains.ki, gains.kd) if value != 0.0)
-    return first * plant_gain < 0.0
+    return _first(gains) * plant_gain < 0.0
+
+
+def _first(gains: Gains) -> float:
+    return next(value for value in (gains.kp, gains.ki, gains.kd) if value != 0.0)
 
 
 def gain_unit(retuning: Retuning) -> str | None:
     """Return the unit of the controller's gain from the units of the record's columns; None where they are not known."""
     measured, out = record_units(retuning)
     return f"{out}/{measured}" if measured and out else None
-
-
-def record_units(retuning: Retuning) -> tuple[str | None, str | None]:
-    """Return the units of measurement and output, where the record names them."""
-    analysis = retuning.identified.analysis
-    if analysis is None:
-        return None, None
-    record = analysis.record
-    return record.measurement.unit, None if record.output is None else record.output.unit
-
-
-def quantity_words(
-    quantity: Quantity | None, *, most_decimals: int = 9, interval: bool = True, endless: str = "no limit"
-) -> str:
-    """Return "0.31 (0.29 to 0.33)"; "-" for a figure that does not exist, `endless` for one that is infinite."""
-    if quantity is None:
-        return "-"
-    if quantity.low == quantity.high:
-        places = min(_three_figures(quantity.value), most_decimals)
-    else:
-        places = min(decimals_of(quantity), most_decimals)
-    if not math.isfinite(quantity.value):
-        bounded = f" ({number(quantity.low, max(places, 0))} or more)" if math.isfinite(quantity.low) else ""
-        return endless + (bounded if interval else "")
-    value = number(quantity.value, places)
-    if not interval or quantity.low == quantity.high:
-        return value
-    if math.isinf(quantity.high):
-        return (
-            f"{value} (no bound)" if math.isinf(quantity.low) else f"{value} ({number(quantity.low, places)} or more)"
-        )
-    return f"{value} ({number(quantity.low, places)} to {number(quantity.high, places)})"
-
-
-def _three_figures(value: float) -> int:
-    return min(decimals_for(0.0, value) - 1, 9) if math.isfinite(value) else 0
 
 
 def share_words(share: float) -> str:
@@ -195,7 +173,7 @@ def target_words(retuning: Retuning) -> str:
     words = f"The target is NOT met: {goal.criterion}, maximum sensitivity at most {goal.max_sensitivity:g}{asked}."
     reach = retuning.attainable_damping_ratio
     if proposed is not None and proposed.figures.damping_ratio is not None:
-        words += f" Attainable: a damping ratio of {quantity_words(proposed.figures.damping_ratio, most_decimals=2)}."
+        words += f" Attainable: a damping ratio of {figure_words(proposed.figures.damping_ratio, "damping_ratio")}."
     elif reach is not None:
         # cut, not rounded: what is not attainable is not promised
         words += f" Attainable: a damping ratio of {math.floor(100.0 * reach + 1e-9) / 100.0:.2f}."
@@ -213,48 +191,27 @@ def change_words(retuning: Retuning) -> str:
     current, proposed = retuning.current, retuning.proposed
     assert proposed is not None
     rows = (
-        ("damping ratio", "", "damping_ratio", 2),
-        ("setpoint overshoot", " %", "overshoot_percent", 1),
-        (f"settling (±{retuning.band_percent:g} %)", " s", "settling_time_s", 9),
+        ("damping ratio", "", "damping_ratio"),
+        ("setpoint overshoot", " %", "overshoot_percent"),
+        (f"settling (±{retuning.band_percent:g} %)", " s", "settling_time_s"),
     )
     now = None if current is None else current.figures
     then = proposed.figures
     if not then.stable:
         return "With these settings the loop is UNSTABLE."
     parts = []
-    for name, unit, field, most in rows:
+    for name, unit, field in rows:
         cells = [
-            quantity_words(getattr(figures, field), most_decimals=most, interval=False, endless=NOT_SEEN)
+            figure_words(getattr(figures, field), field, interval=False)
             for figures in ((now, then) if now is not None and now.stable else (then,))
         ]
-        parts.append(f"{name} {' -> '.join(cells)}{'' if cells[-1] in ('-', NOT_SEEN) else unit}")
+        if NOT_SEEN in cells:  # a phrase and a number: the unit belongs to the number
+            cells = [with_unit(cell, unit) for cell in cells]
+            parts.append(f"{name}: {' -> '.join(cells)}" if len(cells) > 1 or len(set(cells)) > 1 else f"{name}: {cells[0]}")
+            continue
+        parts.append(f"{name} {with_unit(' -> '.join(cells), unit if cells[-1] != '-' else '')}")
     lead = "The loop will have" if now is None else "Now -> then" if now.stable else "Now UNSTABLE; then"
     return f"{lead}: {', '.join(parts)}."
-
-
-def overshoot_warning(retuning: Retuning) -> str | None:
-    """Return what to know where the setpoint overshoot is more than the damping lets one expect; None where it is not."""
-    proposed = retuning.proposed
-    if proposed is None or proposed.figures.overshoot_percent is None or proposed.figures.damping_ratio is None:
-        return None
-    overshoot = proposed.figures.overshoot_percent.value
-    wanted = overshoot_of(retuning.goal.damping_ratio)
-    if not overshoot > wanted + _SURPRISE_PERCENT:
-        return None
-    words = (
-        f"Take care: after a step of the setpoint it will overshoot by {overshoot:.0f} %, where a damping ratio of "
-        f"{retuning.goal.damping_ratio:g} lets one expect {wanted:.0f} %."
-    )
-    if not overshoot > overshoot_of(proposed.figures.damping_ratio.value) + _SURPRISE_PERCENT:
-        return f"{words} That comes from the damping, which falls short of the target."
-    weight = "a smaller setpoint weight" if proposed.settings.setpoint_weight is not None else (
-        "a setpoint weight below 1 where the controller has one (--setpoint-weight)"
-    )  # fmt: skip
-    return (
-        f"{words} That comes from the zero of the setpoint path, not from poor damping: after a load the loop comes "
-        f"back without that swing. What removes it: {weight}, a ramped setpoint, or settings designed "
-        f"for it (--overshoot PERCENT)."
-    )
 
 
 def refusal_words(retuning: Retuning) -> str:
@@ -265,7 +222,8 @@ def refusal_words(retuning: Retuning) -> str:
 def key_in_words(side: Side, retuning: Retuning) -> str:
     """Return the settings to key in as one sentence."""
     settings = side.settings
-    action = f"{settings.action} acting" if settings.action else "the gain with its sign"
+    signed = settings.action is None and settings.proportional_band_percent is None
+    action = signed_words(settings) if signed else f"{sense(settings)} acting"
     lead = "Key in" if retuning.met else "Best attainable, to key in"
     return f"{lead}: {entry_line(settings, gain_unit(retuning), absent=False)} ({settings.form} form, {action})."
 

@@ -69,9 +69,12 @@ def design(
         return _designed(search, row, met=True)
     low, high = _LOWEST, damping
     kept = search.best(low)
+    if kept is None and also is not None:  # not even at the least damping: what is to be had without the demand
+        plain = design(plant, goal, present=present, scan_s=scan_s, late=late, filter_s=filter_s, coupled=coupled)
+        return replace(plain, met=False, obstacle="the overshoot or settling time that was asked for")
     if kept is None:
         return Designed(gains=None, worth=0.0, met=False, attainable_damping_ratio=None, swing=None,
-                        obstacle="no settings within the limits were found at all")  # fmt: skip
+                        obstacle="no settings at all are within the limits and bounds given: allow more with --at-most, --at-least, --noise-gain or --max-sensitivity")  # fmt: skip
     for _ in range(_BISECTIONS):
         middle = 0.5 * (low + high)
         found = search.best(middle)
@@ -85,11 +88,7 @@ def _polished_best(search: Search, damping: float) -> Array | None:
     found = search.best(damping)
     if found is None:
         return None
-    also = search.also
-    return search.polished(
-        found[0],
-        lambda row: search.passes(row, damping) and (also is None or also(search.true_plant, search.gains_of(row))),
-    )
+    return search.polished(found[0], lambda row: search.passes(row, damping) and search.meets_demands(row))
 
 
 def _designed(search: Search, row: Array, *, met: bool) -> Designed:

@@ -26,6 +26,7 @@ _SPANS = 7.0  # time constants of the slowest root that a person sees
 _SCANS_AT_MOST = 4_000
 _SCANS_PER_PACE = 40
 _LONGER = 4
+_EDGE = 0.97  # swing back from which a loop is on the edge of stability, and its response no figure
 _FROM_STEP = ("overshoot_percent", "rise_time_s", "settling_time_s")
 
 
@@ -53,6 +54,9 @@ def forecast(
     if first is None or not first.stable:
         return LoopFigures(stable=False)
     usable = [i for i, swing in enumerate(swings) if swing is not None and swing.stable]
+    if first.visible_swing > _EDGE:
+        return LoopFigures(stable=True, damping_ratio=Quantity(*(first.visible_damping,) * 3),
+                           swing_percent=Quantity(*(100.0 * first.visible_swing,) * 3))  # fmt: skip
     table = _steps([plants[i] for i in usable], gains, first, scan_s, late=late, band=band)
     table |= _margins([plants[i] for i in usable], gains)
     table["damping_ratio"] = np.array([swings[i].visible_damping for i in usable])  # type: ignore[union-attr]
@@ -62,13 +66,15 @@ def forecast(
     return LoopFigures(stable=True, **figures)
 
 
-def step_figures(plant: Plant, gains: Gains, *, scan_s: float | None, band: float) -> tuple[float, float] | None:
-    """Return overshoot, percent, and settling time, s, after a setpoint step; None where the loop is unstable."""
-    swing = swing_on(plant, gains, scan_s, late=False)
+def step_figures(
+    plants: Sequence[Plant], gains: Gains, *, scan_s: float | None, band: float
+) -> tuple[Array, Array] | None:
+    """Return overshoot, percent, and settling time, s, after a setpoint step (P,); None where the first loop is unstable."""
+    swing = swing_on(plants[0], gains, scan_s, late=False)
     if swing is None or not swing.stable:
         return None
-    figures = _steps([plant], gains, swing, scan_s, late=False, band=band, load=False)
-    return float(figures["overshoot_percent"][0]), float(figures["settling_time_s"][0])
+    figures = _steps(plants, gains, swing, scan_s, late=False, band=band, load=False)
+    return figures["overshoot_percent"], figures["settling_time_s"]
 
 
 def _spread(values: Array, confidence: float, lost: float) -> Quantity | None:

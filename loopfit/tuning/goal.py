@@ -68,6 +68,9 @@ class Goal:
                 raise UsageError(f"{name!r} cannot be bounded; there are {', '.join(LIMITED)}")
             if not (math.isfinite(value) and value >= 0):
                 raise UsageError(f"the bound of {name} is a number of at least 0, not {value!r}")
+        for name in self.at_least.keys() & self.at_most.keys():
+            if self.at_least[name] > self.at_most[name]:
+                raise UsageError(f"{name} is to be at least {self.at_least[name]:g} and at most {self.at_most[name]:g}")
 
     @property
     def integral(self) -> bool:

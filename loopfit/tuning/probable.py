@@ -26,7 +26,8 @@ from loopfit.tuning.search import Also, Search
 _BEYOND = 0.4  # of the share that may fail, demanded of the draws: 94 % for 90 %
 _APART = 0.985  # worth of the next setting that is tried
 _ROUNDS = 3
-_LESS = (0.85, 0.65, 0.45, 0.25)
+_AS_GOOD = 0.95
+_LESS = (0.99, 0.95, 0.9, 0.8, 0.65, 0.5)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -41,7 +42,8 @@ class Probable:
 class Draws:
     """Plants that the record allows, the hardest first."""
 
-    def __init__(self, plants: Sequence[Plant], scan_s: float | None, *, late: bool) -> None:
+    def __init__(self, plants: Sequence[Plant], scan_s: float | None, *, late: bool, also: Also | None = None) -> None:
+        self.also = also
         self.plants = list(plants)
         self.failures = np.zeros(len(self.plants))
         self.scan_s, self.late = scan_s, late
@@ -50,6 +52,7 @@ class Draws:
         """Return the share of the plants on which the settings meet the goal; 0 as soon as it must be below `least`."""
         allowed = math.floor(len(self.plants) * (1.0 - least) + 1e-9)
         failed = 0
+        passed: list[Plant] = []
         for i in np.argsort(-self.failures, kind="stable"):
             swing = swing_on(self.plants[i], gains, self.scan_s, late=self.late)
             if swing is None or not goal.met_by(swing):
@@ -57,6 +60,12 @@ class Draws:
                 self.failures[i] += 1
                 if failed > allowed:
                     return 0.0
+            else:
+                passed.append(self.plants[i])
+        if self.also is not None and passed:
+            failed += int((~self.also(passed, gains)).sum())
+            if failed > allowed:
+                return 0.0
         return 1.0 - failed / len(self.plants)
 
 
@@ -73,7 +82,7 @@ def swing_on(plant: Plant, gains: Gains, scan_s: float | None, *, late: bool) ->
 def probable(
     plant: Plant, goal: Goal, draws: Sequence[Plant], fresh: Sequence[Plant], *, present: Gains | None = None,
     scan_s: float | None = None, late: bool = False, coupled: bool = True, also: Also | None = None,
-    disc: bool = False,
+    disc: bool = False, plainer: bool = False,
 ) -> Probable:  # fmt: skip
     """Return the settings of greatest load rejection that meet the goal with the probability asked for.
 
@@ -87,38 +96,58 @@ def probable(
         Two independent sets; none: the nominal design.
     disc : bool
         Whether the goal's disc is to be used; else it is weighed against a lower sensitivity limit.
+    plainer : bool
+        Whether a derivative is to be kept even where it does nothing.
     """
+    if goal.terms == "PID" and goal.move is None and not plainer:
+        whole = probable(plant, goal, draws, fresh, present=present, scan_s=scan_s, late=late, coupled=coupled, also=also,
+                         disc=disc, plainer=True)  # fmt: skip
+        made = whole.designed.gains
+        if made is None or made.kp == 0.0 or abs(made.kd / made.kp) >= made.filter_s:
+            return whole
+        # a derivative shorter than its own filter does nothing: without it, unless that costs
+        bare = probable(plant, replace(goal, terms="PI"), draws, fresh, present=present, scan_s=scan_s, late=late,
+                        coupled=coupled, also=also, disc=disc)  # fmt: skip
+        as_good = (bare.designed.met, bare.designed.worth) >= (whole.designed.met, _AS_GOOD * whole.designed.worth)
+        return bare if as_good else whole
     if goal.disc is not None and not disc:
         # two protections against what the record did not excite: the disc, or a lower sensitivity; whichever costs less
         by_disc = probable(plant, goal, draws, fresh, present=present, scan_s=scan_s, late=late, coupled=coupled, also=also,
-                           disc=True)  # fmt: skip
+                           disc=True, plainer=plainer)  # fmt: skip
         calmer = replace(goal, disc=None, max_sensitivity=min(goal.max_sensitivity, HELD_BACK))
         held_back = probable(
-            plant, calmer, draws, fresh, present=present, scan_s=scan_s, late=late, coupled=coupled, also=also
+            plant,
+            calmer,
+            draws,
+            fresh,
+            present=present,
+            scan_s=scan_s,
+            late=late,
+            coupled=coupled,
+            also=also,
+            plainer=plainer,
         )
         return max(by_disc, held_back, key=lambda one: (one.designed.met, one.designed.worth))
     kwargs: dict[str, object] = {"present": present, "scan_s": scan_s, "late": late, "coupled": coupled, "also": also}
     nominal = design(plant, goal, **kwargs)  # type: ignore[arg-type]
     if not draws or not fresh:
         return Probable(designed=nominal, nominal=nominal, probability=None)
-    probe = Draws(fresh, scan_s, late=late)
+    probe = Draws(fresh, scan_s, late=late, also=also)
     if goal.confidence is None:
         share = None if nominal.gains is None else probe.share(nominal.gains, goal)
         return Probable(designed=nominal, nominal=nominal, probability=share)
     found = _certain(plant, goal, draws, probe, kwargs)
     if found is not None:
         return Probable(designed=found[0], nominal=nominal, probability=found[1])
-    for share_of_target in _LESS:  # the target is not to be had with that probability: what is?
-        less = replace(goal, damping_ratio=share_of_target * goal.damping_ratio)
-        found = _certain(plant, less, draws, probe, kwargs)
-        if found is not None:
-            gains = found[0].gains
-            assert gains is not None
-            obstacle = (
-                nominal.obstacle or "the uncertainty of the plant: another record, or a larger step, would narrow it"
-            )
-            designed = replace(found[0], met=False, attainable_damping_ratio=less.damping_ratio, obstacle=obstacle)
-            return Probable(designed=designed, nominal=nominal, probability=probe.share(gains, goal))
+    if nominal.met:  # the target is there, but not with that probability: with which?
+        for confidence in _LESS:
+            if confidence >= goal.confidence:
+                continue
+            found = _certain(plant, replace(goal, confidence=confidence), draws, probe, kwargs)
+            if found is not None:
+                obstacle = "the uncertainty of the plant: another record, or a larger step, would narrow it"
+                designed = replace(found[0], met=False, obstacle=obstacle)
+                return Probable(designed=designed, nominal=nominal, probability=found[1])
     share = None if nominal.gains is None else probe.share(nominal.gains, goal)
     return Probable(designed=replace(nominal, met=False), nominal=nominal, probability=share)
 
@@ -129,7 +158,7 @@ def _certain(
     """Return the first settings, by worth, that meet the goal on enough draws, with their share of the fresh ones."""
     assert goal.confidence is not None
     search = Search(plant, goal, **kwargs)  # type: ignore[arg-type]
-    tried = Draws(draws, search.scan_s, late=search.late)
+    tried = Draws(draws, search.scan_s, late=search.late, also=search.also)
     demanded = 1.0 - _BEYOND * (1.0 - goal.confidence) - 0.02 * (1.0 - goal.confidence) / 0.1
     for _ in range(_ROUNDS):
         row = _first_on_draws(search, goal, tried, demanded)

@@ -7,29 +7,29 @@ from dataclasses import replace
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from loopfit.core.errors import UsageError
-from loopfit.core.finding import Finding
 from loopfit.identify.identified import Identified
 from loopfit.loop.gains import Gains
 from loopfit.loop.plant import Plant
 from loopfit.loop.settings import Settings
-from loopfit.loop.visible import Swing, damping_with_overshoot
+from loopfit.loop.visible import damping_with_overshoot
 from loopfit.model.transfer import Transfer
 from loopfit.tuning.cautions import cautions
 from loopfit.tuning.entered import entered
 from loopfit.tuning.forecast import forecast, step_figures
 from loopfit.tuning.goal import Goal, Terms
 from loopfit.tuning.probable import Draws, Probable, probable
+from loopfit.tuning.remarks import remarks
 from loopfit.tuning.result import Move, Retuning, Side
 from loopfit.tuning.search import Also
-from loopfit.tuning.typed_settings import about_typed, typed_of
+from loopfit.tuning.typed_settings import about_typed, refusal_of, typed_of
 from loopfit.tuning.way import way
 
 _DAMPING_WITH_SETTLING = 0.7
 _WEIGHT_OVERSHOOT = 1.0  # percent: what a setpoint weight is chosen for
 _BISECTIONS = 7
-_ROWS_PER_PACE = 2.0
 
 
 def retune(
@@ -46,6 +46,7 @@ def retune(
     at_least: Mapping[str, float] | None = None,
     at_most: Mapping[str, float] | None = None,
     digits: int | None = None,
+    limits: Mapping[str, float] | None = None,
     confidence_of_target_percent: float | None = 90.0,
     band_percent: float = 2.0,
     confidence_percent: float = 95.0,
@@ -75,6 +76,8 @@ def retune(
         Bounds on gain (magnitude), integral_time_s, derivative_time_s, ideal form, engineering units.
     digits : int, optional
         Significant digits that the screen takes.
+    limits : mapping, optional
+        Acceptance limits by their names (`overshoot_percent_max`, ...): said where the proposal may miss one.
     confidence_of_target_percent : float, optional
         Probability with which the true loop is to meet the target; None: the fitted plant alone.
     band_percent, confidence_percent : float
@@ -104,7 +107,7 @@ def retune(
     )
     identified = identified_from(source, settings, confidence=confidence_percent / 100.0, reading=reading)
     return retune_identified(
-        identified, goal, settings=settings, digits=digits, band=band_percent / 100.0,
+        identified, goal, settings=settings, digits=digits, limits=limits, band=band_percent / 100.0,
         confidence=confidence_percent / 100.0,
     )  # fmt: skip
 
@@ -133,6 +136,7 @@ def retune_identified(
     *,
     settings: Settings | None = None,
     digits: int | None = None,
+    limits: Mapping[str, float] | None = None,
     band: float = 0.02,
     confidence: float = 0.95,
 ) -> Retuning:
@@ -157,41 +161,40 @@ def retune_identified(
         figures = forecast(plant, gains, () if quick else seen, **look)  # type: ignore[arg-type]
         return Side(settings=shown, gains=gains, figures=figures, probability_of_target=share)
 
+    also = _also(goal, scan, band)
     typed = typed_of(identified, settings)
     findings += about_typed(typed, identified)
     current = None
     if settings is not None and present is not None:
-        share = None if not identified.fresh else Draws(identified.fresh, scan, late=False).share(present, goal)
-        current = side(settings, present, share)
-    if typed is not None and typed.verdict == "differ" and identified.how == "through the loop":
-        # the plant was fitted through settings that were not in the controller: it is wrong by as much
-        identified = replace(
-            identified,
-            refused=f"{typed.text.rstrip('.')}; give the settings that were in the controller during the record.",
+        share = (
+            None if not identified.fresh else Draws(identified.fresh, scan, late=False, also=also).share(present, goal)
         )
+        current = side(settings, present, share)
+    if typed is not None and typed.verdict == "differ" and identified.refused is None:
+        # what is shown as "now", the way back and the units to key in would all be those of another controller
+        identified = replace(identified, refused=refusal_of(typed))
     if identified.refused is not None:
         return Retuning(identified=identified, goal=goal, met=False, current=current, proposed=None, moves=(), cautions=(),
                         findings=tuple(findings), band_percent=100.0 * band, refused=identified.refused,
                         typed=typed)  # fmt: skip
     found = probable(
         plant, goal, identified.draws, identified.fresh, present=present, scan_s=scan,
-        coupled=settings is None or settings.form != "parallel", also=_also(goal, scan, band),
+        coupled=settings is None or settings.form != "parallel", also=also,
     )  # fmt: skip
     designed = found.designed
     if designed.gains is None:
         return Retuning(identified=identified, goal=goal, met=False, current=current, proposed=None, moves=(), cautions=(),
-                        findings=tuple(findings), band_percent=100.0 * band, refused=designed.obstacle)  # fmt: skip
+                        findings=tuple(findings), band_percent=100.0 * band, obstacle=designed.obstacle, typed=typed)  # fmt: skip
     gains = designed.gains
     if settings is not None and settings.setpoint_weight is not None:
         gains = replace(gains, setpoint_weight=_weight(plant, gains, goal, scan, band))
     shown, keyed = entered(gains, settings, digits)
     share = found.probability
     if share is not None and keyed != gains:
-        share = Draws(identified.fresh, scan, late=False).share(keyed, goal)
+        share = Draws(identified.fresh, scan, late=False, also=also).share(keyed, goal)
     proposed = side(shown, keyed, share)
     met = _met(found, proposed, goal)
-    findings += _about_rounding(found, proposed, goal)
-    findings += _about_pace(identified, designed.swing, scan)
+    findings += remarks(identified, goal, current, proposed, found, scan_s=scan, limits=limits or {})
     steps = way(plant, present, keyed, settings, digits, scan_s=scan, draws=seen)
     moves = tuple(Move(side=side(*step.keyed, None, quick=True), text=step.text) for step in steps.steps)
     findings += steps.findings
@@ -241,13 +244,15 @@ def _also(goal: Goal, scan: float | None, band: float) -> Also | None:
     if goal.overshoot_percent is None and goal.settling_s is None:
         return None
 
-    def holds(plant: Plant, gains: Gains) -> bool:
-        figures = step_figures(plant, gains, scan_s=scan, band=band)
+    def holds(plants: Sequence[Plant], gains: Gains) -> NDArray[np.bool_]:
+        figures = step_figures(plants, gains, scan_s=scan, band=band)
         if figures is None:
-            return False
+            return np.zeros(len(plants), dtype=bool)
         overshoot, settling = figures
-        within = goal.overshoot_percent is None or overshoot <= goal.overshoot_percent
-        return within and (goal.settling_s is None or settling <= goal.settling_s)
+        within = np.ones(len(plants), dtype=bool)
+        if goal.overshoot_percent is not None:
+            within &= overshoot <= goal.overshoot_percent
+        return within if goal.settling_s is None else within & (settling <= goal.settling_s)
 
     return holds
 
@@ -257,8 +262,8 @@ def _weight(plant: Plant, gains: Gains, goal: Goal, scan: float | None, band: fl
     most = _WEIGHT_OVERSHOOT if goal.overshoot_percent is None else goal.overshoot_percent
 
     def good(weight: float) -> bool:
-        figures = step_figures(plant, replace(gains, setpoint_weight=weight), scan_s=scan, band=band)
-        return figures is not None and figures[0] <= most
+        figures = step_figures([plant], replace(gains, setpoint_weight=weight), scan_s=scan, band=band)
+        return figures is not None and bool(figures[0][0] <= most)
 
     if good(1.0):
         return 1.0
@@ -274,30 +279,3 @@ def _met(found: Probable, proposed: Side, goal: Goal) -> bool:
         return False
     share = proposed.probability_of_target
     return share is None or goal.confidence is None or share >= goal.confidence
-
-
-def _about_pace(identified: Identified, swing: Swing | None, scan: float | None) -> list[Finding]:
-    """Say so when the proposed loop is faster than the record could show."""
-    if identified.record is None or swing is None or not len(swing.roots):
-        return []
-    interval = identified.record.sample_interval_s
-    pace = 1.0 / max(float(np.max(np.abs(swing.roots[:2]))), 1e-300)
-    if pace >= _ROWS_PER_PACE * interval or (scan is not None and scan >= interval):
-        return []
-    text = (
-        f"The proposed loop acts within {pace:.2g} s, and the record has a row only every {interval:.2g} s: what the plant does "
-        "so fast was not seen. Record faster, or hold the gain back with --at-most, before these settings are believed."
-    )
-    return [Finding(code="faster_than_record", severity="warning", text=text)]
-
-
-def _about_rounding(found: Probable, proposed: Side, goal: Goal) -> list[Finding]:
-    if found.probability is None or proposed.probability_of_target is None or goal.confidence is None:
-        return []
-    if proposed.probability_of_target >= goal.confidence or found.probability < goal.confidence:
-        return []
-    text = (
-        f"Rounded to what the screen takes, the settings meet the target with {100 * proposed.probability_of_target:.0f} %, "
-        f"not {100 * found.probability:.0f} %: key in more digits if the controller takes them."
-    )
-    return [Finding(code="rounding_costs", severity="warning", text=text)]

@@ -80,7 +80,13 @@ def peak_sensitivity(plant: Plant, knobs: Knobs, row: Array) -> float:
     grid = grid_of(plant)
     fine = np.geomspace(grid[0], grid[-1], _FINE)
     back = np.abs(1.0 + (knobs.action(1j * fine) @ row) * plant_at(plant, 1j * fine))
-    return float(1.0 / max(back.min(), 1e-15))
+    least = float(back.min())
+    if len(plant.numerator) == len(
+        plant.denominator
+    ):  # it answers at once: the loop gain does not fall at high frequencies
+        high = abs(plant.numerator[0] / plant.denominator[0]) * (row[0] + (row[2] / knobs.filter_s if row[2] else 0.0))
+        least = min(least, abs(1.0 - float(high)))
+    return 1.0 / max(least, 1e-15)
 
 
 def stable_of(plant: Plant, goal: Goal, gains: Array, filter_s: float) -> NDArray[np.bool_]:

@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import replace
 
 import numpy as np
+from numpy.typing import NDArray
 
 from loopfit.core.arrays import Array
 from loopfit.core.errors import UsageError
@@ -27,7 +28,8 @@ _UNSEEN, _FULL = 0.02, 0.1
 _POLISH = (0.05, 0.02, 0.007, 0.002)
 _SENSITIVITY_SLACK = 1.0005
 
-Also = Callable[[Plant, Gains], bool]  # a further demand on the fitted plant: overshoot, settling time
+# a further demand, on each of some plants: overshoot, settling time
+Also = Callable[[Sequence[Plant], Gains], NDArray[np.bool_]]
 
 
 class Search:
@@ -40,6 +42,7 @@ class Search:
         half = 0.0 if scan_s is None else 0.5 * scan_s + (scan_s if late else 0.0)
         self.true_plant, self.goal, self.scan_s, self.late = plant, goal, scan_s, late
         self.plant = slower(plant, half)
+        _check_pace(self.plant, goal)
         self.own_filter = 0.0
         if goal.derivative:
             self.own_filter = filter_s if filter_s else _FILTER_SHARE * (plant.dead_time_s + family.fast_lag(plant))
@@ -93,12 +96,16 @@ class Search:
         except UsageError:
             return None
 
+    def meets_demands(self, row: Array) -> bool:
+        """Tell whether the true plant meets what is demanded besides the damping."""
+        return self.also is None or bool(self.also([self.true_plant], self.gains_of(row))[0])
+
     def best(self, damping: float, accept: Callable[[Array], bool] | None = None) -> tuple[Array, Array] | None:
         """Return the settings (3,) of most worth in the family that pass, and how they were made; None without any."""
         wanted = accept or (lambda row: self.passes(row, damping))
 
         def accept_all(row: Array) -> bool:
-            return wanted(row) and (self.also is None or self.also(self.true_plant, self.gains_of(row)))
+            return wanted(row) and self.meets_demands(row)
 
         found = self._first(self.candidates(max(damping, 0.02)), accept_all)
         if found is None:
@@ -196,3 +203,16 @@ def slower(plant: Plant, extra: float) -> Plant:
     if plant.rational is not None:
         return Plant.of_transfer(replace(plant.rational, dead_time_s=dead))
     return replace(plant, dead_time_s=dead)
+
+
+def _check_pace(plant: Plant, goal: Goal) -> None:
+    """Refuse a plant that nothing holds back: every gain would do, and the largest be proposed."""
+    if plant.dead_time_s > 0 or np.any(np.abs(np.roots(plant.denominator)) > 0):
+        return
+    if not plant.integrating:
+        raise UsageError("a plant without lag, dead time or integration follows at once: there is no loop to tune")
+    if "gain" not in goal.at_most:
+        raise UsageError(
+            "an integration without lag or dead time allows any gain: give the scan interval (--scan), the dead time, or the largest "
+            "gain (--at-most gain=...)"
+        )

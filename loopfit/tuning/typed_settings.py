@@ -2,6 +2,10 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
+import numpy as np
+
 from loopfit.core.errors import UsageError
 from loopfit.core.finding import Finding
 from loopfit.identify.identified import Identified
@@ -9,6 +13,8 @@ from loopfit.identify.typed import TypedCheck, check_typed
 from loopfit.loop.settings import Settings
 
 _THINNED = 1.2
+_EXPLAINED = 0.98
+_ROWS = 4_000
 
 
 def typed_of(identified: Identified, settings: Settings | None) -> TypedCheck | None:
@@ -20,12 +26,34 @@ def typed_of(identified: Identified, settings: Settings | None) -> TypedCheck | 
         return None
     if settings.scan_s is not None and record.sample_interval_s > _THINNED * settings.scan_s:
         return None  # the rows between, by which the output followed, were not recorded
+    # a few thousand rows about the step say as much as all of a long record
+    first = int(np.argmax(np.diff(record.setpoint.values, prepend=record.setpoint.values[0]) != 0))
+    rows = slice(max(first - _ROWS // 8, 0), max(first - _ROWS // 8, 0) + _ROWS)
+    columns = (record.time, record.setpoint.values, record.measurement.values, record.output.values)
     try:
-        return check_typed(
-            record.time, record.setpoint.values, record.measurement.values, record.output.values, settings
-        )
+        found = check_typed(*(column[rows] for column in columns), settings)
     except UsageError:  # uneven rows: nothing to check against
         return None
+    if found.verdict == "differ" and not _makes_sense(found):
+        text = "the typed settings cannot be checked: the recorded output does not follow from the recorded measurement by any controller of this form"
+        return replace(found, verdict="cannot be checked", text=text)
+    return found
+
+
+def _makes_sense(found: TypedCheck) -> bool:
+    """Tell whether what was found could be a controller: terms of one sign, and the output explained."""
+    gains = found.found.gains if isinstance(found.found, Settings) else found.found
+    if gains is not None and (gains.kp * gains.kd < 0 or gains.kp * gains.ki < 0):
+        return False
+    return found.r_squared is None or found.r_squared > _EXPLAINED
+
+
+def refusal_of(typed: TypedCheck) -> str:
+    """Return why nothing is proposed while the typed settings are not those that act."""
+    return (
+        f"{typed.text.rstrip('.')}; nothing is proposed until that is settled: type what was in the controller while the record "
+        "was made (correct the entry, or give the settings of that time)"
+    )
 
 
 def about_typed(typed: TypedCheck | None, identified: Identified) -> list[Finding]:

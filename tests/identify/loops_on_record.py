@@ -80,7 +80,9 @@ def loop_on_record(
         )  # fmt: skip
         scans = rows // rows_a_scan
         step = log_uniform(rng, 0.5, 20.0)
-        setpoint = np.where(np.arange(scans) < 0.08 * scans, 0.0, np.where(np.arange(scans) < 0.55 * scans, step, 0.4 * step))
+        setpoint = np.where(
+            np.arange(scans) < 0.08 * scans, 0.0, np.where(np.arange(scans) < 0.55 * scans, step, 0.4 * step)
+        )
         noise = step * log_uniform(rng, 1e-3, 1e-2) * rng.standard_normal(scans)
         fine = step * log_uniform(rng, 2e-4, 1e-3)
         limits = None

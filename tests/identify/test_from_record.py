@@ -8,8 +8,9 @@ import numpy as np
 import pytest
 from recorded_loops import PLANTS, SCAN, SETTINGS, automatic, figures, record_of
 
-from loopfit.analysis.analyze import analyze_record
+from loopfit.analysis.analyze import analyze, analyze_record
 from loopfit.core.errors import RecordError
+from loopfit.core.finding import Finding
 from loopfit.identify.from_record import identify
 from loopfit.loop.simulate import simulate
 from loopfit.record.read import record_from_arrays
@@ -53,6 +54,19 @@ def test_a_setpoint_that_follows_the_measurement_in_manual() -> None:
         window_s=None,
     )
     assert identify(record).how == "open step"
+
+
+def test_a_step_that_the_user_states() -> None:
+    run = manual("two lags")
+    given = analyze(time=run.time, measurement=run.measurement, step_at_s=20.0, step_from=30.0, step_to=32.0)  # type: ignore[attr-defined]
+    found = identify(given)
+    assert found.how == "open step"
+    assert figures(found.plant) == pytest.approx(figures(PLANTS["two lags"]), rel=0.05)
+    closed = automatic("two lags", seed=32)
+    given = analyze(time=closed.time, measurement=closed.measurement, step_at_s=20.0, step_from=50.0, step_to=52.0)
+    found = identify(given, settings=SETTINGS["two lags"], draws=5, fresh=5)
+    assert found.how == "through the loop"
+    assert figures(found.plant) == pytest.approx(figures(PLANTS["two lags"]), rel=0.1)
 
 
 def test_two_sets_of_draws_that_repeat_and_differ() -> None:
@@ -115,6 +129,50 @@ def test_rows_that_do_not_fit_the_scan() -> None:
     record = record_of(automatic("two lags", seed=36), output=False)
     with pytest.raises(RecordError, match="whole multiple"):
         identify(record, settings=replace(SETTINGS["two lags"], scan_s=0.3))
+
+
+def test_what_the_analysis_warned_of_is_carried_over() -> None:
+    analysis = analyze_record(record_of(manual("two lags", rows=75), setpoint=False))  # type: ignore[arg-type]
+    warned = [finding for finding in analysis.findings if finding.severity != "note"]
+    assert warned  # the record ends 17 s after the step, the lags are 11 s
+    found = identify(analysis)
+    assert all(finding in found.findings for finding in warned)
+
+
+def test_a_measurement_at_the_end_of_its_range() -> None:
+    record = record_of(automatic("two lags", seed=37))
+    assert record.measurement is not None
+    top = 50.0 + 0.9 * np.ptp(record.measurement.values)
+    flat = replace(record.measurement, values=np.minimum(record.measurement.values, top))
+    found = identify(replace(record, measurement=flat), draws=5, fresh=5)
+    assert "measurement_saturated" in [finding.code for finding in found.findings]
+    assert "measurement_saturated" not in [finding.code for finding in identify(record, draws=5, fresh=5).findings]
+
+
+@pytest.mark.parametrize(("told", "severity"), [(True, "note"), (False, "warning")])
+def test_an_output_at_its_limit(told: bool, severity: str) -> None:
+    limits = (0.0, 31.5)
+    record = record_of(automatic("two lags", seed=38, limits=limits), every=2)
+    settings = replace(SETTINGS["two lags"], output_limits=limits if told else None)
+    found = identify(record, settings=settings, draws=5, fresh=5)
+    assert found.how == "through the loop"
+    assert [finding.severity for finding in found.findings if finding.code == "output_clamped"] == [severity]
+
+
+def test_what_reading_warned_of_is_carried_over() -> None:
+    warning = Finding(code="doubtful", severity="warning", text="Something was odd.")
+    note = Finding(code="harmless", severity="note", text="Something was usual.")
+    record = replace(record_of(automatic("two lags", seed=39)), findings=(warning, note))
+    found = identify(record, draws=5, fresh=5)
+    assert warning in found.findings
+    assert note not in found.findings
+
+
+def test_what_is_said_without_a_scan_interval() -> None:
+    found = identify(record_of(automatic("two lags", seed=40)), draws=5, fresh=5)
+    text = next(finding.text for finding in found.findings if finding.code == "output_once_a_row")
+    assert "taken as continuous" in text  # as the settings are echoed
+    assert "once a row" not in text
 
 
 def test_figures_of_a_known_plant() -> None:

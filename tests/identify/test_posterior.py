@@ -99,7 +99,7 @@ def test_a_bent_likelihood() -> None:
 def ranks(seed: int, records: int, *, through: bool, noise: float = 0.01) -> np.ndarray:
     """Share of the draws below the truth, for damping ratio, gain and dead time, over records of random loops."""
     rng = np.random.default_rng(seed)
-    scan, rows = 0.05, 500
+    scan, rows = 0.08, 300
     out = []
     for _ in range(records):
         zeta, dead = math.exp(rng.uniform(math.log(0.3), math.log(1.5))), rng.uniform(0.15, 1.5)
@@ -129,7 +129,7 @@ def ranks(seed: int, records: int, *, through: bool, noise: float = 0.01) -> np.
                 interval_s=None,
                 window_s=None,
             )
-            draws = draws_of(fitted(trace_of(record, 2.0)), 100, rng)
+            draws = draws_of(fitted(trace_of(record, 40 * scan)), 100, rng)
         values = np.array([figures(draw) for draw in draws])[:, [1, 0, 3]]
         truth = np.array([zeta, 1.0, dead])
         out.append((values < truth).mean(axis=0) + 0.5 * (values == truth).mean(axis=0))

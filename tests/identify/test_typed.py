@@ -4,16 +4,14 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import replace
 from typing import Any
 
 import numpy as np
 import pytest
-from loops_on_record import OnRecord, loop_on_record, rounded
+from loops_on_record import OnRecord, loop_on_record
 
 from loopfit.core.errors import UsageError
 from loopfit.identify.typed import check_typed
-from loopfit.loop.gains import Gains
 from loopfit.loop.settings import Settings
 
 Make = Callable[[OnRecord], Settings]
@@ -42,9 +40,7 @@ def series_typed(loop: OnRecord) -> Settings:
     with_filter = loop.integral_s - loop.filter_s
     root = math.sqrt(max(with_filter**2 - 4.0 * loop.integral_s * loop.derivative_s, 0.0))
     long, short = 0.5 * (with_filter + root) + loop.filter_s, 0.5 * (with_filter - root)
-    return typed_as(
-        loop, gain=loop.gain * long / loop.integral_s, integral_time_s=long, derivative_time_s=short
-    )
+    return typed_as(loop, gain=loop.gain * long / loop.integral_s, integral_time_s=long, derivative_time_s=short)
 
 
 def ideal_typed_as_series(loop: OnRecord) -> Settings:
@@ -139,7 +135,13 @@ def means_something_else(loop: OnRecord, typed: Settings) -> bool:
     return bool(np.any(np.abs(got - true) > 0.1 * np.abs(true)))
 
 
-OTHERWISE = ("derivative on the error", "derivative on the measurement", "setpoint weight of 0.3", "another filter", "scan twice as long")
+OTHERWISE = (
+    "derivative on the error",
+    "derivative on the measurement",
+    "setpoint weight of 0.3",
+    "another filter",
+    "scan twice as long",
+)
 
 
 def recognised(kind: str, rng: np.random.Generator) -> tuple[bool, str]:
@@ -147,7 +149,10 @@ def recognised(kind: str, rng: np.random.Generator) -> tuple[bool, str]:
     while True:
         loop = loop_on_record(rng, **options)
         typed = make(loop)
-        if kind == "series typed as ideal" and (loop.integral_s - loop.filter_s) ** 2 < 4.2 * loop.integral_s * loop.derivative_s:
+        if (
+            kind == "series typed as ideal"
+            and (loop.integral_s - loop.filter_s) ** 2 < 4.2 * loop.integral_s * loop.derivative_s
+        ):
             continue  # no series form has these gains
         if kind in OTHERWISE or means_something_else(loop, typed):
             break
@@ -156,3 +161,138 @@ def recognised(kind: str, rng: np.random.Generator) -> tuple[bool, str]:
 
     right = check.verdict == "differ" and re.search(pattern, check.text) is not None
     return right, f"{check.verdict}: {check.text}"
+
+
+def agreed(rng: np.random.Generator, j: int) -> str:
+    """Verdict on settings that are right: PI and PID, the derivative on either, with and without setpoint weight."""
+    weight, on_error = (0.4, 1.0, 1.0)[j % 3], j % 4 == 3
+    loop = loop_on_record(rng, derivative=bool(j % 2), on_error=on_error, weight=weight)
+    typed = typed_as(
+        loop, setpoint_weight=None if weight == 1.0 else weight, derivative_on="error" if on_error else "measurement"
+    )
+    return check_typed(*loop.columns, typed).verdict
+
+
+@pytest.mark.parametrize("kind", KINDS)
+def test_a_mix_up_is_named(kind: str) -> None:
+    rng = np.random.default_rng([7, list(KINDS).index(kind)])
+    for _ in range(2):
+        right, text = recognised(kind, rng)
+        assert right, text
+
+
+def test_right_settings_agree() -> None:
+    rng = np.random.default_rng(8)
+    assert [agreed(rng, j) for j in range(12)] == ["agree"] * 12
+
+
+@pytest.mark.study
+@pytest.mark.parametrize("kind", KINDS)
+def test_study_of_a_mix_up(kind: str) -> None:
+    """The figure asked for: at least 95 % of 50 loops."""
+    rng = np.random.default_rng([9, list(KINDS).index(kind)])
+    results = [recognised(kind, rng) for _ in range(50)]
+    assert sum(right for right, _ in results) >= 48, [text for right, text in results if not right]
+
+
+@pytest.mark.study
+def test_study_of_false_alarms() -> None:
+    """At most 2 % of right settings may be said to differ; nearly all are to be said to agree."""
+    rng = np.random.default_rng(10)
+    verdicts = [agreed(rng, j) for j in range(400)]
+    assert verdicts.count("differ") <= 8
+    assert verdicts.count("agree") >= 380
+
+
+def spoiled(loop: OnRecord, how: str, rng: np.random.Generator) -> tuple[np.ndarray, ...]:
+    """The record after a recorder thinned it, or ran a first-order filter of three scans over a column."""
+    from scipy.signal import lfilter
+
+    time, setpoint, measurement, output = loop.columns
+    if how == "every fifth row":
+        return tuple(column[::5] for column in loop.columns)
+    if how == "every second row":
+        return tuple(column[::2] for column in loop.columns)
+    if how == "noisy output":
+        return time, setpoint, measurement, output + 0.003 * np.ptp(output) * rng.standard_normal(len(time))
+    column = measurement if how == "filtered measurement" else output
+    smooth = column[0] + lfilter([0.25], [1.0, -0.75], column - column[0])
+    return (time, setpoint, smooth, output) if how == "filtered measurement" else (time, setpoint, measurement, smooth)
+
+
+SPOILED = ("every fifth row", "every second row", "filtered measurement", "filtered output", "noisy output")
+
+
+def wrongly_blamed(how: str, rng: np.random.Generator, count: int) -> list[str]:
+    """Sentences on right settings that say they differ."""
+    out = []
+    for j in range(count):
+        loop = loop_on_record(rng, derivative=bool(j % 2))
+        check = check_typed(*spoiled(loop, how, rng), typed_as(loop))
+        out += [check.text] if check.verdict == "differ" else []
+    return out
+
+
+@pytest.mark.parametrize("how", SPOILED)
+def test_a_spoiled_record_blames_no_settings(how: str) -> None:
+    assert wrongly_blamed(how, np.random.default_rng(11), 6) == []
+
+
+@pytest.mark.study
+@pytest.mark.parametrize("how", SPOILED)
+def test_study_of_spoiled_records(how: str) -> None:
+    blamed = wrongly_blamed(how, np.random.default_rng(12), 100)
+    assert len(blamed) <= 4, blamed
+
+
+def test_what_was_found_is_in_the_form_that_was_typed() -> None:
+    loop = loop_on_record(np.random.default_rng(3))
+    check = check_typed(*loop.columns, typed_as(loop, integral_time_s=loop.integral_s / 60.0))
+    assert isinstance(check.found, Settings)
+    # the recorder's rounding, a thousandth of the step, over the scans of a record: well within 1 %
+    assert check.found.gain == pytest.approx(loop.gain, rel=0.01)
+    assert check.found.integral_time_s == pytest.approx(loop.integral_s, rel=0.01)
+    assert check.found.derivative_time_s == pytest.approx(loop.derivative_s, rel=0.01)
+    assert check.filter_s == pytest.approx(loop.filter_s, rel=0.1)
+    assert check.lag_scans == 0
+
+
+@pytest.mark.parametrize("lag", [-3, -1, 1, 2])
+def test_an_output_stored_some_scans_apart(lag: int) -> None:
+    loop = loop_on_record(np.random.default_rng(4))
+    time, setpoint, measurement, output = loop.columns
+    shifted = np.roll(output, lag)[3:-3]
+    check = check_typed(time[3:-3], setpoint[3:-3], measurement[3:-3], shifted, typed_as(loop))
+    assert check.verdict == "agree"
+    assert check.lag_scans == lag
+
+
+def test_manual_cannot_be_checked() -> None:
+    loop = loop_on_record(np.random.default_rng(5))
+    still = np.full(len(loop.time), 3.0)
+    check = check_typed(loop.time, loop.setpoint, loop.measurement, still, typed_as(loop))
+    assert check.verdict == "cannot be checked"
+    assert "manual" in check.text
+    assert check.found is None
+
+
+def test_an_output_that_obeys_something_else_cannot_be_checked() -> None:
+    loop = loop_on_record(np.random.default_rng(6))
+    other = np.cumsum(np.random.default_rng(1).standard_normal(len(loop.time)))
+    check = check_typed(loop.time, loop.setpoint, loop.measurement, other, typed_as(loop))
+    assert check.verdict == "cannot be checked"
+
+
+def test_rows_that_cannot_be_used() -> None:
+    loop = loop_on_record(np.random.default_rng(5))
+    time = loop.time.copy()
+    time[7] += 0.4 * loop.scan_s
+    with pytest.raises(UsageError, match="even in time"):
+        check_typed(time, loop.setpoint, loop.measurement, loop.output, typed_as(loop))
+    with pytest.raises(UsageError, match="one length"):
+        check_typed(loop.time[1:], loop.setpoint, loop.measurement, loop.output, typed_as(loop))
+    hole = np.where(np.arange(len(loop.time)) == 5, np.nan, loop.measurement)
+    with pytest.raises(UsageError, match="finite"):
+        check_typed(loop.time, loop.setpoint, hole, loop.output, typed_as(loop))
+    short = [column[:10] for column in loop.columns]
+    assert check_typed(*short, typed_as(loop)).verdict == "cannot be checked"

@@ -17,6 +17,7 @@ LEAST_SECONDS = {"nominal": 0.1, "90 %": 1.0}
 _BINS = (0.0, 0.1, 0.3, 0.5, 0.7, 0.8, 0.88, 0.92, 0.95, 0.98, 1.0)
 _ABOUT_NINETY = (0.88, 0.92)
 _LISTED = 60
+_CHANCE = 1e-3
 
 
 def table(items: Sequence[Item], seed: int) -> list[str]:
@@ -64,6 +65,15 @@ def standard_error(stated: np.ndarray) -> float:
     """Return that of a share whose events have these probabilities, each counted no surer than 99.5 % (200 draws)."""
     known = np.clip(stated, 0.005, 0.995)
     return float(np.sqrt((known * (1.0 - known)).sum()) / len(known))
+
+
+def _by_chance(outcomes: Sequence[Outcome]) -> bool:
+    """Tell whether so few hold by chance, were the stated probabilities right (no surer than 99.5 %)."""
+    from scipy.stats import binom
+
+    met = [o for o in outcomes if o.met]
+    fair = float(np.mean([min(o.stated or 0.0, 0.995) for o in met]))
+    return bool(binom.cdf(sum(o.holds for o in met), len(met), fair) > _CHANCE)
 
 
 def _kept(outcomes: Sequence[Outcome]) -> list[str]:
@@ -139,7 +149,9 @@ def _times(items: Sequence[Item]) -> list[str]:
     asked = _asked([item for item in items if isinstance(item, Outcome)])
     rows = [(f"plant from {way}", [i.seconds for i in known if i.way == way]) for way in WAYS]
     rows += [(f"nominal, {d:g} {t}", [s.seconds for s in swept if (s.damping, s.terms) == (d, t)]) for d, t in TARGETS]
-    rows += [(f"90 %, forecast, {d:g} {t}", [o.seconds for o in asked if (o.damping, o.terms) == (d, t)]) for d, t in TARGETS]
+    rows += [
+        (f"90 %, forecast, {d:g} {t}", [o.seconds for o in asked if (o.damping, o.terms) == (d, t)]) for d, t in TARGETS
+    ]
     whole = {item.number: item.seconds for item in known}
     rows.append(("whole, without reading", [whole[o.number] + o.seconds for o in asked if o.number in whole]))
     lines = ["", "Processor time, s", f"{'':<40}{'n':>6}{'median':>9}{'p90':>9}{'most':>9}"]
@@ -165,7 +177,7 @@ def goals(items: Sequence[Item]) -> list[str]:
     outcomes = [item for item in items if isinstance(item, Outcome)]
     swept = [item for item in items if isinstance(item, Swept)]
     asked = _asked(outcomes)
-    lines = ["", "Goals"]
+    lines = ["", "Goals (?: that far from the goal by chance more often than 1 in 1000)"]
 
     def goal(text: str, misses: list[str]) -> None:
         lines.append(text)
@@ -175,7 +187,8 @@ def goals(items: Sequence[Item]) -> list[str]:
     for name, some in _groups(asked):
         share, stated, error = promise(some)
         if not math.isnan(share):
-            misses += [f"{name}: {share:.3f} of {stated:.3f}"] if share < stated - 2.0 * error else []
+            doubt = "?" if _by_chance(some) else ""
+            misses += [f"{name}: {share:.3f}{doubt} of {stated:.3f}"] if share < stated - 2.0 * error else []
             low += [f"{name}: {share:.3f}"] if share < LEAST_MET else []
     goal("Holds on the true plant as often as stated, less two standard errors, whenever said to be met", misses)
     goal(f"Never under {LEAST_MET:.0%}", low)
@@ -230,7 +243,11 @@ def _failures(items: Sequence[Item], seed: int) -> list[str]:
         for s in items
         if isinstance(s, Swept) and s.ratio is not None and s.ratio < LEAST_RATIO
     ][:_LISTED]
-    sure = [o for o in items if isinstance(o, Outcome) and o.design == "90 %" and not o.met and (o.stated or 0.0) >= LEAST_MET]
+    sure = [
+        o
+        for o in items
+        if isinstance(o, Outcome) and o.design == "90 %" and not o.met and (o.stated or 0.0) >= LEAST_MET
+    ]
     lines += [
         f"  {o.number} {o.plant}; {o.way}; {o.damping:g} {o.terms}: said not to be met, but stated {o.stated:.3f} "
         f"({o.note}); true swing {100.0 * o.swing:.2f} %, visible {o.visible:.3f}"

@@ -66,14 +66,16 @@ def test_records_have_the_noise_they_should(number: int) -> None:
 
 
 def test_the_swing_that_judges_is_the_swing_of_the_simulation() -> None:
-    """loopfit's roots against the swing back seen in the answer to a load, for the loops that records are made in."""
-    checked = 0
-    for number in range(1, 24, 2):
+    """loopfit's roots against the swing back beyond rest in the answer to a load, for the loops that records are made in.
+
+    Where a slow real mode lifts the swings off the rest line it is smaller than they are: the damping that judges may be
+    stricter, never kinder; where one pair is slowest and largest by far the two are the same (no real mode as slow as the swing).
+    """
+    same = 0
+    for number in range(1, 60, 2):
         case = case_of(9, number)
         gains = case.settings.gains
         swing = sampled_swing(case.random.plant, gains, case.scan_s)
-        if not 0.05 < swing.visible_swing < 0.6 or len(swing.roots) < 1:
-            continue
         zero = np.zeros(12000)
         controller = Controller(kp=gains.kp, ki=gains.ki, kd=gains.kd, filter_s=gains.filter_s)
         y, _ = Scanned(case.random.plant, case.scan_s).run(
@@ -82,11 +84,15 @@ def test_the_swing_that_judges_is_the_swing_of_the_simulation() -> None:
         y = y * math.copysign(1.0, y[int(np.argmax(np.abs(y)))])
         top = int(np.argmax(y))
         back = float(-y[top:].min() / y[top])
-        damping = -math.log(max(back, 1e-6)) / math.hypot(math.pi, math.log(max(back, 1e-6)))
-        # of 200 loops the two differed by .08 at the 90th percentile and .2 at most (feasibility study)
-        assert swing.visible_damping == pytest.approx(damping, abs=0.2)
-        checked += 1
-    assert checked >= 4
+        assert swing.visible_swing >= back - 0.01
+        slowest = swing.roots[0]
+        real = swing.roots[swing.roots.imag == 0.0].real
+        if slowest.imag > 0.0 and back > 0.01 and np.all(-real > 0.5 * abs(slowest)) and swing.weights[1:].max() < 0.1:
+            seen = -math.log(back) / math.hypot(math.pi, math.log(back))
+            # 90 % of loops within that in the feasibility study: other modes have not quite gone at the peak
+            assert swing.visible_damping == pytest.approx(seen, abs=0.08)
+            same += 1
+    assert same >= 4
 
 
 def test_random_plants_are_those_of_the_study() -> None:
