@@ -116,16 +116,17 @@ def checked_by_levels(found: Identified, record: Record, rng: np.random.Generato
     gains = [plant.gain for plant in (*found.draws, *found.fresh)] or [found.plant.gain]
     low, high = (float(bound) for bound in np.quantile(gains, _TAILS))
     ratio = found.plant.gain / gain
+    near = 1.0 / _FAR <= ratio <= _FAR
     meet = low <= gain + half and gain - half <= high
-    if not meet and not 1.0 / _FAR <= ratio <= _FAR:
+    if not meet and not near:
         return replace(found, refused=levels_refuse(found.plant.gain, (low, high), gain, half))
-    if low <= gain <= high:
+    if near and low <= gain <= high:
         return replace(found, findings=(*found.findings, levels_agree(found.plant.gain, gain)))
     return replace(
         found,
         draws=_half_with_gain(found.draws, found.plant.gain, gain, half, rng),
         fresh=_half_with_gain(found.fresh, found.plant.gain, gain, half, rng),
-        findings=(*found.findings, levels_differ(found.plant.gain, gain)),
+        findings=(*found.findings, levels_differ(found.plant.gain, gain, meet=near and meet)),
     )
 
 

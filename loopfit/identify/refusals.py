@@ -176,10 +176,10 @@ def levels_agree(fitted: float, gain: float) -> Finding:
     return Finding(code="levels_agree", severity="note", text=text)
 
 
-def levels_differ(fitted: float, gain: float) -> Finding:
-    """The levels at rest give another gain than the fit, within what may pass."""
+def levels_differ(fitted: float, gain: float, *, meet: bool) -> Finding:
+    """The levels at rest give another gain than the fit, within what may pass; `meet`: the intervals of both do."""
     text = (
         f"The plant gain fitted through the settings as typed is {fitted:.3g}; the recorded levels at rest give {gain:.3g}. Half of "
         "the plants that the record allows are taken with the one, half with the other."
     )
-    return Finding(code="levels_differ", severity="warning", text=text)
+    return Finding(code="levels_differ", severity="note" if meet else "warning", text=text)

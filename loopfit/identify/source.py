@@ -81,7 +81,9 @@ def _one(source: Any, settings: Settings | None, confidence: float, reading: Map
         record = source.record if isinstance(source, Analysis) else source
         return replace(identify(source, settings=settings, confidence=confidence), record=record)
     if not isinstance(source, str | os.PathLike):
-        raise UsageError(f"a source is a file, a Record, an Analysis, a Plant or a Transfer, not {type(source).__name__}")
+        raise UsageError(
+            f"a source is a file, a Record, an Analysis, a Plant or a Transfer, not {type(source).__name__}"
+        )
     given = {name: value for name, value in reading.items() if value is not None}
     if any(name in given for name in _STEP):
         analysis = analyze(source, **given)

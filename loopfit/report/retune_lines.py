@@ -160,6 +160,22 @@ def band_of(values: Array, confidence: float) -> Band:
     return Band(value=value, low=np.minimum(low, value), high=np.maximum(high, value))
 
 
+def in_view(band: Band, low: float, high: float) -> Band:
+    """Return the curve and its bounds no further than one height outside a view; a curve that runs away ends where it leaves."""
+    room = high - low
+    least, most = low - room, high + room
+    outside = (band.value <= least) | (band.value >= most)
+    gone = band.value.size
+    if outside[-(band.value.size // 10 + 1) :].any():
+        gone = int(np.flatnonzero(outside)[0]) + 1
+    kept = np.arange(band.value.size) < gone
+
+    def cut(values: Array) -> Array:
+        return np.where(kept, np.clip(values, least, most), np.nan)
+
+    return Band(value=cut(band.value), low=cut(band.low), high=cut(band.high))
+
+
 def _until(time: Array, curves: SideCurves) -> float:
     """Return until when there is something to see, s."""
     ends = []

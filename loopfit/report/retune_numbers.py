@@ -51,7 +51,7 @@ def quantity_words(
     """Return "0.312 (0.290 to 0.334)"; "-" for a figure that does not exist, `endless` for one that is infinite.
 
     Three significant digits whatever the width of the interval, so that a figure is printed alike with and without
-    it; fewer where `most_decimals` says so, unless that would move the value by more than 2 %. A percentage is one
+    it; fewer where `most_decimals` says so, one decimal more than that where it would move the value by more than 2 %. A percentage is one
     of a change: there decimals count, not digits, and nothing is told beyond 1000.
     """
     if quantity is None:
@@ -80,7 +80,7 @@ def _places(value: float, most: int, percent: bool) -> int:
         return min(_FIGURES - 1, most)
     wanted = _FIGURES - 1 - math.floor(math.log10(abs(value)))
     places = min(wanted, most)
-    while not percent and places < wanted and abs(round(value, places) - value) > _MOVED * abs(value):
+    while not percent and places < min(wanted, most + 1) and abs(round(value, places) - value) > _MOVED * abs(value):
         places += 1
     return max(places, 0)
 

@@ -9,7 +9,9 @@ import numpy as np
 
 from loopfit.core.quantity import Quantity
 from loopfit.loop.plant import Plant
-from loopfit.report.retune_words import LABEL, labelled, quantity_words, record_units
+from loopfit.report.retune_numbers import quantity_words
+from loopfit.report.retune_recorded import record_of, record_units
+from loopfit.report.retune_words import LABEL, labelled
 from loopfit.tuning.result import Retuning
 
 _FEW_DRAWS = 0.9  # of the draws must have a figure for its interval to be shown
@@ -29,8 +31,9 @@ def plant_words(retuning: Retuning) -> str:
     measured, out = record_units(retuning)
     per = f" {measured}/{out}" if measured and out else ""
     source = ""
-    if found.analysis is not None:
-        name = found.analysis.record.source
+    record = record_of(retuning)
+    if record is not None:
+        name = record.source
         source = f" ({'standard input' if name == '-' else name})"
     lines = [labelled("plant", f"{_kind(plant)}, {_HOW[found.how]}{source}")]
     for name, unit, figure, most in (
@@ -47,7 +50,9 @@ def plant_words(retuning: Retuning) -> str:
         words = quantity_words(_spread(value, figure, draws, _confidence(retuning)), most_decimals=most)
         lines.append(f"{'':{LABEL}}{name:19}{words}{unit}")
     if plant.time_constants_s:
-        lags = " and ".join(f"{lag:.3g}" for lag in sorted(plant.time_constants_s, reverse=True))
+        lags = " and ".join(
+            quantity_words(Quantity(lag, lag, lag)) for lag in sorted(plant.time_constants_s, reverse=True)
+        )
         lines.append(
             f"{'':{LABEL}}{'time constants' if len(plant.time_constants_s) > 1 else 'time constant':19}{lags} s"
         )

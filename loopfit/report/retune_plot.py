@@ -16,16 +16,14 @@ from loopfit.report.plot import METADATA, plain_style
 from loopfit.report.plot_figures import FIT
 from loopfit.report.plot_labels import INK, STEP, EndLabel, Panel, end_labels, settle
 from loopfit.report.plot_words import readable
-from loopfit.report.retune_lines import Band, Curves, SideCurves, curves_of
+from loopfit.report.retune_lines import Band, Curves, SideCurves, curves_of, in_view
+from loopfit.report.retune_numbers import figure_words, with_unit
 from loopfit.report.retune_overlay import overlay_of
 from loopfit.report.retune_record import PRESENT, PRESENT_BAND, draw_alone, draw_record, named
-from loopfit.report.retune_numbers import figure_words, with_unit
 from loopfit.report.retune_recorded import record_of, record_units
+from loopfit.report.retune_warnings import first_findings, overshoot_warning, printed_cautions
 from loopfit.report.retune_words import (
-    first_findings,
     key_in_words,
-    overshoot_warning,
-    printed_cautions,
     proposes,
     refusal_words,
     target_words,
@@ -190,24 +188,21 @@ def _response(panel: Panel, curves: Curves, name: str) -> None:
     axes.axhline(0.0, color=INK, lw=0.5, zorder=1)
     axes.axvline(0.0, color=STEP, lw=0.8, zorder=1)
     least, most = _heights(curves, name)
-    outside = 0.5 * (most - least)  # what is beyond is not drawn: a curve that runs away has no end
     for side, colour, allowed, word, width in (
         (curves.present, PRESENT, PRESENT_BAND, "now", 1.5),
         (curves.proposed, FIT, _PROPOSED_BAND, "proposed", 2.1),
     ):
         if side is None:
             continue
-        band: Band = getattr(side, name)
-        low, value, high = (
-            np.clip(each, least - outside, most + outside) for each in (band.low, band.value, band.high)
-        )
-        if not np.array_equal(low, high):
+        band = in_view(getattr(side, name), least, most)
+        if not np.array_equal(band.low, band.high, equal_nan=True):
             axes.fill_between(
-                curves.time, low, high, color=allowed, alpha=0.75, lw=0, zorder=2, label=f"{word}, allowed"
+                curves.time, band.low, band.high, color=allowed, alpha=0.75, lw=0, zorder=2, label=f"{word}, allowed"
             )
-        (line,) = axes.plot(curves.time, value, color=colour, lw=width, zorder=3, label=word)
+        (line,) = axes.plot(curves.time, band.value, color=colour, lw=width, zorder=3, label=word)
         panel.lines.append(line)
-        panel.ends.append(EndLabel(height=float(value[-1]), words=word, colour=colour))
+        end = float(band.value[np.isfinite(band.value)][-1])
+        panel.ends.append(EndLabel(height=end, words=word, colour=colour))
     axes.set_xlim(curves.time[0], curves.time[-1])
     axes.set_ylim(least, most)
     for limit in curves.limits or () if name.endswith("output") else ():
@@ -233,14 +228,16 @@ def _heights(curves: Curves, name: str) -> tuple[float, float]:
 def _reach(side: SideCurves, name: str, size: float | None) -> tuple[float, float]:
     """Return the least and greatest value of a curve and 0, with so much of its band as is not out of all proportion.
 
-    Where the setpoint step has a `size`, no further than so many steps as a loop that holds could take; else what runs
-    away is seen as far as its first fifth.
+    What runs away counts as far as a few setpoint steps of that `size`, without one as far as in its first fifth.
     """
     band: Band = getattr(side, name)
     value = band.value
-    if float(np.abs(value).max()) > _RUNS_AWAY * (size or float(np.abs(value[: value.size // 5]).max()) or 1.0):
-        most = _AWAY * size if size is not None else float(np.abs(value[: value.size // 5]).max())
-        value = np.clip(value, -most, most)
+    far = np.abs(value)
+    early = float(far[: far.size // 5].max())
+    if size is not None and far.max() > _RUNS_AWAY * size:
+        value = np.clip(value, -_AWAY * size, _AWAY * size)
+    elif early > 0.0 and far[-(far.size // 10) :].max() > _RUNS_AWAY * far[: far.size // 2].max():
+        value = np.clip(value, -early, early)
     low, high = min(float(value.min()), 0.0), max(float(value.max()), 0.0)
     room = high - low
     return max(float(band.low.min()), low - 0.3 * room), min(float(band.high.max()), high + 0.3 * room)

@@ -10,6 +10,7 @@ from loopfit.record.record import Record
 from loopfit.report.plot_labels import INK, STEP, EndLabel, Panel
 from loopfit.report.plot_lines import thinned
 from loopfit.report.plot_words import readable
+from loopfit.report.retune_lines import in_view
 from loopfit.report.retune_overlay import Overlay
 from loopfit.report.retune_recorded import record_units
 from loopfit.tuning.result import Retuning
@@ -20,15 +21,19 @@ _FEW_ROWS = 400
 
 def draw_record(panel: Panel, retuning: Retuning, overlay: Overlay) -> None:
     """Draw the recorded step over what the fitted plant does with the present settings."""
-    axes, predicted, view = panel.axes, overlay.predicted, overlay.view_s
+    axes, view = panel.axes, overlay.view_s
     shown = (overlay.recorded_time >= view[0]) & (overlay.recorded_time <= view[1])
+    heights = np.concatenate([overlay.recorded[shown], overlay.setpoint])
+    low, high = float(heights.min()), float(heights.max())
+    room = 0.12 * (high - low)
+    predicted = in_view(overlay.predicted, low - room, high + room)
     dots = overlay.recorded_time.size
     time, values = thinned(overlay.recorded_time, overlay.recorded)
     axes.plot(
         time, values, color=INK, ls="none", marker=".", ms=3.4 if dots <= _FEW_ROWS else 2.0, mew=0, zorder=4,
         label="record",
     )  # fmt: skip
-    if not np.array_equal(predicted.low, predicted.high):
+    if not np.array_equal(predicted.low, predicted.high, equal_nan=True):
         axes.fill_between(
             overlay.time, predicted.low, predicted.high, color=PRESENT_BAND, lw=0, zorder=2, label="predicted, allowed"
         )
@@ -36,18 +41,19 @@ def draw_record(panel: Panel, retuning: Retuning, overlay: Overlay) -> None:
     axes.plot(
         overlay.time, overlay.setpoint, color=STEP, ls="--", lw=1.1, drawstyle="steps-post", zorder=1, label="setpoint"
     )
+    there = np.isfinite(predicted.value)
     panel.ends.extend(
         [
             EndLabel(height=float(overlay.recorded[shown][-1]), words="record", colour=INK, dashes=":"),
             EndLabel(
-                height=float(np.interp(view[1], overlay.time, predicted.value)), words="predicted", colour=PRESENT
+                height=float(np.interp(view[1], overlay.time[there], predicted.value[there])),
+                words="predicted",
+                colour=PRESENT,
             ),
             EndLabel(height=float(overlay.setpoint[-1]), words="setpoint", colour=STEP, dashes="--"),
         ]
     )
-    heights = np.concatenate([overlay.recorded[shown], overlay.setpoint])
-    low, high = float(heights.min()), float(heights.max())
-    axes.set_ylim(low - 0.12 * (high - low), high + 0.12 * (high - low))
+    axes.set_ylim(low - room, high + room)
     axes.set_xlim(max(view[0], overlay.recorded_time[0]), min(view[1], overlay.recorded_time[-1]))
     axes.set_title(
         "Whether to believe it: the record, and what the fitted plant does with the present settings",

@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-import math
 import re
 
-from loopfit.core.quantity import Quantity
+from loopfit.report.retune_numbers import figure_words
 from loopfit.report.retune_plant import plant_words
+from loopfit.report.retune_recorded import record_units
+from loopfit.report.retune_stages import stages_words
+from loopfit.report.retune_warnings import first_findings, overshoot_warning, printed_cautions
 from loopfit.report.retune_words import (
-    NOT_SEEN,
     action_words,
     change_words,
     entries,
@@ -18,20 +19,15 @@ from loopfit.report.retune_words import (
     form_words,
     gain_unit,
     labelled,
-    overshoot_warning,
     proposes,
-    quantity_words,
-    record_units,
     refusal_words,
     share_words,
     target_words,
 )
-from loopfit.tuning.result import LoopFigures, Move, Retuning, Side
+from loopfit.tuning.result import Retuning, Side
 
 _NAME, _CELL = 40, 30
 _ORDER = ("error", "warning", "note")
-_UNSEEN = 0.5  # %: swing that nobody sees
-_MORE_SWING, _LEAST_STOP, _MOST_STOP = 10.0, 10.0, 95.0  # %: when a stage is to be taken back
 _STICKS = re.compile(r"stick|stiction|friction|lost motion|play|dead ?band", re.IGNORECASE)
 _STAIRCASE = (
     "with the loop in manual, a staircase: move the output in small equal steps, several up and then several down, "
@@ -59,7 +55,7 @@ def page(retuning: Retuning) -> str:
         parts += [plant_words(retuning), _compared(retuning)]
     parts.append(_typed(retuning))
     if shown:
-        parts.append(_stages(retuning))
+        parts.append(stages_words(retuning))
         if retuning.comparisons:
             parts.append(_comparisons(retuning))
     parts += [_findings(retuning), _cautions(retuning) if shown else ""]
@@ -75,7 +71,7 @@ def answer(retuning: Retuning) -> str:
         return f"{words}\n{labelled('to record', _STAIRCASE if _STICKS.search(retuning.refused) else _OPEN_STEP)}"
     target = filled(target_words(retuning))
     if not proposes(retuning):
-        return target
+        return "\n".join([target, *_first(retuning)])
     proposed = retuning.proposed
     assert proposed is not None
     heading = "Key in:" if retuning.met else "Best attainable, to key in:"
@@ -91,13 +87,17 @@ def answer(retuning: Retuning) -> str:
         )
     ]
     block = "\n".join([heading, *lines])
-    after = [filled(change_words(retuning))]
+    after = [*_first(retuning), filled(change_words(retuning))]
     warning = overshoot_warning(retuning)
     if warning is not None:
         after.append(filled(warning))
     if retuning.met:
         return "\n".join([block, target, *after])
     return "\n".join([target, block, *after])
+
+
+def _first(retuning: Retuning) -> list[str]:
+    return [filled(sentence) for sentence in first_findings(retuning)]
 
 
 def _compared(retuning: Retuning) -> str:
@@ -116,28 +116,25 @@ def _compared(retuning: Retuning) -> str:
         rows.append(_row("form", "", forms))
     rows.append(_row("loop", "", [_loop_words(side, retuning) for side in sides]))
     measured, out = record_units(retuning)
-    area = f"{measured} s/{out}" if measured and out else "s"
-    for name, unit, field, most in (
-        ("damping ratio", "", "damping_ratio", 3),
-        ("swing back after a load", "%", "swing_percent", 1),
-        ("setpoint overshoot", "%", "overshoot_percent", 1),
-        ("rise time", "s", "rise_time_s", 9),
-        (f"settling time (±{retuning.band_percent:g} %)", "s", "settling_time_s", 9),
-        ("load: integrated error", area, "load_integrated_error", 9),
-        ("load: absolute error", area, "load_absolute_error", 9),
-        ("largest output change", gain_unit(retuning) or "", "peak_output", 9),
-        ("output noise over measurement noise", "", "output_noise", 9),
-        ("gain margin", "", "gain_margin", 2),
-        ("phase margin", "deg", "phase_margin_deg", 1),
-        ("delay margin", "s", "delay_margin_s", 9),
-        ("maximum sensitivity", "", "max_sensitivity", 2),
+    area = f"{measured} s/{out}" if measured and out else ""  # a unit is said whole or not at all
+    for name, unit, field in (
+        ("damping ratio", "", "damping_ratio"),
+        ("swing back after a load", "%", "swing_percent"),
+        ("setpoint overshoot", "%", "overshoot_percent"),
+        ("rise time", "s", "rise_time_s"),
+        (f"settling time (±{retuning.band_percent:g} %)", "s", "settling_time_s"),
+        ("load: integrated error", area, "load_integrated_error"),
+        ("load: absolute error", area, "load_absolute_error"),
+        ("largest output change", gain_unit(retuning) or "", "peak_output"),
+        ("output noise over measurement noise", "", "output_noise"),
+        ("gain margin", "", "gain_margin"),
+        ("phase margin", "deg", "phase_margin_deg"),
+        ("delay margin", "s", "delay_margin_s"),
+        ("maximum sensitivity", "", "max_sensitivity"),
     ):
         found = [getattr(side.figures, field) for side in sides]
         if any(value is not None for value in found):
-            endless = NOT_SEEN if name.startswith("settling") else "no limit"
-            rows.append(
-                _row(name, unit, [quantity_words(value, most_decimals=most, endless=endless) for value in found])
-            )
+            rows.append(_row(name, unit, [figure_words(value, field, short=True) for value in found]))
     shares = [side.probability_of_target for side in sides]
     if any(share is not None for share in shares):
         rows.append(
@@ -168,7 +165,7 @@ def _loop_words(side: Side, retuning: Retuning) -> str:
 
 def _row(name: str, unit: str, cells: list[str]) -> str:
     what = f"{name}, {unit}" if unit else name
-    return f"{what:{_NAME}}{''.join(f'{cell:<{_CELL}}' for cell in cells)}".rstrip()
+    return f"{what:{_NAME}}{''.join(f'{cell} '.ljust(_CELL) for cell in cells)}".rstrip()
 
 
 def _typed(retuning: Retuning) -> str:
@@ -183,71 +180,6 @@ def _typed(retuning: Retuning) -> str:
     return labelled("typed", text if retuning.typed.verdict in text else f"{retuning.typed.verdict}: {text}")
 
 
-def _stages(retuning: Retuning) -> str:
-    unit = gain_unit(retuning)
-    first = "Write down the present settings before anything is changed: they are the way back"
-    now = retuning.current
-    first += " (they were not given here)." if now is None else f". {_capital(entry_line(now.settings, unit))}."
-    lines = ["Stages", filled(first, "  0  ", " " * 5)]
-    for number, move in enumerate(retuning.moves, start=1):
-        lines.append(
-            filled(f"{_capital(entry_line(move.side.settings, unit, absent=False))}.", f"  {number}  ", " " * 5)
-        )
-        back: str | None = "the settings written down" if number == 1 else f"those of stage {number - 1}"
-        if number == 1 and (now is None or not now.figures.stable):
-            back = None  # the way back is manual
-        lines.append(filled(_expectation(move, back), " " * 5, " " * 5))
-    if not retuning.moves:
-        lines.append(
-            filled(
-                "No stages were worked out: go to the proposed settings in small steps of your own.", "  1  ", " " * 5
-            )
-        )
-    return "\n".join(lines)
-
-
-def _capital(words: str) -> str:
-    return words[0].upper() + words[1:]
-
-
-def _expectation(move: Move, back: str | None) -> str:
-    """Return figures of a stage, the swing to expect, when to stop and what to restore; the move's own words where they say it."""
-    figures = move.side.figures
-    if not figures.stable:
-        return f"UNSTABLE on the fitted plant: do not stay here. {move.text}".strip()
-    words = (
-        f"Damping ratio {quantity_words(figures.damping_ratio, most_decimals=2)}, setpoint overshoot "
-        f"{quantity_words(figures.overshoot_percent, most_decimals=1)} %, settling "
-        f"{quantity_words(figures.settling_time_s, endless=NOT_SEEN)}{' s' if _finite(figures.settling_time_s) else ''}."
-    )
-    if "stop" in move.text.lower():
-        after = "" if back is None else f" To put back: {back}."
-    else:
-        swing = figures.swing_percent
-        seen = "no swing back" if swing is None or swing.high < _UNSEEN else (
-            f"a swing back of {quantity_words(swing, most_decimals=0)} % of the first deviation"
-        )  # fmt: skip
-        words += (
-            f" After a small upset expect {seen}. Stop if it swings back by more than {stop_at(figures):.0f} % or the "
-            f"swing does not die away, and {'put the loop in manual' if back is None else f'restore {back}'}."
-        )
-        after = ""
-    return f"{words} {move.text}".strip() + after
-
-
-def _finite(quantity: Quantity | None) -> bool:
-    return quantity is not None and math.isfinite(quantity.value)
-
-
-def stop_at(figures: LoopFigures) -> float:
-    """Return the swing, %, beyond which a stage is to be taken back: more than the record allows, and clearly more than expected."""
-    swing = figures.swing_percent
-    if swing is None:
-        return _LEAST_STOP
-    upper = swing.high if math.isfinite(swing.high) else swing.value
-    return min(max(upper, swing.value + _MORE_SWING, _LEAST_STOP), _MOST_STOP)
-
-
 def _comparisons(retuning: Retuning) -> str:
     unit = gain_unit(retuning)
     rows = ["What published rules would give, for comparison only; none of them is proposed"]
@@ -256,9 +188,9 @@ def _comparisons(retuning: Retuning) -> str:
         words = entry_line(side.settings, unit, absent=False) + ": "
         if figures.stable:
             words += (
-                f"damping ratio {quantity_words(figures.damping_ratio, most_decimals=2, interval=False)}, "
-                f"overshoot {quantity_words(figures.overshoot_percent, most_decimals=0, interval=False)} %, "
-                f"maximum sensitivity {quantity_words(figures.max_sensitivity, most_decimals=2, interval=False)}"
+                f"damping ratio {figure_words(figures.damping_ratio, 'damping_ratio', interval=False)}, "
+                f"overshoot {figure_words(figures.overshoot_percent, 'overshoot_percent', interval=False)} %, "
+                f"maximum sensitivity {figure_words(figures.max_sensitivity, 'max_sensitivity', interval=False)}"
             )
         else:
             words += "UNSTABLE"
@@ -275,4 +207,4 @@ def _findings(retuning: Retuning) -> str:
 
 
 def _cautions(retuning: Retuning) -> str:
-    return "Cautions\n" + "\n".join(filled(caution, "  -  ", " " * 5) for caution in retuning.cautions)
+    return "Cautions\n" + "\n".join(filled(caution, "  -  ", " " * 5) for caution in printed_cautions(retuning))

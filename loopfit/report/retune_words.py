@@ -7,17 +7,15 @@ import re
 import textwrap
 from dataclasses import dataclass
 
-from loopfit.core.finding import Finding
 from loopfit.loop.gains import Gains
 from loopfit.loop.settings import Settings
-from loopfit.report.retune_numbers import NOT_SEEN, figure_words, with_unit
+from loopfit.report.retune_numbers import figure_words, with_unit
 from loopfit.report.retune_recorded import record_units
 from loopfit.tuning.result import Retuning, Side
 
 WIDTH, LABEL = 100, 13
 NO_UNITS = "output per measurement"  # of a gain whose units are not known
 _EXACT, _SHOWN = 6, 4  # significant digits: a number that has no more than six is shown as it is
-_SURPRISE_PERCENT = 5.0  # overshoot beyond that of the target damping, from which it is said first
 _TIMES = {"s": "s", "min": "min", "h": "h", "ms": "ms"}
 _ACTIONS = {
     "reverse": "reverse acting: the output falls as the measurement rises",
@@ -173,7 +171,7 @@ def target_words(retuning: Retuning) -> str:
     words = f"The target is NOT met: {goal.criterion}, maximum sensitivity at most {goal.max_sensitivity:g}{asked}."
     reach = retuning.attainable_damping_ratio
     if proposed is not None and proposed.figures.damping_ratio is not None:
-        words += f" Attainable: a damping ratio of {figure_words(proposed.figures.damping_ratio, "damping_ratio")}."
+        words += f" Attainable: a damping ratio of {figure_words(proposed.figures.damping_ratio, 'damping_ratio')}."
     elif reach is not None:
         # cut, not rounded: what is not attainable is not promised
         words += f" Attainable: a damping ratio of {math.floor(100.0 * reach + 1e-9) / 100.0:.2f}."
@@ -205,11 +203,9 @@ def change_words(retuning: Retuning) -> str:
             figure_words(getattr(figures, field), field, interval=False)
             for figures in ((now, then) if now is not None and now.stable else (then,))
         ]
-        if NOT_SEEN in cells:  # a phrase and a number: the unit belongs to the number
-            cells = [with_unit(cell, unit) for cell in cells]
-            parts.append(f"{name}: {' -> '.join(cells)}" if len(cells) > 1 or len(set(cells)) > 1 else f"{name}: {cells[0]}")
-            continue
-        parts.append(f"{name} {with_unit(' -> '.join(cells), unit if cells[-1] != '-' else '')}")
+        if "-" in cells or not all(cell[0].isdigit() for cell in cells):  # the unit belongs to the numbers
+            cells, unit = [with_unit(cell, unit) for cell in cells], ""
+        parts.append(f"{name} {' -> '.join(cells)}{unit}")
     lead = "The loop will have" if now is None else "Now -> then" if now.stable else "Now UNSTABLE; then"
     return f"{lead}: {', '.join(parts)}."
 

@@ -31,7 +31,8 @@ def typed_of(identified: Identified, settings: Settings | None) -> TypedCheck | 
     rows = slice(max(first - _ROWS // 8, 0), max(first - _ROWS // 8, 0) + _ROWS)
     columns = (record.time, record.setpoint.values, record.measurement.values, record.output.values)
     try:
-        found = check_typed(*(column[rows] for column in columns), settings)
+        time, setpoint, measurement, output = (column[rows] for column in columns)
+        found = check_typed(time, setpoint, measurement, output, settings)
     except UsageError:  # uneven rows: nothing to check against
         return None
     if found.verdict == "differ" and not _makes_sense(found):

@@ -197,6 +197,7 @@ def test_a_case(asked: SimpleNamespace, case: Path) -> None:
         "at_most": {"gain": 3.0, "integral_time_s": 500.0},
         "confidence_of_target_percent": None,
         "columns": {"time": 1, "measurement": "pv"},
+        "limits": {"damping_ratio_min": 0.6},
         "step": 2,
         "band_percent": 5.0,
     }
@@ -210,6 +211,7 @@ def test_options_override_the_case(asked: SimpleNamespace, case: Path) -> None:
     )
     assert result.exit_code == 0, result.stderr
     assert asked.arguments == {
+        "limits": {"damping_ratio_min": 0.6},
         "settings": loopfit.Settings(gain=4, action="reverse"),
         "damping_ratio": 0.8,
         "at_most": {"gain": 9.0, "integral_time_s": 500.0},

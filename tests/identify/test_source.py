@@ -72,9 +72,7 @@ def named(role: str, name: str, unit: str | None, seed: int) -> Record:
         (("TIC101.PV", None), ("TIC205.PV", None)),
     ],
 )
-def test_records_of_different_loops(
-    role: str, one: tuple[str, str | None], other: tuple[str, str | None]
-) -> None:
+def test_records_of_different_loops(role: str, one: tuple[str, str | None], other: tuple[str, str | None]) -> None:
     with pytest.raises(UsageError, match="not of one loop") as caught:
         of([named(role, *one, seed=72), named(role, *other, seed=73)])
     text = str(caught.value)

@@ -20,7 +20,8 @@ from retunings import CAUTIONS, HEATER, HEATER_NOW, NAMES, retuned, retuning_of
 
 from loopfit.core.errors import UsageError
 from loopfit.loop.response import respond
-from loopfit.report.retune_lines import curves_of, overlay_of
+from loopfit.report.retune_lines import curves_of
+from loopfit.report.retune_overlay import overlay_of
 from loopfit.report.retune_plot import draw, figure, short_cautions
 from loopfit.tuning.goal import Goal
 

@@ -15,13 +15,14 @@ from retunings import CAUTIONS, HEATER, HEATER_NOW, LEVEL_NOW, NAMES, SERVO_NOW,
 from loopfit.core.quantity import Quantity
 from loopfit.identify.identified import Identified
 from loopfit.loop.settings import Settings
-from loopfit.report.retune_text import answer, page, stop_at
+from loopfit.report.retune_numbers import quantity_words
+from loopfit.report.retune_stages import stop_at
+from loopfit.report.retune_text import answer, page
+from loopfit.report.retune_warnings import overshoot_warning
 from loopfit.report.retune_words import (
     action_words,
     entry_number,
     overshoot_of,
-    overshoot_warning,
-    quantity_words,
     share_words,
 )
 from loopfit.tuning.goal import Goal
@@ -377,10 +378,10 @@ def test_a_number_keyed_in_is_the_number(value: float) -> None:
     ("quantity", "shown"),
     [
         (None, "-"),
-        (Quantity(0.312, 0.29, 0.334), "0.31 (0.29 to 0.33)"),
+        (Quantity(0.312, 0.29, 0.334), "0.312 (0.290 to 0.334)"),
         (Quantity(2.0, 2.0, 2.0), "2.00"),
-        (Quantity(3.0, 2.0, math.inf), "3.0 (2.0 or more)"),
-        (Quantity(0.98, -math.inf, math.inf), "0.9800 (no bound)"),
+        (Quantity(3.0, 2.0, math.inf), "3.00 (2.00 or more)"),
+        (Quantity(0.98, -math.inf, math.inf), "0.980 (no bound)"),
         (Quantity(math.inf, 4.0, math.inf), "no limit (4.00 or more)"),
         (Quantity(math.inf, math.inf, math.inf), "no limit"),
     ],
