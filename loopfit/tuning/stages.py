@@ -59,7 +59,7 @@ class Stage:
     @property
     def stop(self) -> str:
         """When to stop and what to do then, in words."""
-        back = "leave the loop in manual" if self.restore is None else "go to manual and put the settings before back"
+        back = "leave the loop in manual" if self.restore is None else "go to manual and put the earlier settings back"
         return f"stop if the swing back is above {100 * self.stop_swing:.0f} % or swings grow; {back}"
 
 

@@ -67,7 +67,9 @@ def test_beam_without_friction_keeps_its_period(plant: ModuleType, simulation: M
     ("case", "gain", "integral_time_s", "overshoot", "damping"),
     [("rinse-heater", 2.07, 116.0, 5.0, 0.8), ("spray-pressure", 4.59, 0.672, 10.0, 0.6)],
 )
-def test_story_from_ringing_to_calm(case: str, gain: float, integral_time_s: float, overshoot: float, damping: float) -> None:
+def test_story_from_ringing_to_calm(
+    case: str, gain: float, integral_time_s: float, overshoot: float, damping: float
+) -> None:
     """The record made with the proposed settings meets the case's limits; the proposal is the one it was made with."""
     import loopfit
     from loopfit.case.arguments import settings_of, target_arguments

@@ -30,34 +30,116 @@ def series(gain: float, integral: float, derivative: float) -> Gains:
     return Gains(kp=gain * (1 + derivative / integral), ki=gain / integral, kd=gain * derivative, filter_s=NEAR_IDEAL)
 
 
-def loop(numerator: list[float], denominator: list[float], dead_time: float = 0.0, gains: Gains | None = None) -> Margins:
+def loop(
+    numerator: list[float], denominator: list[float], dead_time: float = 0.0, gains: Gains | None = None
+) -> Margins:
     return margins_of(Plant.of_transfer(transfer_of(numerator, denominator, dead_time)), gains or Gains(kp=1.0))
 
 
 PRINTED = [  # numerator, denominator, dead time, gains, {field: (printed, tolerance: half the last digit)}, source
-    ([1], [1], 1.0, Gains(kp=0.0, ki=0.5), {"gain_margin": (3.14, 0.005), "phase_margin_deg": (61.4, 0.05),
-     "max_sensitivity": (1.59, 0.005), "max_complementary_sensitivity": (1.00, 0.005), "delay_margin_s": (2.14, 0.005)}, SIMC + ", table 1"),
-    ([1], [5, 1], 1.0, pi(2.5, 5), {"gain_margin": (3.14, 0.005), "phase_margin_deg": (61.4, 0.05), "max_sensitivity": (1.59, 0.005)}, SIMC + ", table 1"),
-    ([1], [1, 0], 1.0, pi(0.5, 8), {"gain_margin": (2.96, 0.005), "phase_margin_deg": (46.9, 0.05), "max_sensitivity": (1.70, 0.005),
-     "max_complementary_sensitivity": (1.30, 0.005), "delay_margin_s": (1.59, 0.005)}, SIMC + ", table 1"),
+    (
+        [1],
+        [1],
+        1.0,
+        Gains(kp=0.0, ki=0.5),
+        {
+            "gain_margin": (3.14, 0.005),
+            "phase_margin_deg": (61.4, 0.05),
+            "max_sensitivity": (1.59, 0.005),
+            "max_complementary_sensitivity": (1.00, 0.005),
+            "delay_margin_s": (2.14, 0.005),
+        },
+        SIMC + ", table 1",
+    ),
+    (
+        [1],
+        [5, 1],
+        1.0,
+        pi(2.5, 5),
+        {"gain_margin": (3.14, 0.005), "phase_margin_deg": (61.4, 0.05), "max_sensitivity": (1.59, 0.005)},
+        SIMC + ", table 1",
+    ),
+    (
+        [1],
+        [1, 0],
+        1.0,
+        pi(0.5, 8),
+        {
+            "gain_margin": (2.96, 0.005),
+            "phase_margin_deg": (46.9, 0.05),
+            "max_sensitivity": (1.70, 0.005),
+            "max_complementary_sensitivity": (1.30, 0.005),
+            "delay_margin_s": (1.59, 0.005),
+        },
+        SIMC + ", table 1",
+    ),
     ([1], [1, 0, 0], 1.0, series(0.0625, 8, 8), {"max_sensitivity": (1.96, 0.005)}, SIMC),
     ([1], [0.2, 1.2, 1], 0.0, pi(5.5, 0.8), {"max_sensitivity": (1.56, 0.005)}, SIMC + ", example E1"),
-    ([30, 2], [0.2, 4.21, 24.21, 21.2, 1], 0.0, pi(7 / 3, 1.05), {"max_sensitivity": (1.55, 0.005)}, SIMC + ", example E3"),
+    (
+        [30, 2],
+        [0.2, 4.21, 24.21, 21.2, 1],
+        0.0,
+        pi(7 / 3, 1.05),
+        {"max_sensitivity": (1.55, 0.005)},
+        SIMC + ", example E3",
+    ),
     ([1], [1, 2, 1], 1.0, pi(0.5, 1.5), {"max_sensitivity": (1.61, 0.005)}, SIMC + ", example E9"),
     ([-1, 1], [1, 0], 0.0, pi(0.5, 8), {"max_sensitivity": (2.0, 0.05)}, SIMC + ", example E14"),
     ([-1, 1], [1, 1], 0.0, pi(0.5, 1), {"max_sensitivity": (2.0, 0.05)}, SIMC + ", example E15"),
     ([1], [1, 2, 1], 1.0, series(0.5, 1, 1), {"max_sensitivity": (1.59, 0.005)}, SIMC + ", example E9, series PID"),
     ([1], [40, 22, 1], 1.0, series(10, 8, 2), {"max_sensitivity": (1.65, 0.005)}, SIMC + ", example E10, series PID"),
-    ([-2, 1], [1, 3, 3, 1], 0.0, series(0.3, 1.5, 1), {"max_sensitivity": (1.85, 0.005)}, SIMC + ", example E7, series PID"),
-    ([6], [1, 4, 6, 4], 0.0, None, {"phase_margin_deg": (67.7, 0.05)}, "N. Nise, Control Systems Engineering, 6th ed. 2011, section 10.6; from memory"),
+    (
+        [-2, 1],
+        [1, 3, 3, 1],
+        0.0,
+        series(0.3, 1.5, 1),
+        {"max_sensitivity": (1.85, 0.005)},
+        SIMC + ", example E7, series PID",
+    ),
+    (
+        [6],
+        [1, 4, 6, 4],
+        0.0,
+        None,
+        {"phase_margin_deg": (67.7, 0.05)},
+        "N. Nise, Control Systems Engineering, 6th ed. 2011, section 10.6; from memory",
+    ),
     ([1], [1, 2, 3, 4], 0.0, None, {"gain_margin": (2.0, 0.05), "max_sensitivity_at_rad_s": (1.6620, 5e-5)}, LIBRARY),
-    ([-0.01, 0.1], [1, 3, 2], 0.0, None, {"gain_margin": (300.0, 0.05), "max_sensitivity_at_rad_s": (2.3171, 5e-5)}, LIBRARY),
-    ([35, 3.5, 8.75], [1, 1.03, 101.1862, 23.81176, 100.228, 1], 0.0, None, {"gain_margin": (2.2716, 5e-5), "max_sensitivity_at_rad_s": (9.9918, 5e-5)}, LIBRARY),
+    (
+        [-0.01, 0.1],
+        [1, 3, 2],
+        0.0,
+        None,
+        {"gain_margin": (300.0, 0.05), "max_sensitivity_at_rad_s": (2.3171, 5e-5)},
+        LIBRARY,
+    ),
+    (
+        [35, 3.5, 8.75],
+        [1, 1.03, 101.1862, 23.81176, 100.228, 1],
+        0.0,
+        None,
+        {"gain_margin": (2.2716, 5e-5), "max_sensitivity_at_rad_s": (9.9918, 5e-5)},
+        LIBRARY,
+    ),
     # the library interpolates on a grid: its own tests allow 0.01 on the figures below
     ([2], [1, 3, 3, 1], 0.0, None, {"gain_margin": (4.0, 0.01), "phase_margin_deg": (67.6058, 0.01)}, LIBRARY),
     ([1, 0.1], [1, 1, 0, 0], 0.0, None, {"phase_margin_deg": (44.4594, 0.01), "gain_margin": (math.inf, 0)}, LIBRARY),
-    ([1, 0.2, 0.01], [1, 1, 0, 0, 0], 0.0, None, {"phase_margin_deg": (37.1748, 0.01), "gain_reduction_margin": (0.0626, 0.01)}, LIBRARY),
-    ([35, 3.5, 8.75], [1, 1.03, 101.1862, 23.81176, 100.228, 1], 0.0, None, {"phase_margin_deg": (97.5941, 0.01)}, LIBRARY),
+    (
+        [1, 0.2, 0.01],
+        [1, 1, 0, 0, 0],
+        0.0,
+        None,
+        {"phase_margin_deg": (37.1748, 0.01), "gain_reduction_margin": (0.0626, 0.01)},
+        LIBRARY,
+    ),
+    (
+        [35, 3.5, 8.75],
+        [1, 1.03, 101.1862, 23.81176, 100.228, 1],
+        0.0,
+        None,
+        {"phase_margin_deg": (97.5941, 0.01)},
+        LIBRARY,
+    ),
 ]
 
 
@@ -71,17 +153,59 @@ def test_margins_as_printed(numerator, denominator, dead_time, gains, printed, s
 
 LAWS = [  # numerator, denominator, dead time, gains, {field: exact}, where from
     # L = e^-s / (2 s): |L| = 1 at 1/2, phase -180 deg at pi/2
-    ([1], [1], 1.0, Gains(kp=0, ki=0.5), {"gain_margin": math.pi, "phase_margin_deg": 90 - math.degrees(0.5), "delay_margin_s": math.pi - 1}, "by hand"),
+    (
+        [1],
+        [1],
+        1.0,
+        Gains(kp=0, ki=0.5),
+        {"gain_margin": math.pi, "phase_margin_deg": 90 - math.degrees(0.5), "delay_margin_s": math.pi - 1},
+        "by hand",
+    ),
     ([1], [1, 3, 3, 1], 0.0, None, {"gain_margin": 8.0}, "1/(s+1)^3 becomes unstable at 8: every text"),
-    ([10], [1, 6, 5, 0], 0.0, None, {"gain_margin": 3.0}, "s (s+1)(s+5) + K: Routh gives K = 30 (Ogata, 5th ed., Example 8-1; from memory)"),
-    ([1], [10, 17, 8, 1], 0.0, None, {"gain_margin": 12.6}, "Seborg, Edgar, Mellichamp, 3rd ed., Example 11.8, by Routh; from memory"),
+    (
+        [10],
+        [1, 6, 5, 0],
+        0.0,
+        None,
+        {"gain_margin": 3.0},
+        "s (s+1)(s+5) + K: Routh gives K = 30 (Ogata, 5th ed., Example 8-1; from memory)",
+    ),
+    (
+        [1],
+        [10, 17, 8, 1],
+        0.0,
+        None,
+        {"gain_margin": 12.6},
+        "Seborg, Edgar, Mellichamp, 3rd ed., Example 11.8, by Routh; from memory",
+    ),
     ([6], [1, 4, 6, 4], 0.0, None, {"gain_margin": 10 / 3}, "Routh: 4 * 6 = 4 + 6 K"),
     ([1], [0.2, 1.2, 1, 0], 0.0, None, {"gain_margin": 6.0}, "Routh"),
-    ([1, 0.2, 0.01], [1, 1, 0, 0, 0], 0.0, None, {"gain_reduction_margin": 1 / 16}, "Routh: k 0.2 k = (0.2 k)^2 + 0.01 k"),
+    (
+        [1, 0.2, 0.01],
+        [1, 1, 0, 0, 0],
+        0.0,
+        None,
+        {"gain_reduction_margin": 1 / 16},
+        "Routh: k 0.2 k = (0.2 k)^2 + 0.01 k",
+    ),
     # an inverting plant: the coefficient of s^2 in s^2 (1 - k/2) + ... turns at k = 2, a root passes through infinity
     ([-1, 1], [1, 0], 0.0, pi(0.5, 8), {"gain_margin": 2.0, "max_sensitivity": 2.0}, "by hand"),
-    ([2], [1, -1], 0.0, None, {"gain_reduction_margin": 0.5, "phase_margin_deg": 60.0}, "2/(s-1): pole 1 - 2 k; |L| = 1 at sqrt 3"),
-    ([0.5], [1], 2.0, None, {"gain_margin": 2.0, "max_sensitivity": 2.0, "delay_margin_s": math.inf, "phase_margin_deg": math.inf}, "0.5 e^-2s"),
+    (
+        [2],
+        [1, -1],
+        0.0,
+        None,
+        {"gain_reduction_margin": 0.5, "phase_margin_deg": 60.0},
+        "2/(s-1): pole 1 - 2 k; |L| = 1 at sqrt 3",
+    ),
+    (
+        [0.5],
+        [1],
+        2.0,
+        None,
+        {"gain_margin": 2.0, "max_sensitivity": 2.0, "delay_margin_s": math.inf, "phase_margin_deg": math.inf},
+        "0.5 e^-2s",
+    ),
 ]
 
 
@@ -133,7 +257,9 @@ def test_wrong_sign_is_said() -> None:
     assert found.positive_feedback
     assert not found.stable
     assert "positive feedback" in found.sentence
-    assert not margins_of(Plant(gain=-2.0, time_constants_s=(5.0,), dead_time_s=1.0), Gains(kp=-0.5, ki=-0.1)).positive_feedback
+    assert not margins_of(
+        Plant(gain=-2.0, time_constants_s=(5.0,), dead_time_s=1.0), Gains(kp=-0.5, ki=-0.1)
+    ).positive_feedback
     assert not loop([2], [1, -1]).positive_feedback
 
 
@@ -154,7 +280,10 @@ plants = st.builds(
     st.booleans(), st.none() | st.floats(0.05, 2),
 )  # fmt: skip
 controllers = st.builds(
-    lambda kp, ki, kd: Gains(kp=kp, ki=ki, kd=kd, filter_s=0.2), st.floats(0.05, 3), st.sampled_from([0.0]) | st.floats(0.01, 1), st.sampled_from([0.0]) | st.floats(0.1, 2)
+    lambda kp, ki, kd: Gains(kp=kp, ki=ki, kd=kd, filter_s=0.2),
+    st.floats(0.05, 3),
+    st.sampled_from([0.0]) | st.floats(0.01, 1),
+    st.sampled_from([0.0]) | st.floats(0.1, 2),
 )
 
 
@@ -207,7 +336,9 @@ def test_margins_are_where_the_loop_turns_unstable(plant: Plant, gains: Gains) -
 
     def stable(factor: float, more: float = 0.0) -> bool:
         other = Plant.of_transfer(transfer_of(plant.numerator, plant.denominator, plant.dead_time_s + more))
-        return margins_of(other, Gains(kp=factor * gains.kp, ki=factor * gains.ki, kd=factor * gains.kd, filter_s=gains.filter_s)).stable
+        return margins_of(
+            other, Gains(kp=factor * gains.kp, ki=factor * gains.ki, kd=factor * gains.kd, filter_s=gains.filter_s)
+        ).stable
 
     assert found.gain_margin is not None
     assert found.delay_margin_s is not None
@@ -229,7 +360,9 @@ def test_delay_free_loops_as_python_control(seed: int) -> None:
     bottom = np.poly(-rng.uniform(0.2, 3, 4))
     gain = rng.uniform(0.2, 1.0) * bottom[-1]
     found = loop((gain * np.array(top)).tolist(), bottom.tolist())
-    gm, _, _, w180, wc, _ = control.stability_margins(control.TransferFunction(gain * np.array(top), bottom), returnall=True)
+    gm, _, _, w180, wc, _ = control.stability_margins(
+        control.TransferFunction(gain * np.array(top), bottom), returnall=True
+    )
     assert found.stable
     finite = [w for w in found.phase_crossovers_rad_s if 0 < w < math.inf]
     # the library lists every crossing of the real axis left of 0
@@ -239,7 +372,10 @@ def test_delay_free_loops_as_python_control(seed: int) -> None:
 
 
 def test_rational_delays_converge_to_the_exact_margins() -> None:
-    plant, gains = Plant(gain=2.0, time_constants_s=(8.0, 3.0), dead_time_s=2.5), Gains(kp=0.9, ki=0.09, kd=2.0, filter_s=0.3)
+    plant, gains = (
+        Plant(gain=2.0, time_constants_s=(8.0, 3.0), dead_time_s=2.5),
+        Gains(kp=0.9, ki=0.09, kd=2.0, filter_s=0.3),
+    )
     exact = margins_of(plant, gains)
     errors = []
     for order in (1, 2, 4):
@@ -248,27 +384,53 @@ def test_rational_delays_converge_to_the_exact_margins() -> None:
         system = control.TransferFunction(np.convolve(chain.numerator, top), np.convolve(chain.denominator, bottom))
         gm, pm, sm, *_ = control.stability_margins(system)
         assert exact.max_sensitivity is not None
-        errors.append([abs(gm - exact.gain_margin), abs(pm - exact.phase_margin_deg), abs(1 / sm - exact.max_sensitivity)])
+        errors.append(
+            [abs(gm - exact.gain_margin), abs(pm - exact.phase_margin_deg), abs(1 / sm - exact.max_sensitivity)]
+        )
     # an (n, n) rational delay is exact to order 2 n in w theta (Baker and Graves-Morris, Pade approximants, 1996)
     assert np.all(np.diff(errors, axis=0) < 0)
     assert np.all(np.array(errors[-1]) < [1e-4, 1e-6, 1e-3])
 
 
 @settings(deadline=None, max_examples=60)
-@given(plant=plants, gains=controllers, slower=st.sampled_from([1e-5, 1e-2, 1e3, 1e6]), stronger=st.sampled_from([-1e4, -1e-3, 1e5]))
+@given(
+    plant=plants,
+    gains=controllers,
+    slower=st.sampled_from([1e-5, 1e-2, 1e3, 1e6]),
+    stronger=st.sampled_from([-1e4, -1e-3, 1e5]),
+)
 def test_units_do_not_matter(plant: Plant, gains: Gains, slower: float, stronger: float) -> None:
     # another unit of time divides all frequencies, another unit of the measurement (or its sign) changes nothing
     chain = np.array(plant.denominator) * slower ** np.arange(len(plant.denominator) - 1.0, -1.0, -1.0)
     top = stronger * np.array(plant.numerator) * slower ** np.arange(len(plant.numerator) - 1.0, -1.0, -1.0)
     factor = 1 / slower if plant.integrating else 1.0
     other = Plant.of_transfer(transfer_of((top / factor).tolist(), chain.tolist(), plant.dead_time_s * slower))
-    there = Gains(kp=gains.kp / stronger, ki=gains.ki / stronger / slower, kd=gains.kd / stronger * slower, filter_s=gains.filter_s * slower)
+    there = Gains(
+        kp=gains.kp / stronger,
+        ki=gains.ki / stronger / slower,
+        kd=gains.kd / stronger * slower,
+        filter_s=gains.filter_s * slower,
+    )
     if plant.integrating:
-        there = Gains(kp=there.kp * factor * slower, ki=there.ki * factor * slower, kd=there.kd * factor * slower, filter_s=there.filter_s)
-        other = Plant.of_transfer(transfer_of((top / slower).tolist(), (chain / slower).tolist(), plant.dead_time_s * slower))
+        there = Gains(
+            kp=there.kp * factor * slower,
+            ki=there.ki * factor * slower,
+            kd=there.kd * factor * slower,
+            filter_s=there.filter_s,
+        )
+        other = Plant.of_transfer(
+            transfer_of((top / slower).tolist(), (chain / slower).tolist(), plant.dead_time_s * slower)
+        )
     one, two = margins_of(plant, gains), margins_of(other, there)
     assert one.stable == two.stable
-    for name, power in (("gain_margin", 0), ("phase_margin_deg", 0), ("delay_margin_s", 1), ("max_sensitivity", 0), ("max_complementary_sensitivity", 0), ("bandwidth_rad_s", -1)):
+    for name, power in (
+        ("gain_margin", 0),
+        ("phase_margin_deg", 0),
+        ("delay_margin_s", 1),
+        ("max_sensitivity", 0),
+        ("max_complementary_sensitivity", 0),
+        ("bandwidth_rad_s", -1),
+    ):
         a, b = getattr(one, name), getattr(two, name)
         assert (a is None) == (b is None)
         if a is not None and a < 1e9:

@@ -81,7 +81,12 @@ def test_many_loops_are_one_loop_each(lags: tuple[float, ...]) -> None:
     plants = [Plant(gain=1.5, time_constants_s=lags, dead_time_s=delay) for delay in (0.0, 0.4, 1.23)] + [
         Plant(gain=-1.0, time_constants_s=(2.0,), zero_s=-0.5, integrating=True, dead_time_s=0.5)
     ]
-    gains = [Gains(kp=0.8, ki=0.2), Gains(kp=0.5, ki=0.1, kd=0.4, filter_s=0.1, setpoint_weight=0.6, derivative_on_error=True), Gains(kp=0.7), Gains(kp=-0.2, ki=-0.02)]
+    gains = [
+        Gains(kp=0.8, ki=0.2),
+        Gains(kp=0.5, ki=0.1, kd=0.4, filter_s=0.1, setpoint_weight=0.6, derivative_on_error=True),
+        Gains(kp=0.7),
+        Gains(kp=-0.2, ki=-0.02),
+    ]
     for anti_windup in ("none", "conditional integration", "back calculation"):
         more: dict[str, Any] = {
             "scan_s": 0.3, "scans": 200, "setpoint": 51.0, "initial_measurement": 50.0, "initial_output": 30.0, "load": np.where(np.arange(200) < 100, 0.0, -1.0),
@@ -110,7 +115,9 @@ def test_manual_step_is_the_step_response() -> None:
 
 def test_starts_at_rest_and_stays_there() -> None:
     for gains in (GAINS, Gains(kp=0.4)):
-        found = simulate(PLANT, gains, scan_s=0.2, scans=50, initial_measurement=20.0, initial_output=35.0, initial_setpoint=20.0)
+        found = simulate(
+            PLANT, gains, scan_s=0.2, scans=50, initial_measurement=20.0, initial_output=35.0, initial_setpoint=20.0
+        )
         np.testing.assert_allclose(found.measurement, 20.0, rtol=1e-13)
         np.testing.assert_allclose(found.output, 35.0, rtol=1e-13)
 
@@ -123,7 +130,9 @@ def test_lost_motion_swallows_a_reversal() -> None:
 
 
 def test_resolution_rounds_to_whole_units() -> None:
-    found = simulate(PLANT, GAINS, scan_s=0.1, scans=300, setpoint=1.0, measurement_resolution=0.05, output_resolution=0.125)
+    found = simulate(
+        PLANT, GAINS, scan_s=0.1, scans=300, setpoint=1.0, measurement_resolution=0.05, output_resolution=0.125
+    )
     for values, unit in ((found.measurement, 0.05), (found.output, 0.125)):
         np.testing.assert_allclose(values / unit, np.round(values / unit), atol=1e-9)
 
@@ -142,10 +151,25 @@ def test_anti_windup_shortens_the_recovery() -> None:
 def test_late_output_is_one_scan_of_dead_time() -> None:
     more = Plant(gain=2.0, damping_ratio=0.6, natural_frequency_rad_s=1.0, dead_time_s=0.73 + 0.2)
     late = simulate(PLANT, GAINS, scan_s=0.2, scans=200, setpoint=1.0, load=0.0, late=True)
-    np.testing.assert_allclose(late.measurement, simulate(more, GAINS, scan_s=0.2, scans=200, setpoint=1.0).measurement, atol=1e-11)
+    np.testing.assert_allclose(
+        late.measurement, simulate(more, GAINS, scan_s=0.2, scans=200, setpoint=1.0).measurement, atol=1e-11
+    )
 
 
-@pytest.mark.parametrize("arguments", [{"scan_s": 0.0}, {"scans": 0}, {"setpoint": [1.0, 2.0]}, {"noise": math.nan}, {"output_limits": (1.0, 1.0)}, {"anti_windup": "some"}, {"output": 1.0}, {"rate_limit": math.nan}, {"deadband": -1.0}])
+@pytest.mark.parametrize(
+    "arguments",
+    [
+        {"scan_s": 0.0},
+        {"scans": 0},
+        {"setpoint": [1.0, 2.0]},
+        {"noise": math.nan},
+        {"output_limits": (1.0, 1.0)},
+        {"anti_windup": "some"},
+        {"output": 1.0},
+        {"rate_limit": math.nan},
+        {"deadband": -1.0},
+    ],
+)
 def test_what_makes_no_sense_is_refused(arguments: dict[str, Any]) -> None:
     with pytest.raises(UsageError):
         simulate(PLANT, GAINS, **{"scan_s": 0.1, "scans": 10, **arguments})
@@ -187,9 +211,16 @@ def by_steps(plant: Plant, gains: Gains, r: float, d: float, intervals: int) -> 
 
         def motion(t: float, z: Any, i: int = i) -> list[float]:
             x, v, _, smooth = z
-            return [v, wn**2 * (plant.gain * inlet(i, t) - x) - 2 * zeta * wn * v, gains.ki * (r - x), (-x - smooth) / gains.filter_s]
+            return [
+                v,
+                wn**2 * (plant.gain * inlet(i, t) - x) - 2 * zeta * wn * v,
+                gains.ki * (r - x),
+                (-x - smooth) / gains.filter_s,
+            ]
 
-        solved = solve_ivp(motion, (i * delay, (i + 1) * delay), state, method="DOP853", rtol=1e-11, atol=1e-12, dense_output=True)
+        solved = solve_ivp(
+            motion, (i * delay, (i + 1) * delay), state, method="DOP853", rtol=1e-11, atol=1e-12, dense_output=True
+        )
         parts.append(solved.sol)
         state = solved.y[:, -1]
     return lambda t: np.array([parts[min(int(one / delay), intervals - 1)](one)[0] for one in t])
@@ -207,7 +238,9 @@ def test_exact_response_without_dead_time() -> None:
     # peak 1 + e^-2 at 2 s
     t = np.linspace(0.0, 20.0, 2001)
     found = respond(Plant(gain=1.0, integrating=True), Gains(kp=2.0, ki=1.0), time=t, setpoint_step=1.0)
-    np.testing.assert_allclose(found.measurement, 1 + (t - 1) * np.exp(-t), rtol=0, atol=1e-10)  # degree 14 on pieces of 4 time constants
+    np.testing.assert_allclose(
+        found.measurement, 1 + (t - 1) * np.exp(-t), rtol=0, atol=1e-10
+    )  # degree 14 on pieces of 4 time constants
     figures = setpoint_figures(t, found.measurement, initial=0.0, final=1.0)
     assert figures.overshoot_percent == pytest.approx(100 * math.exp(-2), abs=1e-4)  # parabola, interval 0.01 s
     assert figures.peak_time_s == pytest.approx(2.0, abs=1e-4)
@@ -219,19 +252,25 @@ def test_integral_loop_on_dead_time_by_hand() -> None:
     # y' = 0.5 (1 - y(t - 1)) from t = 1: 1/2 at 2, 7/8 at 3, 49/48 at 4 (polynomials by hand); Skogestad 2003 gives about
     # 4 % overshoot for it (from memory)
     plant, gains = Plant(gain=1.0, integrating=True, dead_time_s=1.0), Gains(kp=0.5)
-    np.testing.assert_allclose(respond(plant, gains, time=[2, 3, 4], setpoint_step=1.0).measurement, [1 / 2, 7 / 8, 49 / 48], rtol=1e-12)
+    np.testing.assert_allclose(
+        respond(plant, gains, time=[2, 3, 4], setpoint_step=1.0).measurement, [1 / 2, 7 / 8, 49 / 48], rtol=1e-12
+    )
     t = np.linspace(0, 30, 3001)
     figures = setpoint_figures(t, respond(plant, gains, time=t, setpoint_step=1.0).measurement, initial=0.0, final=1.0)
     assert figures.overshoot_percent == pytest.approx(4.0, abs=0.5)
     # k theta = 1: 50 % at 3 dead times, a parabola there (by hand)
     fast = respond(plant, Gains(kp=1.0), time=t, setpoint_step=1.0)
-    assert setpoint_figures(t, fast.measurement, initial=0.0, final=1.0).overshoot_percent == pytest.approx(50.0, abs=1e-7)  # the third derivative jumps there
+    assert setpoint_figures(t, fast.measurement, initial=0.0, final=1.0).overshoot_percent == pytest.approx(
+        50.0, abs=1e-7
+    )  # the third derivative jumps there
 
 
 def test_cancelled_lag_is_the_same_loop() -> None:
     # e^-s/(5 s + 1) with PI (2.5, 5): y is the integral loop of the test above
     t = np.linspace(0, 20, 201)
-    found = respond(Plant(gain=1.0, time_constants_s=(5.0,), dead_time_s=1.0), Gains(kp=2.5, ki=0.5), time=t, setpoint_step=1.0)
+    found = respond(
+        Plant(gain=1.0, time_constants_s=(5.0,), dead_time_s=1.0), Gains(kp=2.5, ki=0.5), time=t, setpoint_step=1.0
+    )
     other = respond(Plant(gain=1.0, integrating=True, dead_time_s=1.0), Gains(kp=0.5), time=t, setpoint_step=1.0)
     np.testing.assert_allclose(found.measurement, other.measurement, rtol=0, atol=1e-10)
 
@@ -249,21 +288,31 @@ def test_integrated_error_is_one_over_ki(delay: float, lags: tuple[float, ...]) 
     assert figures.absolute_error >= abs(figures.integrated_error) * (1 - 1e-12)
     assert figures.peak > 0
     # the sampled loop keeps the law, with the sum over the scans
-    sampled = simulate(Plant(gain=1.4, time_constants_s=lags, dead_time_s=delay), gains, scan_s=0.2, scans=2000, load=2.0)
+    sampled = simulate(
+        Plant(gain=1.4, time_constants_s=lags, dead_time_s=delay), gains, scan_s=0.2, scans=2000, load=2.0
+    )
     assert -0.2 * sampled.measurement.sum() == pytest.approx(law, rel=1e-9)
 
 
 @settings(deadline=None, max_examples=40)
-@given(a=st.floats(-5, 5), b=st.floats(-5, 5), delay=st.sampled_from([0.0]) | st.floats(0.01, 3), zeta=st.floats(0.1, 3))
+@given(
+    a=st.floats(-5, 5), b=st.floats(-5, 5), delay=st.sampled_from([0.0]) | st.floats(0.01, 3), zeta=st.floats(0.1, 3)
+)
 def test_superposition(a: float, b: float, delay: float, zeta: float) -> None:
     plant = Plant(gain=2.0, damping_ratio=zeta, natural_frequency_rad_s=1.0, dead_time_s=delay)
     gains, t = Gains(kp=0.2, ki=0.1, kd=0.1, filter_s=0.1, setpoint_weight=0.7), np.linspace(0, 15, 40)
     both = respond(plant, gains, time=t, setpoint_step=a, load_step=b).measurement
-    apart = a * respond(plant, gains, time=t, setpoint_step=1.0).measurement + b * respond(plant, gains, time=t, load_step=1.0).measurement
+    apart = (
+        a * respond(plant, gains, time=t, setpoint_step=1.0).measurement
+        + b * respond(plant, gains, time=t, load_step=1.0).measurement
+    )
     np.testing.assert_allclose(both, apart, rtol=0, atol=1e-10)
     scans: dict[str, Any] = {"scan_s": 0.3, "scans": 50}
     both = simulate(plant, gains, setpoint=a, load=b, **scans).measurement
-    apart = a * simulate(plant, gains, setpoint=1.0, **scans).measurement + b * simulate(plant, gains, load=1.0, **scans).measurement
+    apart = (
+        a * simulate(plant, gains, setpoint=1.0, **scans).measurement
+        + b * simulate(plant, gains, load=1.0, **scans).measurement
+    )
     np.testing.assert_allclose(both, apart, rtol=0, atol=1e-10)
 
 
@@ -283,20 +332,30 @@ def test_short_and_stiff_dead_times_are_followed() -> None:
     t, gains = np.linspace(0, 30, 31), Gains(kp=0.6, ki=0.2, kd=0.3, filter_s=0.01)
     none = respond(Plant(gain=1.4, time_constants_s=(4.0, 1.5)), gains, time=t, setpoint_step=1.0)
     short = respond(Plant(gain=1.4, time_constants_s=(4.0, 1.5), dead_time_s=1e-6), gains, time=t, setpoint_step=1.0)
-    np.testing.assert_allclose(short.measurement, none.measurement, rtol=0, atol=2e-6)  # the dead time times a slope below 1
+    np.testing.assert_allclose(
+        short.measurement, none.measurement, rtol=0, atol=2e-6
+    )  # the dead time times a slope below 1
     # a lag of 1e-5 s beside 4 s is not to be seen but for its own length in the dead time
-    stiff = respond(Plant(gain=1.4, time_constants_s=(4.0, 1.5, 1e-5), dead_time_s=1.0), gains, time=t, setpoint_step=1.0)
+    stiff = respond(
+        Plant(gain=1.4, time_constants_s=(4.0, 1.5, 1e-5), dead_time_s=1.0), gains, time=t, setpoint_step=1.0
+    )
     plain = respond(Plant(gain=1.4, time_constants_s=(4.0, 1.5), dead_time_s=1.0), gains, time=t, setpoint_step=1.0)
     np.testing.assert_allclose(stiff.measurement, plain.measurement, rtol=0, atol=2e-5)
 
 
 def test_many_fast_swings_are_followed_or_refused() -> None:
     # a swing of 500 rad/s beside a lag of 4 s: to be seen only as the delay 2 zeta / wn that it adds
-    fast = Plant.of_transfer(transfer_of([1.0], np.convolve([4.0, 1.0], [1 / 500**2, 2 * 0.05 / 500, 1.0]).tolist(), 1.0))
+    fast = Plant.of_transfer(
+        transfer_of([1.0], np.convolve([4.0, 1.0], [1 / 500**2, 2 * 0.05 / 500, 1.0]).tolist(), 1.0)
+    )
     t, gains = np.linspace(0.0, 60.0, 61), Gains(kp=0.5, ki=0.1)
     found = respond(fast, gains, time=t, setpoint_step=1.0).measurement
-    plain = respond(Plant(gain=1.0, time_constants_s=(4.0,), dead_time_s=1.0), gains, time=t, setpoint_step=1.0).measurement
-    np.testing.assert_allclose(found, plain, rtol=0, atol=1e-4)  # the mode delays by 2 zeta / wn = 2e-4 s, slope below 1/2
+    plain = respond(
+        Plant(gain=1.0, time_constants_s=(4.0,), dead_time_s=1.0), gains, time=t, setpoint_step=1.0
+    ).measurement
+    np.testing.assert_allclose(
+        found, plain, rtol=0, atol=1e-4
+    )  # the mode delays by 2 zeta / wn = 2e-4 s, slope below 1/2
     with pytest.raises(UsageError, match="too fast"):
         respond(fast, gains, time=[1e5], setpoint_step=1.0)
 

@@ -309,7 +309,7 @@ def test_stages_in_order_with_what_to_watch_and_restore() -> None:
 
 def test_a_stage_that_says_itself_when_to_stop_says_it_once() -> None:
     level = retuning_of("level")
-    own = tuple(replace(move, text="Stop if swings grow; put the settings before back.") for move in level.moves)
+    own = tuple(replace(move, text="Stop if swings grow; put the earlier settings back.") for move in level.moves)
     text = joined(page(replace(level, moves=own)))
     assert text.count("Stop if") == len(own)
     assert "To put back: those of stage 1." in text

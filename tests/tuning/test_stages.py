@@ -307,7 +307,7 @@ def test_words_for_the_person() -> None:
     assert "Write down" in FIRST
     first, last = staged.stages[0], staged.stages[-1]
     assert f"{100 * first.swing.visible_swing:.0f} %" in first.expect
-    assert "put the settings before back" in first.stop
+    assert "put the earlier settings back" in first.stop
     assert "no swing" in last.expect
     assert last.swing.visible_swing < 0.005
 
