@@ -237,6 +237,10 @@ def _explored(
             [_log_density(coordinates, m, f) for m, f in zip(means, factors, strict=True)], axis=0
         )
         weights = logs - density + math.log(len(means))
+        if not np.isfinite(weights).any():  # the curvature promised far more room than there is: look nearer
+            means.append(centre[free])
+            factors.append(0.3 * factors[-1])
+            continue
         share = _normalised(weights)
         if 1.0 / float(share @ share) >= wanted and len(means) > 1:
             break
@@ -246,6 +250,8 @@ def _explored(
     points = np.repeat(centre[None], coordinates.shape[0], axis=0)
     points[:, free] = coordinates
     kept = np.isfinite(weights)
+    if not kept.any():
+        return centre[None], np.zeros(1)
     # those outside the bounds count in the mean
     return points[kept], weights[kept] + math.log(kept.sum() / kept.size)
 

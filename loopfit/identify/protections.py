@@ -28,7 +28,7 @@ from loopfit.loop.simulate import simulate
 from loopfit.record.record import Record
 
 HELD_BACK = 1.3  # maximum sensitivity that a plant may be designed for whose fast part was not recorded
-_FEWEST_ROWS = 60
+_FEWEST_ROWS, _MOST_ROWS = 60, 5_000
 _REST_SHARE = 0.3  # of the rows at one setpoint, at their end: those that tell the level
 _REST_ROWS = 8
 _PARTS = 4
@@ -55,24 +55,40 @@ def protected(found: Identified) -> Identified:
         )
         finding = Finding(code="held_back", severity="note", text=text)
         return replace(found, most_sensitivity=HELD_BACK, findings=(*found.findings, finding))
+    if found.how == "open step" and found.refused is None:
+        return _with_resonance(found)
     if found.how != "output to measurement" or found.refused is not None or record is None or record.output is None:
         return found
     if record.time.size < _FEWEST_ROWS or even_grid(record.time) is None:
         return found
     time, output, measurement = record.time, record.output.values, record.measurement.values
     left = left_over(found.plant, record)
-    resonant = resonance_of(time, output, measurement, found.plant, left)
-    if resonant is not None:
-        text = (
-            "The record shows a resonance beside the plant's lag, as of two masses on a shaft: the settings are designed for it, "
-            "on the fitted plant alone, and the attainable damping is lower."
-        )
-        finding = Finding(code="resonance", severity="warning", text=text)
-        return replace(found, plant=resonant, draws=(), fresh=(), findings=(*found.findings, finding))
+    resonant = _with_resonance(found)
+    if resonant is not found:
+        return resonant
     motion = lost_motion_of(time, output, measurement, found.plant, left)
     if motion.refused and motion.text is not None:
         return replace(found, refused=motion.text)
     return replace(found, disc=disc_of(time, output, left))
+
+
+def _with_resonance(found: Identified) -> Identified:
+    """Return the plant with the resonance that its record shows; as it is, where it shows none."""
+    record = found.record
+    if record is None or record.output is None or not _FEWEST_ROWS <= record.time.size <= _MOST_ROWS:
+        return found
+    if even_grid(record.time) is None or found.plant.rational is not None:
+        return found
+    left = left_over(found.plant, record)
+    plant = resonance_of(record.time, record.output.values, record.measurement.values, found.plant, left)
+    if plant is None:
+        return found
+    text = (
+        "The record shows a resonance beside the plant's lag, as of two masses on a shaft: the settings are designed for it, "
+        "on the fitted plant alone, and the attainable damping is lower."
+    )
+    finding = Finding(code="resonance", severity="warning", text=text)
+    return replace(found, plant=plant, draws=(), fresh=(), findings=(*found.findings, finding))
 
 
 def left_over(plant: Plant, record: Record) -> Array:

@@ -31,6 +31,7 @@ class Goal:
     `confidence`: the probability with which the true loop is to meet the goal; None for the fitted plant alone.
     `series`: only settings that exist in series form. `disc`: (2, n) frequency, rad/s, and how far the plant may be from its
     model there, in its own unit: the loop keeps its distance for every plant in it.
+    `margin`: visible damping beyond the criterion that a search asks for, since no draw holds the whole error of the model.
     """
 
     damping_ratio: float = CRITICAL
@@ -45,6 +46,7 @@ class Goal:
     confidence: float | None = 0.9
     series: bool = False
     disc: Array | None = None
+    margin: float = 0.0
 
     def __post_init__(self) -> None:
         if not 0.0 < self.damping_ratio <= 1.0:
@@ -106,8 +108,8 @@ class Goal:
         """Visible damping that meets the criterion."""
         if self.damping_ratio == CRITICAL:
             turn = -math.log(_SWING_AT_CRITICAL)
-            return turn / math.hypot(math.pi, turn)
-        return self.damping_ratio - _VISIBLE_SHORT
+            return turn / math.hypot(math.pi, turn) + self.margin
+        return self.damping_ratio - _VISIBLE_SHORT + self.margin
 
     def met_by(self, swing: Swing) -> bool:
         """Tell whether a loop's swing meets the criterion of the damping."""

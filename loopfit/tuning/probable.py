@@ -27,6 +27,7 @@ _BEYOND = 0.4  # of the share that may fail, demanded of the draws: 94 % for 90 
 _APART = 0.985  # worth of the next setting that is tried
 _ROUNDS = 3
 _AS_GOOD = 0.95
+_MARGIN = 0.03
 _LESS = (0.99, 0.95, 0.9, 0.8, 0.65, 0.5)
 
 
@@ -103,9 +104,10 @@ def probable(
         whole = probable(plant, goal, draws, fresh, present=present, scan_s=scan_s, late=late, coupled=coupled, also=also,
                          disc=disc, plainer=True)  # fmt: skip
         made = whole.designed.gains
-        if made is None or made.kp == 0.0 or abs(made.kd / made.kp) >= made.filter_s:
+        idle = made is None or made.kp == 0.0 or abs(made.kd / made.kp) < made.filter_s
+        if whole.designed.met and not idle:
             return whole
-        # a derivative shorter than its own filter does nothing: without it, unless that costs
+        # a derivative shorter than its own filter does nothing, and the larger search can miss what the smaller finds
         bare = probable(plant, replace(goal, terms="PI"), draws, fresh, present=present, scan_s=scan_s, late=late,
                         coupled=coupled, also=also, disc=disc)  # fmt: skip
         as_good = (bare.designed.met, bare.designed.worth) >= (whole.designed.met, _AS_GOOD * whole.designed.worth)
@@ -164,7 +166,7 @@ def _certain(
     tried = Draws(draws, search.scan_s, late=search.late, also=search.also)
     demanded = 1.0 - _BEYOND * (1.0 - goal.confidence) - 0.02 * (1.0 - goal.confidence) / 0.1
     for _ in range(_ROUNDS):
-        row = _first_on_draws(search, goal, tried, demanded)
+        row = _first_on_draws(search, replace(goal, margin=_MARGIN), tried, demanded)
         if row is None:
             return None
         gains = search.gains_of(row)

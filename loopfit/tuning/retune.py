@@ -20,6 +20,7 @@ from loopfit.tuning.cautions import cautions
 from loopfit.tuning.entered import entered
 from loopfit.tuning.forecast import forecast, step_figures
 from loopfit.tuning.goal import Goal, Terms
+from loopfit.tuning.present import better_damped, capped_goal, keep_them, raise_held
 from loopfit.tuning.probable import Draws, Probable, probable
 from loopfit.tuning.remarks import remarks
 from loopfit.tuning.result import Move, Retuning, Side
@@ -147,6 +148,7 @@ def retune_identified(
     if identified.most_sensitivity is not None:
         goal = replace(goal, max_sensitivity=min(goal.max_sensitivity, identified.most_sensitivity))
     present = None if settings is None else settings.gains
+    goal, capped = capped_goal(goal, identified, present)
     findings = list(identified.findings)
     if present is not None and present.kp * plant.gain < 0:
         raise UsageError(
@@ -194,6 +196,11 @@ def retune_identified(
         share = Draws(identified.fresh, scan, late=False, also=also).share(keyed, goal)
     proposed = side(shown, keyed, share)
     met = _met(found, proposed, goal)
+    if not met and current is not None and better_damped(current, proposed):
+        return Retuning(identified=identified, goal=goal, met=False, current=current, proposed=None, moves=(), cautions=(),
+                        findings=tuple(findings), band_percent=100.0 * band,
+                        obstacle=keep_them(current, proposed, designed.obstacle), typed=typed)  # fmt: skip
+    findings += raise_held(keyed, present, capped=capped)
     findings += remarks(identified, goal, current, proposed, found, scan_s=scan, limits=limits or {})
     steps = way(plant, present, keyed, settings, digits, scan_s=scan, draws=seen)
     moves = tuple(Move(side=side(*step.keyed, None, quick=True), text=step.text) for step in steps.steps)

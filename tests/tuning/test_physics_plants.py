@@ -209,7 +209,7 @@ _HIDDEN = pytest.mark.xfail(strict=True, reason="the resonance is not found in t
     [
         ("closed", "ringing"),
         pytest.param("closed", "sluggish", marks=_HIDDEN),
-        pytest.param("open", "sluggish", marks=_HIDDEN),
+        ("open", "sluggish"),
     ],
 )
 def test_two_masses_on_a_shaft(kind: str, start: str) -> None:
