@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, fields
 from typing import TYPE_CHECKING, Any
 
@@ -11,6 +12,7 @@ from loopfit.core.quantity import Quantity
 from loopfit.core.version import VERSION
 from loopfit.identify.identified import Identified
 from loopfit.loop.gains import Gains
+from loopfit.loop.plant import Plant
 from loopfit.loop.settings import Settings
 from loopfit.tuning.goal import Goal
 
@@ -92,18 +94,19 @@ class Retuning:
     def to_dict(self) -> dict[str, Any]:
         """Return the document as plain data; open bounds as None."""
         plant = self.identified.plant
-        analysis = self.identified.analysis
+        record = self.identified.record
+        damping, frequency = _second_order(plant)
         return {
             "document": "loopfit retune",
             "version": 1,
             "loopfit": VERSION,
-            "record": None if analysis is None else analysis.record.source,
+            "record": None if record is None else record.source,
             "plant": {
-                "kind": "integrating" if plant.integrating else "rational" if plant.rational is not None else "lags",
+                "kind": _kind(plant),
                 "found_from": self.identified.how,
                 "gain": plant.gain,
-                "damping_ratio": plant.damping_ratio,
-                "natural_frequency_rad_s": plant.natural_frequency_rad_s,
+                "damping_ratio": damping,
+                "natural_frequency_rad_s": frequency,
                 "dead_time_s": plant.dead_time_s,
                 "time_constants_s": None if plant.time_constants_s is None else list(plant.time_constants_s),
                 "zero_s": plant.zero_s,
@@ -160,3 +163,22 @@ def _ideal(gains: Gains) -> dict[str, Any]:
         "derivative_filter_s": gains.filter_s if gains.kd else None,
         "setpoint_weight": gains.setpoint_weight,
     }
+
+
+def _kind(plant: Plant) -> str:
+    """Return the kind of a plant in the words of an analysis; "rational" for any other."""
+    if plant.integrating:
+        return "integrating"
+    order = len(plant.denominator) - 1
+    if plant.zero_s or order > 2:
+        return "second_order_zero" if order == 2 else "rational"
+    return ("dead_time", "first_order", "second_order")[order]
+
+
+def _second_order(plant: Plant) -> tuple[float | None, float | None]:
+    """Return damping ratio and natural frequency, rad/s, of a plant of second order; None for another."""
+    if plant.integrating or len(plant.denominator) != 3:
+        return None, None
+    a2, a1, a0 = plant.denominator
+    frequency = math.sqrt(a0 / a2)
+    return a1 / (2.0 * math.sqrt(a2 * a0)), frequency

@@ -24,6 +24,7 @@ from loopfit.tuning.present import better_damped, capped_goal, keep_them, raise_
 from loopfit.tuning.probable import Draws, Probable, probable
 from loopfit.tuning.remarks import remarks
 from loopfit.tuning.result import Move, Retuning, Side
+from loopfit.tuning.rules import compared
 from loopfit.tuning.search import Also
 from loopfit.tuning.typed_settings import about_typed, refusal_of, typed_of
 from loopfit.tuning.way import way
@@ -31,6 +32,14 @@ from loopfit.tuning.way import way
 _DAMPING_WITH_SETTLING = 0.7
 _WEIGHT_OVERSHOOT = 1.0  # percent: what a setpoint weight is chosen for
 _BISECTIONS = 7
+_RULES = {
+    "simc_pi": "Skogestad PI (2003)",
+    "simc_pid": "Skogestad PID (2003)",
+    "lambda_pi": "lambda PI (1986)",
+    "lambda_pid": "lambda PID (1986)",
+    "ultimate_pi": "Ziegler-Nichols PI",
+    "ultimate_pid": "Ziegler-Nichols PID",
+}
 
 
 def retune(
@@ -220,6 +229,9 @@ def retune_identified(
         attainable_damping_ratio=designed.attainable_damping_ratio,
         obstacle=None if met else designed.obstacle,
         typed=typed,
+        comparisons=tuple(
+            (_RULES[name], side(rule, rule.gains, None, quick=True)) for name, rule in compared(plant).items()
+        ),
     )
 
 
