@@ -9,24 +9,33 @@ from loopfit.identify.identified import Identified
 from loopfit.loop.gains import Gains
 from loopfit.tuning.goal import Goal
 from loopfit.tuning.result import Side
+from loopfit.tuning.screen import noise_scale
 
 _RAISE = 5.0
 _WORSE = 0.02  # of damping ratio
 
 
 def capped_goal(goal: Goal, identified: Identified, present: Gains | None) -> tuple[Goal, bool]:
-    """Hold a raise of the gain to fivefold where the plant comes from a record in automatic, unless a bound was given."""
+    """Hold a raise of the gain, also at high frequencies, to fivefold where the plant comes from a record in automatic.
+
+    Unless a bound of the gain was given. A derivative raised fortyfold on a fit that knew no lead ran away in the study.
+    """
     if present is None or identified.how in ("given", "open step") or "gain" in goal.at_most or present.kp == 0.0:
         return goal, False
-    return replace(goal, at_most={**goal.at_most, "gain": _RAISE * abs(present.kp)}), True
+    fast = abs(present.kp) + (abs(present.kd) / present.filter_s if present.kd else 0.0)
+    noise = min(goal.noise_gain, _RAISE * noise_scale(identified.plant) * fast)
+    return replace(goal, noise_gain=noise, at_most={**goal.at_most, "gain": _RAISE * abs(present.kp)}), True
 
 
 def raise_held(keyed: Gains, present: Gains | None, *, capped: bool) -> list[Finding]:
     """Say so where the gain was held to fivefold."""
-    if not capped or present is None or abs(keyed.kp) < 0.98 * _RAISE * abs(present.kp):
+    if not capped or present is None:
+        return []
+    fast = [abs(gains.kp) + (abs(gains.kd) / gains.filter_s if gains.kd else 0.0) for gains in (keyed, present)]
+    if abs(keyed.kp) < 0.98 * _RAISE * abs(present.kp) and fast[0] < 0.98 * _RAISE * fast[1]:
         return []
     text = (
-        f"The gain is held to {_RAISE:g} times the present one: so sluggish a loop does not show what the plant does at the pace of a "
+        f"The gain, or its high-frequency part with the derivative, is held to {_RAISE:g} times the present one: so sluggish a loop does not show what the plant does at the pace of a "
         "higher gain (a resonance, a second lag). Record again with these settings, and retune from that."
     )
     return [Finding(code="raise_capped", severity="warning", text=text)]
