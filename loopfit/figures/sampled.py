@@ -26,13 +26,14 @@ def sampled_figures(time: Array, response: Array, band: float) -> dict[str, Arra
     return {
         "overshoot_percent": 100.0 * over,
         "peak_time_s": np.where(over > 1e-6, time[top], np.nan),
-        "rise_time_s": _first(time, response, 0.9) - _first(time, response, 0.1),
-        "delay_time_s": _first(time, response, 0.5),
-        "settling_time_s": _last_entry(time, response, band),
+        "rise_time_s": first_crossing(time, response, 0.9) - first_crossing(time, response, 0.1),
+        "delay_time_s": first_crossing(time, response, 0.5),
+        "settling_time_s": last_entry(time, response, band)[0],
     }
 
 
-def _first(time: Array, response: Array, level: float) -> Array:
+def first_crossing(time: Array, response: Array, level: float) -> Array:
+    """Return when each response (B, m) first reaches a level (B,); nan where it does not."""
     above = response >= level
     k = np.maximum(np.argmax(above, axis=1), 1)
     rows = np.arange(response.shape[0])
@@ -41,7 +42,8 @@ def _first(time: Array, response: Array, level: float) -> Array:
     return np.where(above.any(axis=1), time[k - 1] + np.clip(share, 0.0, 1.0) * (time[k] - time[k - 1]), np.nan)
 
 
-def _last_entry(time: Array, response: Array, band: float) -> Array:
+def last_entry(time: Array, response: Array, band: float) -> tuple[Array, Array]:
+    """Return the last entry into the band (B,), and the edge crossed: 1 above, -1 below, 0 where there is none."""
     away = np.abs(response - 1.0)
     outside = away > band
     k = response.shape[1] - 1 - np.argmax(outside[:, ::-1], axis=1)  # the last sample outside
@@ -50,5 +52,6 @@ def _last_entry(time: Array, response: Array, band: float) -> Array:
     fall = away[rows, k] - away[rows, after]
     share = (away[rows, k] - band) / np.where(fall > 0, fall, 1.0)
     entry = time[k] + np.clip(share, 0.0, 1.0) * (time[after] - time[k])
-    never = outside[:, -1]
-    return np.where(never, np.inf, np.where(outside.any(axis=1), entry, 0.0))
+    never, some = outside[:, -1], outside.any(axis=1)
+    edge = np.where(some & ~never, np.sign(response[rows, k] - 1.0), 0.0)
+    return np.where(never, np.inf, np.where(some, entry, 0.0)), edge

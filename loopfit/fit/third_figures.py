@@ -9,6 +9,7 @@ from __future__ import annotations
 import numpy as np
 
 from loopfit.core.arrays import Array
+from loopfit.figures.sampled import first_crossing, last_entry
 from loopfit.fit.third_lag import third_order
 from loopfit.model.chart import LAGS
 
@@ -43,8 +44,8 @@ def third_figures(
     scale = LAGS.scale(theta)
     y = _responses((time - theta[:, 2:3]) / scale[:, None], theta, kappa)
     rows = np.arange(y.shape[0])
-    crossing = np.stack([_first(time, y, level) for level in _LEVELS], axis=1)
-    settle, edge = _last_entry(time, y, band)
+    crossing = np.stack([first_crossing(time, y, level) for level in _LEVELS], axis=1)
+    settle, edge = last_entry(time, y, band)
     top = np.clip(np.argmax(y, axis=1), 1, time.size - 2)
     before, at, after = y[rows, top - 1], y[rows, top], y[rows, top + 1]
     left, right = time[top] - time[top - 1], time[top + 1] - time[top]
@@ -132,27 +133,3 @@ def _vertex(left_slope: Array, right_slope: Array, left: Array, right: Array) ->
     curve = (left_slope + right_slope) / (left + right)
     tilt = right_slope - curve * right
     return np.clip(np.where(curve < 0, -tilt / np.where(curve < 0, 2.0 * curve, 1.0), 0.0), -left, right)
-
-
-def _first(time: Array, y: Array, level: float) -> Array:
-    above = y >= level
-    k = np.maximum(np.argmax(above, axis=1), 1)
-    rows = np.arange(y.shape[0])
-    before, after = y[rows, k - 1], y[rows, k]
-    share = (level - before) / np.where(after > before, after - before, 1.0)
-    return np.where(above.any(axis=1), time[k - 1] + np.clip(share, 0.0, 1.0) * (time[k] - time[k - 1]), np.nan)
-
-
-def _last_entry(time: Array, y: Array, band: float) -> tuple[Array, Array]:
-    """Return the last entry into the band, and the edge crossed (0 where there is none)."""
-    away = np.abs(y - 1.0)
-    outside = away > band
-    k = y.shape[1] - 1 - np.argmax(outside[:, ::-1], axis=1)
-    rows = np.arange(y.shape[0])
-    after = np.minimum(k + 1, y.shape[1] - 1)
-    fall = away[rows, k] - away[rows, after]
-    share = (away[rows, k] - band) / np.where(fall > 0, fall, 1.0)
-    entry = time[k] + np.clip(share, 0.0, 1.0) * (time[after] - time[k])
-    never, some = outside[:, -1], outside.any(axis=1)
-    edge = np.where(some & ~never, np.sign(y[rows, k] - 1.0), 0.0)
-    return np.where(never, np.inf, np.where(some, entry, 0.0)), edge

@@ -8,14 +8,13 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from loopfit.core.errors import UsageError
 from loopfit.loop.gains import Gains
 from loopfit.loop.margins import margins_of
 from loopfit.loop.plant import Plant
-from loopfit.loop.sampled import sampled_swing, scan_matters, with_scan
-from loopfit.loop.visible import swing_of
+from loopfit.loop.sampled import scan_matters, with_scan
 from loopfit.tuning.screen import lag_sum
 from loopfit.tuning.setpoint_overshoot import setpoint_overshoot
+from loopfit.tuning.swing import swing_on
 
 if TYPE_CHECKING:
     from loopfit.tuning.result import LoopFigures
@@ -139,11 +138,8 @@ def _less_gain(plant: Plant, gains: Gains, scan_s: float | None, late: bool) -> 
 
     def damping(gain: float, integral: float) -> float:
         some = replace(gains, kp=gain * gains.kp, ki=integral * gains.ki, kd=gain * gains.kd)
-        try:
-            swing = swing_of(plant, some) if scan_s is None else sampled_swing(plant, some, scan_s, late=late)
-        except UsageError:
-            return -1.0
-        return swing.visible_damping
+        swing = swing_on(plant, some, scan_s, late=late)
+        return -1.0 if swing is None else swing.visible_damping
 
     whole, half, quarter = damping(1.0, 1.0), damping(0.5, 0.5), damping(0.25, 0.25)
     if not min(half, quarter) < whole - _SHORT:

@@ -11,10 +11,10 @@ from dataclasses import dataclass, replace
 from loopfit.core.arrays import Array
 from loopfit.loop.gains import Gains
 from loopfit.loop.plant import Plant
-from loopfit.loop.sampled import sampled_swing
-from loopfit.loop.visible import Swing, swing_of
+from loopfit.loop.visible import Swing
 from loopfit.tuning.goal import Goal
 from loopfit.tuning.search import Also, Search, slower
+from loopfit.tuning.swing import swing_with
 
 _BISECTIONS = 7
 _LOWEST = 0.05
@@ -93,10 +93,7 @@ def _polished_best(search: Search, damping: float) -> Array | None:
 
 def _designed(search: Search, row: Array, *, met: bool) -> Designed:
     gains = search.gains_of(row)
-    if search.scan_s is None:
-        swing = swing_of(search.true_plant, gains)
-    else:
-        swing = sampled_swing(search.true_plant, gains, search.scan_s, late=search.late)
+    swing = swing_with(search.true_plant, gains, search.scan_s, late=search.late)
     met = met and search.goal.met_by(swing)
     return Designed(gains=gains, worth=search.worth(row), met=met, swing=swing, obstacle=None,
                     attainable_damping_ratio=search.goal.damping_ratio if met else swing.visible_damping)  # fmt: skip

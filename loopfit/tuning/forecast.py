@@ -18,9 +18,9 @@ from loopfit.loop.simulate import simulate
 from loopfit.loop.visible import Swing
 from loopfit.tuning.cautions import noise_gain
 from loopfit.tuning.family import pace_of
-from loopfit.tuning.probable import swing_on
 from loopfit.tuning.result import LoopFigures
 from loopfit.tuning.screen import lag_sum
+from loopfit.tuning.swing import swing_on
 
 _SPANS = 7.0  # time constants of the slowest root that a person sees
 _SCANS_AT_MOST = 4_000

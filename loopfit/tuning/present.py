@@ -22,8 +22,7 @@ def capped_goal(goal: Goal, identified: Identified, present: Gains | None) -> tu
     """
     if present is None or identified.how in ("given", "open step") or "gain" in goal.at_most or present.kp == 0.0:
         return goal, False
-    fast = abs(present.kp) + (abs(present.kd) / present.filter_s if present.kd else 0.0)
-    noise = min(goal.noise_gain, _RAISE * noise_scale(identified.plant) * fast)
+    noise = min(goal.noise_gain, _RAISE * noise_scale(identified.plant) * _fast(present))
     return replace(goal, noise_gain=noise, at_most={**goal.at_most, "gain": _RAISE * abs(present.kp)}), True
 
 
@@ -31,14 +30,19 @@ def raise_held(keyed: Gains, present: Gains | None, *, capped: bool) -> list[Fin
     """Say so where the gain was held to fivefold."""
     if not capped or present is None:
         return []
-    fast = [abs(gains.kp) + (abs(gains.kd) / gains.filter_s if gains.kd else 0.0) for gains in (keyed, present)]
-    if abs(keyed.kp) < 0.98 * _RAISE * abs(present.kp) and fast[0] < 0.98 * _RAISE * fast[1]:
+    held = 0.98 * _RAISE
+    if abs(keyed.kp) < held * abs(present.kp) and _fast(keyed) < held * _fast(present):
         return []
     text = (
         f"The gain, or its high-frequency part with the derivative, is held to {_RAISE:g} times the present one: so sluggish a loop does not show what the plant does at the pace of a "
         "higher gain (a resonance, a second lag). Record again with these settings, and retune from that."
     )
     return [Finding(code="raise_capped", severity="warning", text=text)]
+
+
+def _fast(gains: Gains) -> float:
+    """Return the magnitude of the gain at high frequencies, as the noise limit counts it."""
+    return abs(gains.kp) + (abs(gains.kd) / gains.filter_s if gains.kd else 0.0)
 
 
 def better_damped(current: Side, proposed: Side) -> bool:

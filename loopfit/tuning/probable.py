@@ -13,15 +13,13 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from loopfit.core.arrays import Array
-from loopfit.core.errors import UsageError
 from loopfit.identify.protections import HELD_BACK
 from loopfit.loop.gains import Gains
 from loopfit.loop.plant import Plant
-from loopfit.loop.sampled import sampled_swing
-from loopfit.loop.visible import Swing, swing_of
 from loopfit.tuning.design import Designed, design
 from loopfit.tuning.goal import Goal
 from loopfit.tuning.search import Also, Search
+from loopfit.tuning.swing import swing_on
 
 _BEYOND = 0.4  # of the share that may fail, demanded of the draws: 94 % for 90 %
 _APART = 0.985  # worth of the next setting that is tried
@@ -68,16 +66,6 @@ class Draws:
             if failed > allowed:
                 return 0.0
         return 1.0 - failed / len(self.plants)
-
-
-def swing_on(plant: Plant, gains: Gains, scan_s: float | None, *, late: bool) -> Swing | None:
-    """Return how the loop swings, with its scan interval where there is one; None where the loop has no meaning."""
-    try:
-        if scan_s is None:
-            return swing_of(plant, gains)
-        return sampled_swing(plant, gains, scan_s, late=late)
-    except UsageError:
-        return None
 
 
 def probable(

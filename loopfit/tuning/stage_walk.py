@@ -14,10 +14,11 @@ from loopfit.loop.certificate import count_right_of
 from loopfit.loop.gains import Gains
 from loopfit.loop.plant import Plant
 from loopfit.loop.roots import characteristic
-from loopfit.loop.sampled import sampled_swing, with_scan
-from loopfit.loop.visible import Swing, swing_of
+from loopfit.loop.sampled import with_scan
+from loopfit.loop.visible import Swing
 from loopfit.tuning.stage_paths import Path, by_times, geometric, needed, straight
 from loopfit.tuning.stage_proof import proven_between
+from loopfit.tuning.swing import swing_on
 
 DIP = 0.02  # in the design damping; less is not worth a sentence
 _LEVELS = 5  # steps of the lattice in each gain
@@ -57,13 +58,7 @@ class Ground:
 
     def swing(self, gains: Gains, plant: Plant | None = None) -> Swing | None:
         """Return the swing; None where the loop has no meaning."""
-        plant = self.plant if plant is None else plant
-        try:
-            if self.scan_s is None:
-                return swing_of(plant, gains)
-            return sampled_swing(plant, gains, self.scan_s, late=self.late)
-        except UsageError:
-            return None
+        return swing_on(self.plant if plant is None else plant, gains, self.scan_s, late=self.late)
 
     def stand_in(self, gains: Gains, plant: Plant | None = None) -> tuple[Plant, Gains]:
         """Return the continuous loop that stands in for a sampled one."""
