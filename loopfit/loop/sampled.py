@@ -12,7 +12,8 @@ from loopfit.loop.certificate import certified_roots
 from loopfit.loop.gains import Gains
 from loopfit.loop.plant import Plant
 from loopfit.loop.roots import Array, Complex, characteristic, first_roots
-from loopfit.loop.visible import Swing, course_of, exponential, swing_from_modes, unstable_swing
+from loopfit.loop.state_space import exponential
+from loopfit.loop.visible import Swing, course_of, swing_from_modes, unstable_swing
 
 _NOTICEABLE = 0.05  # scan interval over dead time + lag
 _LARGE = 0.1  # from here on some loops were unstable that were designed without regard to the scan

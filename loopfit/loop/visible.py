@@ -16,6 +16,7 @@ from loopfit.loop.certificate import CertifiedRoots, certified_roots
 from loopfit.loop.gains import Gains
 from loopfit.loop.plant import Plant
 from loopfit.loop.roots import Array, Characteristic, Complex, all_found, characteristic
+from loopfit.loop.state_space import exponential
 
 _FULL_WEIGHT = 0.1  # share of the peak from which a mode's damping counts in full for a design
 _NEAR_MULTIPLE = 1e-4  # |p df/dp| over the size of f, below which residues of neighbours cancel beyond their digits
@@ -195,16 +196,3 @@ def course_of(step: Array, start: Array, row: Array, count: int) -> Array:
         states = np.hstack((states, step @ states))
         step = step @ step
     return np.asarray(row @ states[:, :count])
-
-
-def exponential(matrix: Array) -> Array:
-    """Return the matrix exponential by a Taylor series of order 9 on the matrix halved until its norm is under 1/8."""
-    halvings = max(0, math.ceil(math.log2(max(float(np.abs(matrix).sum(axis=1).max()), 1e-300))) + 3)
-    matrix = matrix / 2.0**halvings
-    eye = np.eye(len(matrix))
-    out = eye
-    for k in range(9, 0, -1):
-        out = eye + matrix @ out / k
-    for _ in range(halvings):
-        out = out @ out
-    return out
