@@ -145,15 +145,6 @@ def _compared(retuning: Retuning) -> str:
     rows.append(
         filled("Load figures: for a load of one output unit. Largest output change: for a setpoint step of one unit.")
     )
-    if (
-        retuning.nominal is not None
-        and retuning.proposed is not None
-        and retuning.nominal.gains != retuning.proposed.gains
-    ):
-        share = retuning.nominal.probability_of_target
-        chance = "" if share is None else f"; it meets the target with a probability of {share_words(share)} only"
-        line = entry_line(retuning.nominal.settings, gain_unit(retuning))
-        rows.append(filled(f"Without reserve for what the record leaves open, the design would be {line}{chance}."))
     return "\n".join(rows)
 
 

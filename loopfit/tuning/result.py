@@ -88,7 +88,6 @@ class Retuning:
     obstacle: str | None = None
     refused: str | None = None
     typed: TypedCheck | None = None
-    nominal: Side | None = None
     comparisons: tuple[tuple[str, Side], ...] = ()
 
     def to_dict(self) -> dict[str, Any]:
